@@ -1,0 +1,1 @@
+"""Which cells a parcel owns and how to summarise them."""
