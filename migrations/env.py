@@ -1,0 +1,11 @@
+"""Runs migrations on the connection that the service hands over."""
+
+from alembic import context
+
+from service.store.tables import Base
+
+connection = context.config.attributes["connection"]
+context.configure(
+    connection=connection, target_metadata=Base.metadata, transaction_per_migration=False
+)
+context.run_migrations()

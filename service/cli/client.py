@@ -1,0 +1,77 @@
+"""What the client commands share: calls of the HTTP API, and its problems as our errors."""
+
+from collections.abc import Mapping
+from http import HTTPStatus
+from typing import Any, Final
+
+import httpx
+
+from service.errors import (
+    Conflict,
+    FurrowlightError,
+    NotAllowed,
+    NotFound,
+    RejectedInput,
+    Unavailable,
+)
+
+CALL_SECONDS: Final = 60.0
+
+_KINDS: Final[Mapping[int, type[FurrowlightError]]] = {
+    HTTPStatus.UNAUTHORIZED: NotAllowed,
+    HTTPStatus.FORBIDDEN: NotAllowed,
+    HTTPStatus.NOT_FOUND: NotFound,
+    HTTPStatus.CONFLICT: Conflict,
+    HTTPStatus.PRECONDITION_FAILED: Conflict,
+    HTTPStatus.TOO_MANY_REQUESTS: Unavailable,
+    HTTPStatus.SERVICE_UNAVAILABLE: Unavailable,
+}
+
+
+def connect(address: str, *, key: str) -> httpx.Client:
+    """Return a client of the service at an address; no proxy of the environment is used."""
+    return httpx.Client(
+        base_url=address,
+        headers={"Authorization": f"Bearer {key}"},
+        timeout=CALL_SECONDS,
+        trust_env=False,
+    )
+
+
+def call(client: httpx.Client, method: str, path: str, **request: Any) -> dict[str, Any]:
+    """Send one request and return the JSON object of its answer.
+
+    Raises
+    ------
+    FurrowlightError
+        The service answered with a problem, or could not be reached (`Unavailable`).
+    """
+    try:
+        response = client.request(method, path, **request)
+    except httpx.TransportError as error:
+        raise Unavailable(
+            "unreachable", "The service can't be reached. Is it running, and is the address right?"
+        ) from error
+    if response.is_error:
+        raise _error_of(response)
+    answer: dict[str, Any] = response.json()
+    return answer
+
+
+def _error_of(response: httpx.Response) -> Exception:
+    """Return the error that a problem document stands for."""
+    if response.status_code >= HTTPStatus.INTERNAL_SERVER_ERROR and (
+        response.status_code not in _KINDS
+    ):
+        return RuntimeError(f"the service failed with status {response.status_code}")
+    kind = _KINDS.get(response.status_code, RejectedInput)
+    problem = _problem_of(response)
+    code = problem.get("type", "").rsplit("/", 1)[-1] or "problem"
+    return kind(code, problem.get("detail") or f"The service said {response.status_code}.")
+
+
+def _problem_of(response: httpx.Response) -> dict[str, str]:
+    """Return the text members of a problem document; none of any other answer."""
+    if "problem+json" not in response.headers.get("Content-Type", ""):
+        return {}
+    return {name: text for name, text in response.json().items() if isinstance(text, str)}

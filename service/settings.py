@@ -1,0 +1,81 @@
+"""What an operator can set, by environment variables named ``FURROWLIGHT_…``."""
+
+from pathlib import Path
+from typing import Annotated
+
+from pydantic import Field, field_validator
+from pydantic_settings import BaseSettings, NoDecode, SettingsConfigDict
+
+GIBIBYTE = 1024**3
+
+
+class Settings(BaseSettings):
+    """Settings of one deployment; `furrowlight serve` options override the first three.
+
+    Attributes are read from the environment by name (``FURROWLIGHT_DATA``); each default
+    suits one machine with SQLite.
+    """
+
+    model_config = SettingsConfigDict(env_prefix="FURROWLIGHT_", extra="ignore", frozen=True)
+
+    data: Path = Field(
+        default=Path("furrowlight-data"),
+        description="Data folder: archive of scene files and, on SQLite, the databases.",
+    )
+    database_url: str = Field(
+        default="",
+        description="SQLAlchemy URL of a PostgreSQL database (postgresql+psycopg://…); "
+        "empty means SQLite in the data folder.",
+    )
+    allowed_origins: Annotated[tuple[str, ...], NoDecode] = Field(
+        default=(),
+        description="Origins that may call the API from a browser, comma-separated; none by "
+        "default.",
+    )
+    disk_reserve_bytes: int = Field(
+        default=GIBIBYTE,
+        ge=0,
+        description="Free space to leave on the data folder's disk; uploads get 503 below it.",
+    )
+    archive_limit_bytes: int = Field(
+        default=0,
+        ge=0,
+        description="Largest size of the scene archive; uploads get 503 above it. 0: no limit.",
+    )
+    scene_upload_limit_bytes: int = Field(
+        default=2 * GIBIBYTE, gt=0, description="Largest upload of one scene."
+    )
+    parcel_area_limit_ha: float = Field(
+        default=100_000.0, gt=0, description="Largest area of one parcel, in hectares."
+    )
+    season_start_north: str = Field(
+        default="10-01",
+        pattern=r"^(0[1-9]|1[0-2])-(0[1-9]|1\d|2[0-8])$",
+        description="First day of the crop year (MM-DD) for parcels north of the equator.",
+    )
+    season_start_south: str = Field(
+        default="04-01",
+        pattern=r"^(0[1-9]|1[0-2])-(0[1-9]|1\d|2[0-8])$",
+        description="First day of the crop year (MM-DD) for parcels south of the equator.",
+    )
+    queue_polling_seconds: float = Field(
+        default=0.5, ge=0.02, le=60, description="How often the worker looks for work."
+    )
+    log_level: str = Field(default="info", pattern="^(debug|info|warning|error)$")
+
+    @field_validator("allowed_origins", mode="before")
+    @classmethod
+    def _split_origins(cls, value: object) -> object:
+        if isinstance(value, str):
+            return tuple(part.strip() for part in value.split(",") if part.strip())
+        return value
+
+    @property
+    def app_url(self) -> str:
+        """URL of the service's own database."""
+        return self.database_url or f"sqlite:///{self.data / 'app.sqlite'}"
+
+    @property
+    def engine_url(self) -> str:
+        """URL of the queue's database: a second SQLite file, or the same PostgreSQL."""
+        return self.database_url or f"sqlite:///{self.data / 'engine.sqlite'}"

@@ -1,0 +1,393 @@
+"""Reading a scene's numbers in blocks on one grid, in bounded memory.
+
+All bands are brought to the finest of their grids. A band on another grid is taken at
+the centre of each cell of that grid, nearest only, whether or not the grids nest: no
+number leaves here that is not in a file. Scaling is left to the reader of the blocks.
+"""
+
+import math
+from collections.abc import Iterable, Iterator
+from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any, Final, Literal
+
+import numpy as np
+import rioxarray  # noqa: F401  registers `.rio`
+import xarray as xr
+from affine import Affine
+from numpy.typing import DTypeLike, NDArray
+from rasterio.errors import RasterioError
+from rasterio.windows import Window
+
+from service.errors import RejectedInput
+from service.spectral.roles import BandRole
+from service.spectral.scaling import Scaling
+from service.tiles.intake import Header, check_together, inspect, open_raster
+from service.zonal.grid import Grid
+
+STRIP_BYTES: Final = 64 * 2**20
+"""Memory of one block, all bands together."""
+
+# Half of the raster library's cache (`environment`): a row of blocks that is read must
+# fit into it, because the library walks a window line by line.
+_PIECE_BYTES: Final = 32 * 2**20
+
+Numbers = NDArray[Any]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BandSource:
+    """Where the numbers of one band or of the quality layer are.
+
+    Attributes
+    ----------
+    role
+        What the band measures, or ``quality``.
+    path
+        The file, in the archive.
+    scaling
+        How numbers become reflectance; None for the quality layer only.
+    band
+        Its place in the file, from 1.
+    nodata
+        The number that stands for "no data".
+    saturated
+        The number that stands for "saturated".
+    part
+        JSON pointer of the part that the file came in; by default that of the role.
+    """
+
+    role: BandRole | Literal["quality"]
+    path: Path
+    scaling: Scaling | None
+    band: int = 1
+    nodata: float | None = None
+    saturated: float | None = None
+    part: str | None = None
+
+    @property
+    def pointer(self) -> str:
+        """JSON pointer for faults of this file."""
+        return self.part or f"/{self.role}"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SceneSource:
+    """Where the numbers of one scene are.
+
+    Attributes
+    ----------
+    bands
+        At least one; each has a scaling.
+    quality
+        The quality layer, if the scene has one; it has a nodata class, which stands for
+        what lies outside the layer.
+    """
+
+    bands: tuple[BandSource, ...]
+    quality: BandSource | None = None
+
+    def __post_init__(self) -> None:
+        if not self.bands or any(band.scaling is None for band in self.bands):
+            raise ValueError("a scene needs bands, each with its scaling")
+        if self.quality is not None and self.quality.nodata is None:
+            raise ValueError("a quality layer needs a nodata class")
+
+    @property
+    def layers(self) -> tuple[BandSource, ...]:
+        """Bands and quality layer, in this order."""
+        return self.bands if self.quality is None else (*self.bands, self.quality)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Area:
+    """Rows and columns of the measuring grid, half-open."""
+
+    row0: int
+    row1: int
+    col0: int
+    col1: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _File:
+    """One open file and the layers that are read from it, together."""
+
+    dataset: Any
+    header: Header
+    layers: tuple[BandSource, ...]
+
+    @property
+    def pointer(self) -> str:
+        return self.layers[0].pointer
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Scene:
+    """A scene's open files and the grid that its cells are counted on."""
+
+    files: tuple[_File, ...]
+    grid: Grid
+
+
+def measuring_grid(source: SceneSource) -> Grid:
+    """Return the finest of the bands' grids, the first of equally fine ones."""
+    return _finest([inspect(band.path, pointer=band.pointer).grid for band in source.bands])
+
+
+def read_blocks(source: SceneSource, cells: NDArray[np.int64]) -> Iterator[xr.Dataset]:
+    """Yield the parts of a scene that hold the wanted cells.
+
+    Parameters
+    ----------
+    source
+        The scene's files.
+    cells
+        Flat row-major indices on the measuring grid, ascending and unique, shape (n,).
+
+    Yields
+    ------
+    xr.Dataset
+        A rectangle of the measuring grid with dimensions (y, x), cell centres as
+        coordinates in metres and attributes ``row0``, ``col0`` (its first row and column
+        on the grid) and ``grid_cols``. One variable for each band role, and ``quality``:
+        the file's numbers in its type, with attributes ``scale``, ``offset``, ``nodata``,
+        ``saturated``. Where a band has no cell stands its nodata number; a band without
+        one comes as float with NaN. Rectangles do not overlap, each takes at most about
+        `STRIP_BYTES`, and together they hold every wanted cell once.
+
+    Raises
+    ------
+    RejectedInput
+        As `inspect` and `check_together` do, and with code ``unreadable-pixels`` for
+        pixels that can't be decoded.
+    """
+    with _opened(source) as scene:
+        for area in _areas(scene, cells):
+            yield _read_area(scene, area)
+
+
+def read_tile(source: SceneSource) -> xr.Dataset:
+    """Return a whole scene as one block of `read_blocks`; it has to fit into memory."""
+    with _opened(source) as scene:
+        rows, cols = scene.grid.shape
+        return _read_area(scene, _Area(row0=0, row1=rows, col0=0, col1=cols))
+
+
+def _finest(grids: Iterable[Grid]) -> Grid:
+    return min(grids, key=lambda grid: grid.cell_area_m2)
+
+
+@contextmanager
+def _opened(source: SceneSource) -> Iterator[_Scene]:
+    """Open every file once, checked as at intake: it may have changed on the disk since."""
+    layers: dict[Path, list[BandSource]] = {}
+    for layer in source.layers:
+        layers.setdefault(layer.path, []).append(layer)
+    headers = {path: inspect(path, pointer=of[0].pointer) for path, of in layers.items()}
+    check_together({layers[path][0].pointer: header for path, header in headers.items()})
+    _check_bands(source, headers)
+    with ExitStack() as stack:
+        files = [
+            _File(
+                dataset=stack.enter_context(
+                    open_raster(path, header.driver, pointer=layers[path][0].pointer)
+                ),
+                header=header,
+                layers=tuple(layers[path]),
+            )
+            for path, header in headers.items()
+        ]
+        grid = _finest(headers[band.path].grid for band in source.bands)
+        yield _Scene(files=tuple(files), grid=grid)
+
+
+def _check_bands(source: SceneSource, headers: dict[Path, Header]) -> None:
+    for layer in source.layers:
+        if not 1 <= layer.band <= headers[layer.path].count:
+            raise RejectedInput.at(
+                layer.pointer,
+                "The file has fewer bands than the scene names; name one role for each band.",
+                code="band-missing",
+            )
+
+
+def _areas(scene: _Scene, cells: NDArray[np.int64]) -> Iterator[_Area]:
+    """Yield the smallest rectangle around the wanted cells of each part of the grid."""
+    rows, cols = scene.grid.shape
+    height, width = _part_shape(scene)
+    for top in range(0, rows, height):
+        edges = np.array([top * cols, min(top + height, rows) * cols], dtype=np.int64)
+        first, last = np.searchsorted(cells, edges)
+        cell_rows, cell_cols = np.divmod(cells[first:last], cols)
+        parts = cell_cols // width
+        for part in np.unique(parts):
+            inside = parts == part
+            part_cols = cell_cols[inside]
+            part_rows = cell_rows[inside]
+            yield _Area(
+                row0=int(part_rows[0]),
+                row1=int(part_rows[-1]) + 1,
+                col0=int(part_cols.min()),
+                col1=int(part_cols.max()) + 1,
+            )
+
+
+def _part_shape(scene: _Scene) -> tuple[int, int]:
+    """Return (rows, cols) of the parts that the grid is read in.
+
+    Whole blocks of the files, so that each is decoded once, and as wide as the grid if
+    memory allows. Where block sizes have no small common multiple, those of the files on
+    the measuring grid count and others are decoded up to twice; memory comes first.
+    """
+    rows, cols = scene.grid.shape
+    cell_bytes = sum(
+        _dtype_of(file, layer, scene.grid).itemsize for file in scene.files for layer in file.layers
+    )
+    limit = max(1, STRIP_BYTES // cell_bytes)
+    files = [(file, _block_in_cells(file.header, scene.grid)) for file in scene.files]
+    nested = [shape for _, shape in files if shape is not None]
+    own = [file.header.block_shape for file, _ in files if file.header.grid == scene.grid]
+    height, width = _common_shape(nested, scene.grid)
+    if height * width > limit:
+        height, width = _common_shape([max(own)], scene.grid)
+    if height * cols <= limit:
+        return min(height * (limit // (height * cols)), rows), cols
+    if height * width <= limit:
+        return height, width * (limit // (height * width))
+    return max(1, limit // width), min(width, limit)
+
+
+def _common_shape(shapes: Iterable[tuple[int, int]], grid: Grid) -> tuple[int, int]:
+    heights, widths = zip(*shapes, strict=True)
+    return min(math.lcm(*heights), grid.shape[0]), min(math.lcm(*widths), grid.shape[1])
+
+
+def _block_in_cells(header: Header, grid: Grid) -> tuple[int, int] | None:
+    """Return a file's block shape in cells of the grid, or None if the grids do not nest."""
+    ours, theirs = grid.transform, header.grid.transform
+    down, across = theirs.e / ours.e, theirs.a / ours.a
+    same_corner = (ours.c, ours.f) == (theirs.c, theirs.f)
+    if not (same_corner and down.is_integer() and across.is_integer() and down >= 1 <= across):
+        return None
+    return header.block_shape[0] * int(down), header.block_shape[1] * int(across)
+
+
+def _read_area(scene: _Scene, area: _Area) -> xr.Dataset:
+    variables = {}
+    for file in scene.files:
+        numbers = _numbers(file, scene.grid, area)
+        for layer in file.layers:
+            variables[str(layer.role)] = (("y", "x"), numbers.pop(0), _attributes(layer))
+    block = xr.Dataset(
+        variables,
+        coords={
+            "y": scene.grid.centre_ys(area.row0, area.row1),
+            "x": scene.grid.centre_xs(area.col0, area.col1),
+        },
+        attrs={"row0": area.row0, "col0": area.col0, "grid_cols": scene.grid.shape[1]},
+    )
+    # In place, because these copy all numbers otherwise.
+    block.rio.write_crs(scene.grid.crs, inplace=True)
+    corner = scene.grid.transform * Affine.translation(area.col0, area.row0)
+    block.rio.write_transform(corner, inplace=True)
+    return block
+
+
+def _attributes(layer: BandSource) -> dict[str, float | None]:
+    attributes: dict[str, float | None] = {"nodata": layer.nodata, "saturated": layer.saturated}
+    if layer.scaling is not None:
+        attributes |= {"scale": layer.scaling.scale, "offset": layer.scaling.offset}
+    return attributes
+
+
+def _numbers(file: _File, grid: Grid, area: _Area) -> list[Numbers]:
+    """Return the numbers of each layer of a file on the area's cells, shape (rows, cols)."""
+    if file.header.grid == grid:
+        return list(_read(file, area))
+    theirs = file.header.grid
+    rows = theirs.rows_at(grid.centre_ys(area.row0, area.row1))
+    cols = theirs.cols_at(grid.centre_xs(area.col0, area.col1))
+    has_row = (rows >= 0) & (rows < theirs.shape[0])
+    has_col = (cols >= 0) & (cols < theirs.shape[1])
+    taken = [
+        np.full((rows.size, cols.size), _fill(dtype, layer.nodata), dtype)
+        for layer in file.layers
+        for dtype in [_dtype_of(file, layer, grid)]
+    ]
+    if has_row.any() and has_col.any():
+        rows, cols = rows[has_row], cols[has_col]
+        window = _Area(
+            row0=int(rows.min()),
+            row1=int(rows.max()) + 1,
+            col0=int(cols.min()),
+            col1=int(cols.max()) + 1,
+        )
+        nearest = np.ix_(rows - window.row0, cols - window.col0)
+        for into, found in zip(taken, _read(file, window), strict=True):
+            into[np.ix_(has_row, has_col)] = found[nearest]
+    return taken
+
+
+def _dtype_of(file: _File, layer: BandSource, grid: Grid) -> np.dtype[Any]:
+    """Return the type of a layer's numbers on the grid, the same in all blocks."""
+    dtype = np.dtype(file.header.dtypes[layer.band - 1])
+    if _fill(dtype, layer.nodata) is not None or _covers(file.header.grid, grid):
+        return dtype
+    # NaN has to fit beside every whole number of the type.
+    return np.dtype(np.float32 if dtype.itemsize <= 2 else np.float64)
+
+
+def _covers(theirs: Grid, grid: Grid) -> bool:
+    """Whether every cell centre of the grid lies in a cell of the other."""
+    rows = theirs.rows_at(grid.centre_ys(0, grid.shape[0]))
+    cols = theirs.cols_at(grid.centre_xs(0, grid.shape[1]))
+    ends = ((rows, theirs.shape[0]), (cols, theirs.shape[1]))
+    return all(bool(at.min() >= 0 and at.max() < size) for at, size in ends)
+
+
+def _fill(dtype: np.dtype[Any], nodata: float | None) -> float | int | None:
+    """Return what stands where a band has no cell; None if the type can't say it."""
+    if dtype.kind == "f":
+        # A number too large for the type is in no file of that type.
+        in_reach = nodata is not None and abs(nodata) <= np.finfo(dtype).max
+        return nodata if in_reach else math.nan
+    if nodata is None or not float(nodata).is_integer():
+        return None
+    limits = np.iinfo(dtype)
+    return int(nodata) if limits.min <= nodata <= limits.max else None
+
+
+def _read(file: _File, area: _Area) -> Numbers:
+    """Decode an area of a file's own grid, shape (layers, rows, cols)."""
+    dtypes: list[DTypeLike] = [file.header.dtypes[layer.band - 1] for layer in file.layers]
+    numbers = np.empty(
+        (len(file.layers), area.row1 - area.row0, area.col1 - area.col0), np.result_type(*dtypes)
+    )
+    indexes = [layer.band for layer in file.layers]
+    try:
+        for start, stop in _pieces(file.header, area):
+            window = Window(start, area.row0, stop - start, area.row1 - area.row0)
+            numbers[:, :, start - area.col0 : stop - area.col0] = file.dataset.read(
+                indexes, window=window
+            )
+    except RasterioError as error:
+        raise RejectedInput.at(
+            file.pointer,
+            "The pixels of this file can't be decoded, so it is damaged; send it again.",
+            code="unreadable-pixels",
+        ) from error
+    return numbers
+
+
+def _pieces(header: Header, area: _Area) -> Iterator[tuple[int, int]]:
+    """Yield (first, last) columns of runs of whole blocks that fit into the cache."""
+    height, width = header.block_shape
+    block_bytes = height * width * np.dtype(header.dtypes[0]).itemsize * header.count
+    step = width * max(1, _PIECE_BYTES // block_bytes)
+    start = area.col0
+    while start < area.col1:
+        stop = min((start // step + 1) * step, area.col1)
+        yield start, stop
+        start = stop
