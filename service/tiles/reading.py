@@ -24,6 +24,7 @@ from service.errors import RejectedInput
 from service.spectral.roles import BandRole
 from service.spectral.scaling import Scaling
 from service.tiles.intake import Header, check_together, inspect, open_raster
+from service.tiles.parts import Area, part_shape, wanted_areas
 from service.zonal.grid import Grid
 
 STRIP_BYTES: Final = 64 * 2**20
@@ -101,16 +102,6 @@ class SceneSource:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class _Area:
-    """Rows and columns of the measuring grid, half-open."""
-
-    row0: int
-    row1: int
-    col0: int
-    col1: int
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
 class _File:
     """One open file and the layers that are read from it, together."""
 
@@ -164,7 +155,14 @@ def read_blocks(source: SceneSource, cells: NDArray[np.int64]) -> Iterator[xr.Da
         pixels that can't be decoded.
     """
     with _opened(source) as scene:
-        for area in _areas(scene, cells):
+        cell_bytes = sum(
+            _dtype_of(file, layer, scene.grid).itemsize
+            for file in scene.files
+            for layer in file.layers
+        )
+        headers = [file.header for file in scene.files]
+        part = part_shape(scene.grid, headers, cells=max(1, STRIP_BYTES // cell_bytes))
+        for area in wanted_areas(scene.grid, part, cells):
             yield _read_area(scene, area)
 
 
@@ -172,7 +170,7 @@ def read_tile(source: SceneSource) -> xr.Dataset:
     """Return a whole scene as one block of `read_blocks`; it has to fit into memory."""
     with _opened(source) as scene:
         rows, cols = scene.grid.shape
-        return _read_area(scene, _Area(row0=0, row1=rows, col0=0, col1=cols))
+        return _read_area(scene, Area(row0=0, row1=rows, col0=0, col1=cols))
 
 
 def _finest(grids: Iterable[Grid]) -> Grid:
@@ -213,68 +211,7 @@ def _check_bands(source: SceneSource, headers: dict[Path, Header]) -> None:
             )
 
 
-def _areas(scene: _Scene, cells: NDArray[np.int64]) -> Iterator[_Area]:
-    """Yield the smallest rectangle around the wanted cells of each part of the grid."""
-    rows, cols = scene.grid.shape
-    height, width = _part_shape(scene)
-    for top in range(0, rows, height):
-        edges = np.array([top * cols, min(top + height, rows) * cols], dtype=np.int64)
-        first, last = np.searchsorted(cells, edges)
-        cell_rows, cell_cols = np.divmod(cells[first:last], cols)
-        parts = cell_cols // width
-        for part in np.unique(parts):
-            inside = parts == part
-            part_cols = cell_cols[inside]
-            part_rows = cell_rows[inside]
-            yield _Area(
-                row0=int(part_rows[0]),
-                row1=int(part_rows[-1]) + 1,
-                col0=int(part_cols.min()),
-                col1=int(part_cols.max()) + 1,
-            )
-
-
-def _part_shape(scene: _Scene) -> tuple[int, int]:
-    """Return (rows, cols) of the parts that the grid is read in.
-
-    Whole blocks of the files, so that each is decoded once, and as wide as the grid if
-    memory allows. Where block sizes have no small common multiple, those of the files on
-    the measuring grid count and others are decoded up to twice; memory comes first.
-    """
-    rows, cols = scene.grid.shape
-    cell_bytes = sum(
-        _dtype_of(file, layer, scene.grid).itemsize for file in scene.files for layer in file.layers
-    )
-    limit = max(1, STRIP_BYTES // cell_bytes)
-    files = [(file, _block_in_cells(file.header, scene.grid)) for file in scene.files]
-    nested = [shape for _, shape in files if shape is not None]
-    own = [file.header.block_shape for file, _ in files if file.header.grid == scene.grid]
-    height, width = _common_shape(nested, scene.grid)
-    if height * width > limit:
-        height, width = _common_shape([max(own)], scene.grid)
-    if height * cols <= limit:
-        return min(height * (limit // (height * cols)), rows), cols
-    if height * width <= limit:
-        return height, width * (limit // (height * width))
-    return max(1, limit // width), min(width, limit)
-
-
-def _common_shape(shapes: Iterable[tuple[int, int]], grid: Grid) -> tuple[int, int]:
-    heights, widths = zip(*shapes, strict=True)
-    return min(math.lcm(*heights), grid.shape[0]), min(math.lcm(*widths), grid.shape[1])
-
-
-def _block_in_cells(header: Header, grid: Grid) -> tuple[int, int] | None:
-    """Return a file's block shape in cells of the grid, or None if the grids do not nest."""
-    ours, theirs = grid.transform, header.grid.transform
-    down, across = theirs.e / ours.e, theirs.a / ours.a
-    same_corner = (ours.c, ours.f) == (theirs.c, theirs.f)
-    if not (same_corner and down.is_integer() and across.is_integer() and down >= 1 <= across):
-        return None
-    return header.block_shape[0] * int(down), header.block_shape[1] * int(across)
-
-
-def _read_area(scene: _Scene, area: _Area) -> xr.Dataset:
+def _read_area(scene: _Scene, area: Area) -> xr.Dataset:
     variables = {}
     for file in scene.files:
         numbers = _numbers(file, scene.grid, area)
@@ -290,9 +227,13 @@ def _read_area(scene: _Scene, area: _Area) -> xr.Dataset:
     )
     # In place, because these copy all numbers otherwise.
     block.rio.write_crs(scene.grid.crs, inplace=True)
-    corner = scene.grid.transform * Affine.translation(area.col0, area.row0)
-    block.rio.write_transform(corner, inplace=True)
+    block.rio.write_transform(_transform_of(scene.grid, area), inplace=True)
     return block
+
+
+def _transform_of(grid: Grid, area: Area) -> Affine:
+    of = grid.transform
+    return Affine(of.a, 0.0, of.c + area.col0 * of.a, 0.0, of.e, of.f + area.row0 * of.e)
 
 
 def _attributes(layer: BandSource) -> dict[str, float | None]:
@@ -302,7 +243,7 @@ def _attributes(layer: BandSource) -> dict[str, float | None]:
     return attributes
 
 
-def _numbers(file: _File, grid: Grid, area: _Area) -> list[Numbers]:
+def _numbers(file: _File, grid: Grid, area: Area) -> list[Numbers]:
     """Return the numbers of each layer of a file on the area's cells, shape (rows, cols)."""
     if file.header.grid == grid:
         return list(_read(file, area))
@@ -311,14 +252,10 @@ def _numbers(file: _File, grid: Grid, area: _Area) -> list[Numbers]:
     cols = theirs.cols_at(grid.centre_xs(area.col0, area.col1))
     has_row = (rows >= 0) & (rows < theirs.shape[0])
     has_col = (cols >= 0) & (cols < theirs.shape[1])
-    taken = [
-        np.full((rows.size, cols.size), _fill(dtype, layer.nodata), dtype)
-        for layer in file.layers
-        for dtype in [_dtype_of(file, layer, grid)]
-    ]
+    taken = [_empty(file, layer, grid, (rows.size, cols.size)) for layer in file.layers]
     if has_row.any() and has_col.any():
         rows, cols = rows[has_row], cols[has_col]
-        window = _Area(
+        window = Area(
             row0=int(rows.min()),
             row1=int(rows.max()) + 1,
             col0=int(cols.min()),
@@ -328,6 +265,16 @@ def _numbers(file: _File, grid: Grid, area: _Area) -> list[Numbers]:
         for into, found in zip(taken, _read(file, window), strict=True):
             into[np.ix_(has_row, has_col)] = found[nearest]
     return taken
+
+
+def _empty(file: _File, layer: BandSource, grid: Grid, shape: tuple[int, int]) -> Numbers:
+    """Return what stands where a layer has no cell."""
+    dtype = _dtype_of(file, layer, grid)
+    fill = _fill(np.dtype(file.header.dtypes[layer.band - 1]), layer.nodata)
+    if fill is None:
+        # A type of whole numbers is kept only if a cell of the file overwrites each.
+        fill = math.nan if dtype.kind == "f" else 0
+    return np.full(shape, fill, dtype)
 
 
 def _dtype_of(file: _File, layer: BandSource, grid: Grid) -> np.dtype[Any]:
@@ -351,7 +298,7 @@ def _fill(dtype: np.dtype[Any], nodata: float | None) -> float | int | None:
     """Return what stands where a band has no cell; None if the type can't say it."""
     if dtype.kind == "f":
         # A number too large for the type is in no file of that type.
-        in_reach = nodata is not None and abs(nodata) <= np.finfo(dtype).max
+        in_reach = nodata is not None and abs(nodata) <= float(np.finfo(dtype).max)
         return nodata if in_reach else math.nan
     if nodata is None or not float(nodata).is_integer():
         return None
@@ -359,7 +306,7 @@ def _fill(dtype: np.dtype[Any], nodata: float | None) -> float | int | None:
     return int(nodata) if limits.min <= nodata <= limits.max else None
 
 
-def _read(file: _File, area: _Area) -> Numbers:
+def _read(file: _File, area: Area) -> Numbers:
     """Decode an area of a file's own grid, shape (layers, rows, cols)."""
     dtypes: list[DTypeLike] = [file.header.dtypes[layer.band - 1] for layer in file.layers]
     numbers = np.empty(
@@ -381,7 +328,7 @@ def _read(file: _File, area: _Area) -> Numbers:
     return numbers
 
 
-def _pieces(header: Header, area: _Area) -> Iterator[tuple[int, int]]:
+def _pieces(header: Header, area: Area) -> Iterator[tuple[int, int]]:
     """Yield (first, last) columns of runs of whole blocks that fit into the cache."""
     height, width = header.block_shape
     block_bytes = height * width * np.dtype(header.dtypes[0]).itemsize * header.count

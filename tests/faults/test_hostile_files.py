@@ -294,9 +294,9 @@ def test_a_reference_system_not_in_metres_is_refused(tmp_path: Path, crs: str) -
 @pytest.mark.parametrize(
     "transform",
     [
-        CORNER * Affine.rotation(10),
-        CORNER * Affine.shear(1.0, 0.0),
-        CORNER * Affine.scale(-1, 1),
+        Affine(9.8, 1.7, 500_000.0, 1.7, -9.8, 5_400_000.0),
+        Affine(10.0, 0.001, 500_000.0, 0.0, -10.0, 5_400_000.0),
+        Affine(-10.0, 0.0, 500_000.0, 0.0, -10.0, 5_400_000.0),
         Affine(10.0, 0.0, 1e30, 0.0, -10.0, 1e30),
         Affine(10.0, 0.0, float("nan"), 0.0, -10.0, 0.0),
     ],

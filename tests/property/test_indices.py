@@ -46,9 +46,15 @@ def sides(index: Index) -> tuple[list[str], list[str]]:
     return re.findall(r"[a-z]\w*", first), re.findall(r"[a-z]\w*", second)
 
 
-def test_the_normalised_differences_are_found_by_their_formula() -> None:
-    others = {"evi", "evi2", "savi", "msavi"}
-    assert {index.id for index in NORMALISED} == set(INDICES) - others
+@every_index
+def test_the_indices_called_normalised_are_those_that_are_bounded_and_free_of_scale(
+    index: Index,
+) -> None:
+    random = np.random.default_rng(20260101)
+    bands = {role: random.uniform(0.02, 0.6, 100) for role in index.roles}
+    doubled = {role: 2.0 * pixels for role, pixels in bands.items()}
+    free = np.allclose(index.compute(**doubled), index.compute(**bands), rtol=1e-12, atol=0)
+    assert index.normalised == (free and index.valid_range == (-1.0, 1.0))
 
 
 @every_normalised

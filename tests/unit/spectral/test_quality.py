@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from numpy.typing import NDArray
 
 from service.spectral.quality import SCL, Loss, QualityClass, QualityLayer, QualityRule
 
@@ -58,7 +59,7 @@ def test_a_cast_shadow_is_usable_when_kept_and_lost_to_shadow_when_not() -> None
 def test_a_number_that_is_no_class_is_lost_to_nodata_and_called_unknown(
     dtype: type, stray: int
 ) -> None:
-    cells = np.array([4, stray], dtype=dtype)
+    cells: NDArray[np.integer] = np.array([4, stray], dtype=dtype)
     judged = SCL.judge(cells, SCL.rules["clear"])
     np.testing.assert_array_equal(judged.usable, [True, False])
     np.testing.assert_array_equal(judged.lost[Loss.NODATA], [False, True])

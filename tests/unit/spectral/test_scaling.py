@@ -4,13 +4,14 @@ import math
 
 import numpy as np
 import pytest
+from numpy.typing import NDArray
 
 from service.spectral.scaling import Scaling
 
 
 @pytest.mark.parametrize("dtype", [np.uint8, np.uint16, np.int16, np.int32, np.float32])
 def test_reflectance_is_in_double_precision_whatever_the_file_holds(dtype: type) -> None:
-    numbers = np.array([[0, 40], [100, 120]], dtype=dtype)
+    numbers: NDArray[np.integer] = np.array([[0, 40], [100, 120]], dtype=dtype)
     reflectance = Scaling(scale=0.01, offset=-0.1).reflectance(numbers)
     assert reflectance.dtype == np.float64
     np.testing.assert_allclose(reflectance, [[-0.1, 0.3], [0.9, 1.1]], rtol=0, atol=1e-15)

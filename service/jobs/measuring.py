@@ -1,0 +1,209 @@
+"""Measuring one scene: pixels in, observations out, nothing half-way."""
+
+import time
+from collections.abc import Iterable, Iterator
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import shapely
+import xarray as xr
+from numpy.typing import NDArray
+from sqlalchemy.orm import Session
+
+from service import __version__
+from service.clock import now
+from service.errors import RejectedInput
+from service.jobs.resources import Resources
+from service.jobs.sources import QUALITY, scene_source
+from service.observe import Observed, observe
+from service.spectral.indices import INDICES, Index
+from service.spectral.quality import QualityLayer
+from service.spectral.roles import BandRole
+from service.spectral.sensors import SENSORS
+from service.store.looks import observations_of_scene
+from service.store.observations import Measured, has_write, parcels_to_measure, record
+from service.store.reports import out_of_range, scene_counts
+from service.store.scenes import SceneState, lock_scene, retire_figures
+from service.store.tables import Scene
+from service.tiles.reading import SceneSource, measuring_grid, read_blocks
+from service.zonal.coverage import MIN_COVERAGE, project, zones_on
+from service.zonal.grid import Grid
+
+WATCHED: tuple[Index, ...] = tuple(index for index in INDICES.values() if index.watched)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Task:
+    """What there is to measure, read in one short session."""
+
+    source: SceneSource
+    parcels: list[tuple[int, int, bytes]]
+    quality: QualityLayer | None
+    rule: str
+    must_keep: frozenset[int]
+
+
+def measure_scene(work: Resources, scene_id: int, generation: int) -> bool:
+    """Measure a scene and record its observations in one transaction.
+
+    Returns False if the scene was changed, superseded or withdrawn since the work was
+    promised: nothing is recorded then. Doing it again after it succeeded changes nothing.
+
+    Raises
+    ------
+    RejectedInput
+        The pixels can't be read, or are not what the metadata says.
+    """
+    scene = _begin(work, scene_id, generation)
+    if scene is None:
+        return False
+    started = time.monotonic()
+    task = _task(work, scene)
+    if task is None:
+        return True
+    measured, observed, seconds = _measured(task)
+    with work.sessions.writing() as session:
+        row = lock_scene(session, scene_id)
+        if row.generation != generation:
+            return False
+        if not has_write(session, row, generation):
+            record(session, row, measured, at=now())
+            _supersede(session, row)
+        seconds["total"] = round(time.monotonic() - started, 3)
+        row.report = _report(list(observations_of_scene(session, scene_id)), observed, seconds)
+        row.progress = 0.9
+    return True
+
+
+def _supersede(session: Session, row: Scene) -> None:
+    """End the life of the scene that this one replaces, in the step that brings its figures."""
+    if row.supersedes_id is None:
+        return
+    replaced = lock_scene(session, row.supersedes_id)
+    if replaced.state not in (SceneState.SUPERSEDED, SceneState.WITHDRAWN):
+        retire_figures(session, replaced, SceneState.SUPERSEDED, at=now())
+
+
+def _begin(work: Resources, scene_id: int, generation: int) -> Scene | None:
+    """Say that the work is being done; return the scene unless it is another's by now."""
+    with work.sessions.writing() as session:
+        row = lock_scene(session, scene_id)
+        if row.generation != generation or row.state not in (
+            SceneState.QUEUED,
+            SceneState.RUNNING,
+        ):
+            return None
+        row.state = SceneState.RUNNING
+        row.progress = max(row.progress, 0.1)
+        row.changed_at = now()
+        session.flush()
+        _ = row.files, row.grid
+        session.expunge_all()
+        return row
+
+
+def _task(work: Resources, scene: Scene) -> _Task | None:
+    """Return what is to be measured, or None if this generation has its observations."""
+    sensor = SENSORS[scene.sensor]
+    has_quality = scene.details.get(QUALITY) != "none" and sensor.quality is not None
+    with work.sessions.reading() as session:
+        if has_write(session, scene, scene.generation):
+            return None
+        parcels = parcels_to_measure(session, scene)
+        kept = frozenset(row.parcel_id for row in observations_of_scene(session, scene.id))
+    files = {file.part: work.archive.path_of(file.digest) for file in scene.files}
+    source = scene_source(scene.sensor, scene.details, files)
+    return _Task(
+        source=source,
+        parcels=parcels,
+        quality=sensor.quality if has_quality else None,
+        rule=sensor.quality_rule if has_quality else "none",
+        must_keep=kept,
+    )
+
+
+def _measured(task: _Task) -> tuple[Measured, Observed, dict[str, float]]:
+    """Measure without any session open."""
+    started = time.monotonic()
+    grid = measuring_grid(task.source)
+    zones = zones_on(grid, [_on_grid(wkb, grid) for _, _, wkb in task.parcels])
+    zoned = time.monotonic()
+    roles = tuple(BandRole(band.role) for band in task.source.bands)
+    blocks = read_blocks(task.source, zones.distinct_cells())
+    observed = observe(
+        _checked(blocks, task.quality),
+        zones,
+        roles=roles,
+        indices=WATCHED,
+        quality=task.quality,
+        rule=task.rule,
+    )
+    read = time.monotonic()
+    # A parcel is in the footprint if it owns a cell there; one whose outline moved away
+    # since keeps a row that says so.
+    owns = np.diff(zones.indptr) > 0
+    keep = np.array(
+        [has or p in task.must_keep for has, (p, _, _) in zip(owns, task.parcels, strict=True)],
+        dtype=bool,
+    )
+    return (
+        _kept(task, observed, keep, grid),
+        observed,
+        {"zones": round(zoned - started, 3), "read_and_observe": round(read - zoned, 3)},
+    )
+
+
+def _kept(task: _Task, observed: Observed, keep: NDArray[np.bool_], grid: Grid) -> Measured:
+    kept = [parcel for parcel, wanted in zip(task.parcels, keep, strict=True) if wanted]
+    measured = [index for index in WATCHED if index.id in observed.measured]
+    return Measured(
+        parcel_ids=[parcel_id for parcel_id, _, _ in kept],
+        boundary_ids=[boundary_id for _, boundary_id, _ in kept],
+        columns=observed.columns,
+        figures=observed.figures[keep],
+        recipe={
+            "rule": task.rule,
+            "quality": task.quality.id if task.quality else None,
+            "formulas": {index.id: index.version for index in measured},
+            "min_coverage": MIN_COVERAGE,
+            "coarser_bands": "nearest, at the centre of the finer cell",
+            "cell_m2": grid.cell_area_m2,
+            "harmonisation": None,
+            "code": __version__,
+        },
+        scaling={
+            str(band.role): {"scale": band.scaling.scale, "offset": band.scaling.offset}
+            for band in task.source.bands
+            if band.scaling is not None
+        },
+    )
+
+
+def _on_grid(wkb: bytes, grid: Grid) -> Any:
+    return project(shapely.from_wkb(wkb), grid.crs)
+
+
+def _checked(blocks: Iterable[xr.Dataset], quality: QualityLayer | None) -> Iterator[xr.Dataset]:
+    """Pass the blocks on, as long as the quality layer has no class that it can't have."""
+    for block in blocks:
+        if quality is not None and quality.unknown(block[QUALITY].to_numpy()):
+            raise RejectedInput.at(
+                f"/{QUALITY}",
+                f"The quality layer holds values that are no class of {quality.id.upper()}. Send "
+                "the product's own classification, not resampled or recoded.",
+                code="wrong-quality-layer",
+            )
+        yield block
+
+
+def _report(rows: list[Any], observed: Observed, seconds: dict[str, float]) -> dict[str, Any]:
+    normalised = [i for i in observed.measured if INDICES[i].normalised]
+    leaving = out_of_range(rows, normalised)
+    indices: dict[str, dict[str, Any]] = {
+        index_id: {"state": "measured", "parcels_out_of_range": leaving.get(index_id, 0)}
+        for index_id in observed.measured
+    }
+    for index_id, reason in observed.skipped.items():
+        indices[index_id] = {"state": "skipped", "reason": reason}
+    return {**scene_counts(rows), "indices": indices, "seconds": seconds}

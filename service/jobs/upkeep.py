@@ -1,0 +1,107 @@
+"""What has to be looked after: promises without work, leftovers of crashes, old records."""
+
+import threading
+from collections.abc import Sequence
+from datetime import timedelta
+from typing import Final
+
+import structlog
+from dbos import DBOS
+
+from service.clock import now
+from service.jobs import ingest
+from service.jobs.resources import Resources
+from service.store.answers import forget_old_answers
+from service.store.scenes import SceneState, kept_digests, put_back, unfinished_scenes
+from service.store.tables import Scene
+
+SWEEP_SECONDS: Final = 60.0
+ORPHAN_SECONDS: Final = 24 * 3600.0
+"""A file without a row is left alone this long: its upload may be about to commit."""
+WORKFLOWS_KEPT_FOR: Final = timedelta(days=30)
+_PURGE_BATCH: Final = 500
+_UNKNOWN: Final = "unknown"
+_ENDED: Final = frozenset({"SUCCESS", "ERROR", "CANCELLED", "MAX_RECOVERY_ATTEMPTS_EXCEEDED"})
+_log = structlog.get_logger()
+
+
+class Upkeep:
+    """A thread that sweeps at start, every minute, and whenever it is woken."""
+
+    def __init__(self, work: Resources) -> None:
+        self._work = work
+        self._stop = threading.Event()
+        self._thread = threading.Thread(target=self._run, name="upkeep", daemon=True)
+
+    def start(self) -> None:
+        """Begin to look after things."""
+        self._thread.start()
+
+    def stop(self) -> None:
+        """End after the sweep that is going on."""
+        self._stop.set()
+        self._thread.join()
+
+    def _run(self) -> None:
+        while True:
+            try:
+                sweep(self._work)
+                tidy(self._work)
+            except Exception:  # noqa: BLE001 - the next round tries again
+                _log.exception("sweep failed")
+            if self._stop.wait(SWEEP_SECONDS):
+                return
+
+
+def sweep(work: Resources) -> None:
+    """Bring promised scenes and the queue into agreement.
+
+    A promise without a workflow is enqueued. A scene at work whose workflow the queue does
+    not know is promised anew. A scene whose workflow ended without telling it has failed.
+    """
+    with work.sessions.reading() as session:
+        scenes = unfinished_scenes(session)
+    states = _workflow_states(scenes)
+    for scene in scenes:
+        state = states.get(ingest.workflow_id(scene.id, scene.generation), _UNKNOWN)
+        if state == _UNKNOWN and scene.state == SceneState.QUEUED:
+            ingest.enqueue(scene.id, scene.generation)
+        elif state == _UNKNOWN:
+            _promise_anew(work, scene)
+        elif state in _ENDED:
+            ingest.fail(scene.id, scene.generation, ingest.INTERNAL_FAILURE)
+
+
+def _workflow_states(scenes: Sequence[Scene]) -> dict[str, str]:
+    ids = [ingest.workflow_id(scene.id, scene.generation) for scene in scenes]
+    if not ids:
+        return {}
+    found = DBOS.list_workflows(workflow_ids=ids, load_input=False, load_output=False)
+    return {workflow.workflow_id: workflow.status for workflow in found}
+
+
+def _promise_anew(work: Resources, scene: Scene) -> None:
+    with work.sessions.writing() as session:
+        row = session.get(Scene, scene.id)
+        if row is None or row.generation != scene.generation or row.state != scene.state:
+            return
+        put_back(session, row, at=now())
+        generation = row.generation
+    ingest.enqueue(scene.id, generation)
+
+
+def tidy(work: Resources) -> None:
+    """Remove what nothing needs: orphaned files, old answers, old finished workflows."""
+    with work.sessions.writing() as session:
+        forget_old_answers(session, at=now())
+    with work.sessions.reading() as session:
+        wanted = kept_digests(session)
+    removed = work.archive.remove_orphans(wanted, older_than_seconds=ORPHAN_SECONDS)
+    if removed:
+        _log.info("orphaned files removed", count=removed)
+    before = (now() - WORKFLOWS_KEPT_FOR).isoformat()
+    old = DBOS.list_workflows(
+        completed_before=before, limit=_PURGE_BATCH, load_input=False, load_output=False
+    )
+    if old:
+        DBOS.delete_workflows([workflow.workflow_id for workflow in old], delete_children=True)

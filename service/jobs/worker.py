@@ -1,0 +1,96 @@
+"""Starting and stopping the queue's engine in this process."""
+
+from pathlib import Path
+from typing import Any, Final
+
+import fasteners
+from dbos import DBOS, DBOSConfig, DBOSPortableJSONSerializer
+from sqlalchemy import Engine, create_engine, event, make_url
+
+from service.errors import Unavailable
+from service.jobs import ingest
+from service.jobs.resources import Resources, lend
+from service.jobs.upkeep import Upkeep
+
+_APPLICATION_VERSION: Final = "1"
+"""Constant, so that work promised by one release is carried out by the next."""
+_EXECUTOR: Final = "embedded"
+"""Stable, so that the same machine resumes what a crash interrupted."""
+
+
+class Worker:
+    """The queue's engine, embedded in this process; one to a data folder, held by a lock."""
+
+    def __init__(self, work: Resources) -> None:
+        self._work = work
+        self._lock = fasteners.InterProcessLock(work.settings.data / "worker.lock")
+        self._upkeep: Upkeep | None = None
+
+    def start(self) -> None:
+        """Launch the engine, resume what was interrupted, and begin the upkeep.
+
+        Raises
+        ------
+        Unavailable
+            Another process works on this data folder.
+        """
+        if not self._lock.acquire(blocking=False):
+            raise Unavailable(
+                "worker-running", "Another process is already serving this data folder."
+            )
+        self._work.archive.clear_incoming()
+        lend(self._work)
+        settings = self._work.settings
+        engine = _engine(settings.engine_url, settings.data)
+        DBOS(
+            config=DBOSConfig(
+                name="furrowlight",
+                system_database_url=settings.engine_url,
+                system_database_engine=engine,
+                dbos_system_schema="queue",
+                application_version=_APPLICATION_VERSION,
+                executor_id=_EXECUTOR,
+                serializer=DBOSPortableJSONSerializer(),
+                log_level="WARNING",
+            )
+        )
+        DBOS.launch()
+        DBOS.register_queue(
+            ingest.QUEUE,
+            worker_concurrency=1,
+            polling_interval_sec=settings.queue_polling_seconds,
+        )
+        self._upkeep = Upkeep(self._work)
+        self._upkeep.start()
+
+    def stop(self) -> None:
+        """Take no more work, let what goes on end within seconds, and let go of the folder."""
+        if self._upkeep is not None:
+            self._upkeep.stop()
+        DBOS.destroy(workflow_completion_timeout_sec=10)
+        lend(None)
+        self._lock.release()
+
+
+def promise(scene_id: int, generation: int) -> None:
+    """Hand a committed promise to the queue at once; if that fails the sweep will."""
+    ingest.enqueue(scene_id, generation)
+
+
+def _engine(url: str, data: Path) -> Engine:
+    """Return the engine of the queue's database."""
+    if make_url(url).get_backend_name() != "sqlite":
+        return create_engine(url, pool_pre_ping=True, pool_size=10)
+    engine = create_engine(url)
+    event.listen(engine, "connect", _prepare_sqlite)
+    # Only one connection at a time may change the journal's mode.
+    with fasteners.InterProcessLock(data / "migrate.lock"), engine.connect() as connection:
+        connection.exec_driver_sql("PRAGMA journal_mode=WAL")
+    return engine
+
+
+def _prepare_sqlite(connection: Any, _record: object) -> None:
+    # The engine's own wish: writers queue up instead of failing on each other.
+    connection.isolation_level = "IMMEDIATE"
+    for pragma in ("busy_timeout=60000", "foreign_keys=ON", "synchronous=FULL"):
+        connection.execute(f"PRAGMA {pragma}")

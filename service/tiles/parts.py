@@ -1,0 +1,95 @@
+"""Which parts of a grid are read one after the other."""
+
+import math
+from collections.abc import Iterable, Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from service.tiles.intake import Header
+from service.zonal.grid import Grid
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Area:
+    """Rows and columns of a grid, half-open."""
+
+    row0: int
+    row1: int
+    col0: int
+    col1: int
+
+
+def part_shape(grid: Grid, headers: Sequence[Header], *, cells: int) -> tuple[int, int]:
+    """Return (rows, cols) of the parts that a grid is read in, of at most `cells` cells.
+
+    Whole blocks of the files, so that each is decoded once, and as wide as the grid if
+    memory allows. Where block sizes have no small common multiple, those of a file on
+    the grid itself count and others are decoded more than once; memory comes first.
+
+    Parameters
+    ----------
+    grid
+        The grid of at least one of the files.
+    headers
+        Of all files that are read.
+    cells
+        How many cells fit into memory, at least 1.
+    """
+    rows, cols = grid.shape
+    nested = [shape for shape in (_block_in_cells(h, grid) for h in headers) if shape is not None]
+    height, width = _common_shape(nested, grid)
+    if height * width > cells:
+        own = max(header.block_shape for header in headers if header.grid == grid)
+        height, width = _common_shape([own], grid)
+    if height * cols <= cells:
+        return min(height * (cells // (height * cols)), rows), cols
+    if height * width <= cells:
+        return height, width * (cells // (height * width))
+    return max(1, cells // width), min(width, cells)
+
+
+def wanted_areas(grid: Grid, part: tuple[int, int], cells: NDArray[np.int64]) -> Iterator[Area]:
+    """Yield the smallest rectangle around the wanted cells of each part that has some.
+
+    Parameters
+    ----------
+    grid
+        The grid that cells are counted on.
+    part
+        (rows, cols) of a part.
+    cells
+        Flat row-major indices, ascending and unique, shape (n,).
+    """
+    rows, cols = grid.shape
+    height, width = part
+    for top in range(0, rows, height):
+        # Of the same type as the cells: another would copy them all each time.
+        edges = np.array([top * cols, min(top + height, rows) * cols], dtype=np.int64)
+        first, last = np.searchsorted(cells, edges)
+        cell_rows, cell_cols = np.divmod(cells[first:last], cols)
+        parts = cell_cols // width
+        for here in np.unique(parts):
+            part_rows, part_cols = cell_rows[parts == here], cell_cols[parts == here]
+            yield Area(
+                row0=int(part_rows[0]),
+                row1=int(part_rows[-1]) + 1,
+                col0=int(part_cols.min()),
+                col1=int(part_cols.max()) + 1,
+            )
+
+
+def _common_shape(shapes: Iterable[tuple[int, int]], grid: Grid) -> tuple[int, int]:
+    heights, widths = zip(*shapes, strict=True)
+    return min(math.lcm(*heights), grid.shape[0]), min(math.lcm(*widths), grid.shape[1])
+
+
+def _block_in_cells(header: Header, grid: Grid) -> tuple[int, int] | None:
+    """Return a file's block shape in cells of the grid, or None if the grids do not nest."""
+    ours, theirs = grid.transform, header.grid.transform
+    down, across = theirs.e / ours.e, theirs.a / ours.a
+    same_corner = (ours.c, ours.f) == (theirs.c, theirs.f)
+    if not (same_corner and down.is_integer() and across.is_integer() and down >= 1 <= across):
+        return None
+    return header.block_shape[0] * int(down), header.block_shape[1] * int(across)
