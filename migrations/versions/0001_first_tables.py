@@ -112,7 +112,6 @@ def upgrade() -> None:
         sa.Column(
             "holding_id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=True
         ),
-        sa.Column("tags", sa.JSON(), nullable=False),
         sa.Column("created_at", UtcDateTime(), nullable=False),
         sa.Column("retired_at", UtcDateTime(), nullable=True),
         sa.Column("revision", sa.BigInteger(), nullable=False),
@@ -211,11 +210,23 @@ def upgrade() -> None:
     )
     op.create_index(op.f("ix_crop_season_parcel_id"), "crop_season", ["parcel_id"], unique=False)
     op.create_table(
+        "parcel_tag",
+        sa.Column(
+            "parcel_id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False
+        ),
+        sa.Column("tag", sa.String(length=100), nullable=False),
+        sa.ForeignKeyConstraint(
+            ["parcel_id"],
+            ["parcel.id"],
+        ),
+        sa.PrimaryKeyConstraint("parcel_id", "tag"),
+    )
+    op.create_index(op.f("ix_parcel_tag_tag"), "parcel_tag", ["tag"], unique=False)
+    op.create_table(
         "scene_file",
         sa.Column("scene_id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False),
         sa.Column("part", sa.String(length=40), nullable=False),
         sa.Column("digest", sa.String(length=64), nullable=False),
-        sa.Column("suffix", sa.String(length=8), nullable=False),
         sa.Column("size", sa.BigInteger(), nullable=False),
         sa.ForeignKeyConstraint(
             ["scene_id"],
@@ -256,6 +267,8 @@ def downgrade() -> None:
     op.drop_table("write")
     op.drop_index(op.f("ix_scene_file_digest"), table_name="scene_file")
     op.drop_table("scene_file")
+    op.drop_index(op.f("ix_parcel_tag_tag"), table_name="parcel_tag")
+    op.drop_table("parcel_tag")
     op.drop_index(op.f("ix_crop_season_parcel_id"), table_name="crop_season")
     op.drop_table("crop_season")
     op.drop_index(op.f("ix_boundary_parcel_id"), table_name="boundary")

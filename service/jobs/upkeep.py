@@ -37,6 +37,10 @@ class Upkeep:
         """Begin to look after things."""
         self._thread.start()
 
+    def is_alive(self) -> bool:
+        """Whether the thread is running."""
+        return self._thread.is_alive()
+
     def stop(self) -> None:
         """End after the sweep that is going on."""
         self._stop.set()

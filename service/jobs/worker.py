@@ -4,6 +4,7 @@ from pathlib import Path
 from typing import Any, Final
 
 import fasteners
+import structlog
 from dbos import DBOS, DBOSConfig, DBOSPortableJSONSerializer
 from sqlalchemy import Engine, create_engine, event, make_url
 
@@ -12,6 +13,7 @@ from service.jobs import ingest
 from service.jobs.resources import Resources, lend
 from service.jobs.upkeep import Upkeep
 
+_log = structlog.get_logger()
 _APPLICATION_VERSION: Final = "1"
 """Constant, so that work promised by one release is carried out by the next."""
 _EXECUTOR: Final = "embedded"
@@ -63,6 +65,19 @@ class Worker:
         self._upkeep = Upkeep(self._work)
         self._upkeep.start()
 
+    def promise(self, scene_id: int, generation: int) -> None:
+        """Hand a committed promise to the queue at once; if that fails, the sweep will."""
+        try:
+            ingest.enqueue(scene_id, generation)
+        except Exception:  # noqa: BLE001 - the promise stands in the database
+            _log.exception("enqueueing failed", scene_id=scene_id)
+
+    def problem(self) -> str | None:
+        """Return what is wrong with the queue, None if nothing is."""
+        if self._upkeep is None or not self._upkeep.is_alive():
+            return "The queue's upkeep is not running."
+        return None
+
     def stop(self) -> None:
         """Take no more work, let what goes on end within seconds, and let go of the folder."""
         if self._upkeep is not None:
@@ -70,11 +85,6 @@ class Worker:
         DBOS.destroy(workflow_completion_timeout_sec=10)
         lend(None)
         self._lock.release()
-
-
-def promise(scene_id: int, generation: int) -> None:
-    """Hand a committed promise to the queue at once; if that fails the sweep will."""
-    ingest.enqueue(scene_id, generation)
 
 
 def _engine(url: str, data: Path) -> Engine:

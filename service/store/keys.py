@@ -2,7 +2,7 @@
 
 import hashlib
 import secrets
-from collections.abc import Sequence
+from collections.abc import Collection, Iterator, Sequence
 from datetime import datetime
 from enum import StrEnum
 from typing import Final
@@ -66,22 +66,30 @@ def find_valid_key(session: Session, secret: str, *, at: datetime) -> ApiKey | N
     return None if row.expires_at is not None and row.expires_at <= at else row
 
 
-def list_keys(session: Session, *, after_id: int, limit: int) -> Sequence[ApiKey]:
-    """List keys in order of creation, revoked ones included."""
-    query = select(ApiKey).where(ApiKey.id > after_id).order_by(ApiKey.id).limit(limit)
-    return session.scalars(query).all()
+def list_keys(
+    session: Session, *, holdings: Collection[str] | None, after_id: int
+) -> Iterator[ApiKey]:
+    """Yield the keys within some holdings (None: all), oldest first, revoked ones included."""
+    query = select(ApiKey).where(ApiKey.id > after_id).order_by(ApiKey.id)
+    return (row for row in session.scalars(query) if _is_within(row, holdings))
 
 
-def revoke_key(session: Session, public_id: str, *, at: datetime) -> ApiKey:
+def _is_within(row: ApiKey, holdings: Collection[str] | None) -> bool:
+    return holdings is None or (row.holdings is not None and set(row.holdings) <= set(holdings))
+
+
+def revoke_key(
+    session: Session, public_id: str, *, holdings: Collection[str] | None, at: datetime
+) -> ApiKey:
     """Revoke a key at once; revoking it again changes nothing.
 
     Raises
     ------
     NotFound
-        No key has this id.
+        No key has this id, or it is not within the holdings (None: all).
     """
     row = session.scalar(select(ApiKey).where(ApiKey.public_id == public_id))
-    if row is None:
+    if row is None or not _is_within(row, holdings):
         raise NotFound("key-not-found", "There is no key with this id.")
     if row.revoked_at is None:
         row.revoked_at = at

@@ -11,7 +11,7 @@ from sqlalchemy.orm import Session
 
 from service.errors import NotFound
 from service.store.batches import in_batches
-from service.store.tables import Boundary, Holding, Observation, Parcel
+from service.store.tables import Boundary, Holding, Observation, Parcel, ParcelTag
 from service.zonal.boundary import Outline
 
 Box = tuple[float, float, float, float]
@@ -113,7 +113,7 @@ def _insert(
         ref=change.ref,
         name=change.given.get("name"),
         holding=holdings[holding] if holding else None,
-        tags=list(change.given.get("tags") or []),
+        tag_rows=[ParcelTag(tag=tag) for tag in sorted(set(change.given.get("tags") or []))],
         created_at=at,
         retired_at=None,
         revision=0,
@@ -150,14 +150,16 @@ def _update(
 
 def _update_members(row: Parcel, given: Mapping[str, Any], holdings: Mapping[str, Holding]) -> bool:
     """Set the given members; return whether one of them was different."""
-    before = (row.name, row.holding, list(row.tags))
+    before = (row.name, row.holding, row.tags)
     if "name" in given:
         row.name = given["name"]
     if "holding" in given:
         row.holding = holdings[given["holding"]] if given["holding"] else None
     if "tags" in given:
-        row.tags = list(given["tags"] or [])
-    return before != (row.name, row.holding, list(row.tags))
+        kept = {tag_row.tag: tag_row for tag_row in row.tag_rows}
+        wanted = sorted(set(given["tags"] or []))
+        row.tag_rows = [kept.get(tag) or ParcelTag(tag=tag) for tag in wanted]
+    return before != (row.name, row.holding, row.tags)
 
 
 def _redraw(

@@ -41,7 +41,6 @@ class FileSent:
 
     part: str
     digest: str
-    suffix: str
     size: int
 
 
@@ -189,7 +188,7 @@ def _written(session: Session, row: Scene | None, sent: SceneSent, *, at: dateti
 
 def _file_row(row: SceneFile | None, file: FileSent) -> SceneFile:
     row = row or SceneFile(part=file.part)
-    row.digest, row.suffix, row.size = file.digest, file.suffix, file.size
+    row.digest, row.size = file.digest, file.size
     return row
 
 

@@ -74,12 +74,28 @@ class Parcel(Base):
     ref: Mapped[str] = mapped_column(String(100), unique=True)
     name: Mapped[str | None] = mapped_column(String(200))
     holding_id: Mapped[int | None] = mapped_column(ForeignKey("holding.id"), index=True)
-    tags: Mapped[list[str]]
     created_at: Mapped[datetime]
     retired_at: Mapped[datetime | None]
     revision: Mapped[int] = mapped_column(BigInteger)
 
     holding: Mapped[Holding | None] = relationship(lazy="joined")
+    tag_rows: Mapped[list["ParcelTag"]] = relationship(
+        cascade="all, delete-orphan", lazy="selectin", order_by="ParcelTag.tag"
+    )
+
+    @property
+    def tags(self) -> list[str]:
+        """The parcel's tags, sorted."""
+        return [row.tag for row in self.tag_rows]
+
+
+class ParcelTag(Base):
+    """A word by which parcels are found."""
+
+    __tablename__ = "parcel_tag"
+
+    parcel_id: Mapped[int] = mapped_column(ForeignKey("parcel.id"), primary_key=True)
+    tag: Mapped[str] = mapped_column(String(100), primary_key=True, index=True)
 
 
 class Boundary(Base):
@@ -192,7 +208,6 @@ class SceneFile(Base):
     scene_id: Mapped[int] = mapped_column(ForeignKey("scene.id"), primary_key=True)
     part: Mapped[str] = mapped_column(String(40), primary_key=True)
     digest: Mapped[str] = mapped_column(String(64), index=True)
-    suffix: Mapped[str] = mapped_column(String(8))
     size: Mapped[int] = mapped_column(BigInteger)
 
 

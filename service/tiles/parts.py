@@ -38,6 +38,8 @@ def part_shape(grid: Grid, headers: Sequence[Header], *, cells: int) -> tuple[in
         How many cells fit into memory, at least 1.
     """
     rows, cols = grid.shape
+    if rows * cols <= cells:
+        return rows, cols
     nested = [shape for shape in (_block_in_cells(h, grid) for h in headers) if shape is not None]
     height, width = _common_shape(nested, grid)
     if height * width > cells:
@@ -64,20 +66,22 @@ def wanted_areas(grid: Grid, part: tuple[int, int], cells: NDArray[np.int64]) ->
     """
     rows, cols = grid.shape
     height, width = part
+    sides = np.append(np.arange(0, cols, width, dtype=np.int64), cols)
     for top in range(0, rows, height):
-        # Of the same type as the cells: another would copy them all each time.
-        edges = np.array([top * cols, min(top + height, rows) * cols], dtype=np.int64)
-        first, last = np.searchsorted(cells, edges)
-        cell_rows, cell_cols = np.divmod(cells[first:last], cols)
-        parts = cell_cols // width
-        for here in np.unique(parts):
-            part_rows, part_cols = cell_rows[parts == here], cell_cols[parts == here]
-            yield Area(
-                row0=int(part_rows[0]),
-                row1=int(part_rows[-1]) + 1,
-                col0=int(part_cols.min()),
-                col1=int(part_cols.max()) + 1,
-            )
+        lines = np.arange(top, min(top + height, rows), dtype=np.int64)
+        # Where the cells of each line and part begin and end; the cells themselves, which
+        # may be most of the grid, are not copied.
+        edges = np.searchsorted(cells, lines[:, np.newaxis] * cols + sides)
+        for here in range(sides.size - 1):
+            first, last = edges[:, here], edges[:, here + 1]
+            held = first < last
+            if held.any():
+                yield Area(
+                    row0=int(lines[held][0]),
+                    row1=int(lines[held][-1]) + 1,
+                    col0=int((cells[first[held]] % cols).min()),
+                    col1=int((cells[last[held] - 1] % cols).max()) + 1,
+                )
 
 
 def _common_shape(shapes: Iterable[tuple[int, int]], grid: Grid) -> tuple[int, int]:

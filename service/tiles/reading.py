@@ -9,6 +9,7 @@ import math
 from collections.abc import Iterable, Iterator
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass
+from itertools import pairwise
 from pathlib import Path
 from typing import Any, Final, Literal
 
@@ -30,9 +31,9 @@ from service.zonal.grid import Grid
 STRIP_BYTES: Final = 64 * 2**20
 """Memory of one block, all bands together."""
 
-# Half of the raster library's cache (`environment`): a row of blocks that is read must
-# fit into it, because the library walks a window line by line.
-_PIECE_BYTES: Final = 32 * 2**20
+# A quarter of the raster library's cache (`environment`): a row of blocks that is read
+# must fit into it, because the library walks a window line by line.
+_PIECE_BYTES: Final = 16 * 2**20
 
 Numbers = NDArray[Any]
 
@@ -216,19 +217,28 @@ def _read_area(scene: _Scene, area: Area) -> xr.Dataset:
     for file in scene.files:
         numbers = _numbers(file, scene.grid, area)
         for layer in file.layers:
-            variables[str(layer.role)] = (("y", "x"), numbers.pop(0), _attributes(layer))
-    block = xr.Dataset(
-        variables,
+            variables[str(layer.role)] = xr.Variable(
+                ("y", "x"), numbers.pop(0), _attributes(layer), {"grid_mapping": "spatial_ref"}
+            )
+    return _frame(scene.grid, area).assign(variables)
+
+
+def _frame(grid: Grid, area: Area) -> xr.Dataset:
+    """Return a block without its numbers, georeferenced.
+
+    Without them, because the `rio` accessor and its dataset refer to each other: numbers
+    in it would stay in memory until the next garbage collection.
+    """
+    frame = xr.Dataset(
         coords={
-            "y": scene.grid.centre_ys(area.row0, area.row1),
-            "x": scene.grid.centre_xs(area.col0, area.col1),
+            "y": grid.centre_ys(area.row0, area.row1),
+            "x": grid.centre_xs(area.col0, area.col1),
         },
-        attrs={"row0": area.row0, "col0": area.col0, "grid_cols": scene.grid.shape[1]},
+        attrs={"row0": area.row0, "col0": area.col0, "grid_cols": grid.shape[1]},
     )
-    # In place, because these copy all numbers otherwise.
-    block.rio.write_crs(scene.grid.crs, inplace=True)
-    block.rio.write_transform(_transform_of(scene.grid, area), inplace=True)
-    return block
+    frame.rio.write_crs(grid.crs, inplace=True)
+    frame.rio.write_transform(_transform_of(grid, area), inplace=True)
+    return frame
 
 
 def _transform_of(grid: Grid, area: Area) -> Affine:
@@ -314,11 +324,12 @@ def _read(file: _File, area: Area) -> Numbers:
     )
     indexes = [layer.band for layer in file.layers]
     try:
-        for start, stop in _pieces(file.header, area):
-            window = Window(start, area.row0, stop - start, area.row1 - area.row0)
-            numbers[:, :, start - area.col0 : stop - area.col0] = file.dataset.read(
-                indexes, window=window
-            )
+        for piece in _pieces(file.header, area):
+            numbers[
+                :,
+                piece.row0 - area.row0 : piece.row1 - area.row0,
+                piece.col0 - area.col0 : piece.col1 - area.col0,
+            ] = file.dataset.read(indexes, window=_window(piece))
     except RasterioError as error:
         raise RejectedInput.at(
             file.pointer,
@@ -328,13 +339,22 @@ def _read(file: _File, area: Area) -> Numbers:
     return numbers
 
 
-def _pieces(header: Header, area: Area) -> Iterator[tuple[int, int]]:
-    """Yield (first, last) columns of runs of whole blocks that fit into the cache."""
+def _window(area: Area) -> Window:
+    return Window(area.col0, area.row0, area.col1 - area.col0, area.row1 - area.row0)
+
+
+def _pieces(header: Header, area: Area) -> Iterator[Area]:
+    """Yield an area in runs of whole blocks that fit into the cache."""
     height, width = header.block_shape
     block_bytes = height * width * np.dtype(header.dtypes[0]).itemsize * header.count
-    step = width * max(1, _PIECE_BYTES // block_bytes)
-    start = area.col0
-    while start < area.col1:
-        stop = min((start // step + 1) * step, area.col1)
-        yield start, stop
-        start = stop
+    across = min(max(1, _PIECE_BYTES // block_bytes), -(-header.grid.shape[1] // width))
+    down = max(1, _PIECE_BYTES // (block_bytes * across))
+    for row0, row1 in _runs(area.row0, area.row1, height * down):
+        for col0, col1 in _runs(area.col0, area.col1, width * across):
+            yield Area(row0=row0, row1=row1, col0=col0, col1=col1)
+
+
+def _runs(start: int, stop: int, step: int) -> Iterator[tuple[int, int]]:
+    """Yield the parts of start to stop between multiples of step."""
+    edges = [start, *range((start // step + 1) * step, stop, step), stop]
+    yield from pairwise(edges)

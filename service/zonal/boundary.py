@@ -7,6 +7,7 @@ from typing import Any, Final
 
 import numpy as np
 import shapely
+from numpy.typing import NDArray
 from pyproj import Geod
 from shapely.geometry.base import BaseGeometry
 
@@ -127,12 +128,8 @@ def _rings(value: Any, depth: int, pointer: str) -> list[tuple[Sequence[Any], st
 
 
 def _check_ring(ring: Sequence[Any], pointer: str) -> None:
-    try:
-        positions = np.array([position[:2] for position in ring], dtype=np.float64)
-        is_numeric = all(type(part) in (int, float) for position in ring for part in position)
-    except (TypeError, ValueError, KeyError):
-        is_numeric = False
-    if not is_numeric or positions.ndim != 2 or positions.shape[1] != 2:
+    positions = _positions(ring)
+    if positions is None:
         raise RejectedInput.at(
             pointer,
             "Each position must be a list of numbers: longitude, latitude.",
@@ -153,6 +150,17 @@ def _check_ring(ring: Sequence[Any], pointer: str) -> None:
             "WGS 84 degrees, longitude first.",
             code="invalid-geometry",
         )
+
+
+def _positions(ring: Sequence[Any]) -> NDArray[np.float64] | None:
+    """Return longitudes and latitudes, shape (positions, 2); None unless all are numbers."""
+    try:
+        if any(type(part) not in (int, float) for position in ring for part in position):
+            return None
+        positions = np.array([position[:2] for position in ring], dtype=np.float64)
+    except (TypeError, ValueError, KeyError):
+        return None
+    return positions if positions.ndim == 2 and positions.shape[1] == 2 else None
 
 
 def _repaired(shape: BaseGeometry, pointer: str, *, repair: bool) -> BaseGeometry:

@@ -4,7 +4,11 @@ The attacks are those listed in the design notes (measured there on naive code);
 hand-made headers follow TIFF 6.0 and ISO/IEC 15444-1.
 """
 
+import json
+import os
 import struct
+import subprocess
+import sys
 import threading
 from collections.abc import Callable
 from http.server import BaseHTTPRequestHandler, HTTPServer
@@ -110,6 +114,24 @@ def test_only_the_allowed_drivers_are_registered() -> None:
     with rasterio.Env() as env:
         assert set(env.drivers()) <= ALLOWED_DRIVERS
         assert {"GTiff", "JP2OpenJPEG"} <= set(env.drivers())
+
+
+def test_the_guards_of_the_design_stand_for_this_process_and_its_children() -> None:
+    guards = {
+        "GDAL_DISABLE_READDIR_ON_OPEN": "EMPTY_DIR",
+        "GDAL_PAM_ENABLED": "NO",
+        "GDAL_GEOREF_SOURCES": "INTERNAL",
+        "GDAL_CACHEMAX": "64",
+        "PROJ_NETWORK": "OFF",
+    }
+    seen = "import os, json, service.tiles; print(json.dumps(dict(os.environ)))"
+    # A child that was started with the opposite is put right before it imports rasterio.
+    started_with = os.environ | dict.fromkeys(guards, "YES")
+    done = subprocess.run(
+        [sys.executable, "-c", seen], env=started_with, check=True, capture_output=True
+    )
+    assert guards.items() <= json.loads(done.stdout).items()
+    assert guards.items() <= os.environ.items()
 
 
 def test_a_virtual_raster_under_a_tiff_name_is_refused_and_not_followed(tmp_path: Path) -> None:

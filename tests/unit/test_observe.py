@@ -259,6 +259,25 @@ def test_a_block_without_the_promised_quality_layer_has_no_usable_cell():
     assert (seen["clear.valid_share"], seen["clear.nodata"]) == (0, 1)
 
 
+def test_the_quality_files_own_mark_for_nodata_comes_before_its_classes():
+    scene = block({RED: four_by_four(0.1)}, [[VEGETATION, 7, 7, 7]] * 4)
+    scene["quality"].attrs["nodata"] = 7
+
+    (seen,) = figures_of([scene], [box(0, 0, 4, 4)], roles=(RED,), indices=())
+
+    assert (seen["clear.valid_share"], seen["clear.nodata"]) == (0.25, 0.75)
+
+
+def test_a_class_without_any_bands_number_is_no_evidence():
+    red = four_by_four(0.05)
+    red[0] = 0
+    scene = block({RED: red}, [[WATER, WATER, CLOUD, CLOUD], *[[VEGETATION] * 4] * 3])
+
+    (seen,) = figures_of([scene], [box(0, 0, 4, 4)], roles=(RED,), indices=())
+
+    assert (seen["clear.water"], seen["clear.cloud"], seen["clear.nodata"]) == (0, 0, 0.25)
+
+
 def test_without_a_quality_layer_every_number_counts_and_clouds_are_unknown():
     red = four_by_four(0.1)
     red[0, 0] = 0

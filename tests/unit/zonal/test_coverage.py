@@ -8,7 +8,7 @@ import shapely
 from affine import Affine
 from pyproj import Geod, Transformer
 
-from service.zonal.coverage import MIN_COVERAGE, project, zones_on
+from service.zonal.coverage import project, zones_on
 from service.zonal.grid import Grid
 
 UTM_33 = "EPSG:32633"
@@ -148,15 +148,15 @@ def test_more_boundaries_than_are_measured_at_once_keep_their_order():
     assert zones.weights.tolist() == [1.0] * 900
 
 
-def test_a_share_below_the_minimum_does_not_count():
+def test_a_share_below_a_millionth_of_a_cell_does_not_count():
     grid = grid_of(3, 3)
-    just_less = box(grid, 0, 0, 1 + 0.9 * MIN_COVERAGE, 1)
-    just_more = box(grid, 0, 0, 1 + 1.1 * MIN_COVERAGE, 1)
+    just_less = box(grid, 0, 0, 1 + 0.9e-6, 1)
+    just_more = box(grid, 0, 0, 1 + 1.1e-6, 1)
 
     zones = zones_on(grid, [just_less, just_more])
 
     assert zones.cells.tolist() == [0, 0, 1]
-    assert zones.totals[0] == pytest.approx(1 + 0.9 * MIN_COVERAGE, abs=1e-9)
+    assert zones.totals[0] == pytest.approx(1 + 0.9e-6, abs=1e-9)
 
 
 def test_a_grid_whose_rows_run_north_gives_the_same_ground_the_same_weight():

@@ -1,0 +1,1 @@
+"""The HTTP contract: one file per resource, its routes and its wire models together."""

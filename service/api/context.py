@@ -1,0 +1,119 @@
+"""What handlers work with: the running service, and who is asking."""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Annotated
+
+from fastapi import Depends, Request
+
+from service.clock import now
+from service.errors import NotAllowed
+from service.jobs.resources import Resources
+from service.settings import Settings
+from service.store.keys import Scope, find_valid_key
+from service.store.sessions import Sessions
+from service.tiles.archive import Archive
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Context:
+    """The running service, as the handlers see it.
+
+    Handlers open their own sessions, so that a write is committed before its answer is made.
+    `promise` hands a committed promise to the queue; `queue_problem` says what is wrong
+    with the queue, None if nothing is.
+    """
+
+    work: Resources
+    promise: Callable[[int, int], None]
+    queue_problem: Callable[[], str | None]
+
+    @property
+    def settings(self) -> Settings:
+        """The deployment's settings."""
+        return self.work.settings
+
+    @property
+    def sessions(self) -> Sessions:
+        """Sessions on the service's own database."""
+        return self.work.sessions
+
+    @property
+    def archive(self) -> Archive:
+        """The archive of scene files."""
+        return self.work.archive
+
+
+def _context(request: Request) -> Context:
+    context: Context = request.app.state.context
+    return context
+
+
+Ctx = Annotated[Context, Depends(_context)]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Caller:
+    """Who is asking: a valid key's rights.
+
+    `holdings` None means all of them.
+    """
+
+    key_id: int
+    label: str
+    scopes: frozenset[str]
+    holdings: frozenset[str] | None
+
+    def must_see_all(self, what: str) -> None:
+        """Refuse a key that is limited to holdings.
+
+        Raises
+        ------
+        NotAllowed
+            The key is limited, and the thing concerns every holding.
+        """
+        if self.holdings is not None:
+            raise NotAllowed(
+                "key-limited",
+                f"This key is limited to holdings, and {what} concerns all of them. Use a key "
+                "without that limit.",
+            )
+
+
+def _caller(request: Request, context: Ctx) -> Caller:
+    scheme, _, secret = request.headers.get("Authorization", "").partition(" ")
+    if scheme.lower() != "bearer" or not secret.strip():
+        raise NotAllowed(
+            "no-key",
+            "Send a key as `Authorization: Bearer <key>`; the operator makes one with "
+            "`furrowlight keys create`.",
+        )
+    with context.sessions.reading() as session:
+        row = find_valid_key(session, secret.strip(), at=now())
+    if row is None:
+        raise NotAllowed("unknown-key", "This key is unknown, has expired or was revoked.")
+    return Caller(
+        key_id=row.id,
+        label=row.label,
+        scopes=frozenset(row.scopes),
+        holdings=None if row.holdings is None else frozenset(row.holdings),
+    )
+
+
+def require(scope: Scope) -> Callable[[Caller], Caller]:
+    """Return the dependency that lets only keys with this scope pass."""
+
+    def check(caller: Annotated[Caller, Depends(_caller)]) -> Caller:
+        if scope not in caller.scopes:
+            raise NotAllowed(
+                "scope-missing", f"This key lacks the scope `{scope}`. Use one that has it."
+            )
+        return caller
+
+    return check
+
+
+Reader = Annotated[Caller, Depends(require(Scope.READ))]
+Ingester = Annotated[Caller, Depends(require(Scope.INGEST))]
+Steward = Annotated[Caller, Depends(require(Scope.MANAGE))]
+Admin = Annotated[Caller, Depends(require(Scope.ADMIN))]

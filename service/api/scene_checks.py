@@ -1,0 +1,242 @@
+"""What headers and metadata of a scene show, checked before anything of it is kept."""
+
+import hashlib
+import json
+from collections.abc import Mapping
+from datetime import UTC, datetime, timedelta
+from pathlib import Path
+from typing import Annotated, Any, Final, Literal
+
+from pydantic import Field, FiniteFloat, model_validator
+
+from service.api.batches import model_of
+from service.api.uploads import QUALITY, SCENE, STACK, SceneReceived
+from service.api.wire import Instant, Ref, Sent, Text, written
+from service.errors import RejectedInput
+from service.jobs.measuring import WATCHED
+from service.jobs.sources import bands_of, scalings_of, scene_source
+from service.spectral.roles import BandRole
+from service.spectral.sensors import SENSORS, Sensor
+from service.store.scenes import FileSent, SceneSent
+from service.tiles.intake import Header, check_together, footprint, inspect
+from service.tiles.reading import measuring_grid
+
+_EARLIEST: Final = datetime(1972, 1, 1, tzinfo=UTC)
+"""No civil multispectral satellite flew before."""
+_AHEAD: Final = timedelta(days=1)
+
+
+class ScalingSent(Sent):
+    """Reflectance = number * scale + offset."""
+
+    scale: Annotated[FiniteFloat, Field(gt=0)]
+    offset: FiniteFloat
+
+
+class SceneIn(Sent):
+    """The ``scene`` part: what the files are."""
+
+    ref: Ref
+    sensor: Text
+    acquired_at: Instant
+    processing_baseline: Text | None = None
+    platform: Text | None = None
+    tile: Text | None = None
+    scaling: ScalingSent | dict[BandRole, ScalingSent] | None = None
+    stack: Annotated[list[BandRole | Literal["quality"] | None], Field(min_length=1)] | None = None
+    nodata: FiniteFloat | None = None
+    quality: Literal["none"] | None = None
+    replace: bool = False
+
+    @model_validator(mode="before")
+    @classmethod
+    def _one_or_by_role(cls, value: Any) -> Any:
+        """Decide between one scaling and one per role, so that faults name the right place."""
+        sent = value.get("scaling") if isinstance(value, Mapping) else None
+        if isinstance(sent, Mapping) and ("scale" in sent or "offset" in sent):
+            return {**value, "scaling": model_of(ScalingSent, sent, f"/{SCENE}/scaling")}
+        return value
+
+
+def checked_scene(received: SceneReceived, *, at: datetime) -> tuple[SceneSent, dict[str, Path]]:
+    """Return a received scene, ready to be kept, and where its parts are.
+
+    Its files are named by the parts as they are stored: the single near-infrared band of a
+    sensor is ``nir`` by whichever name it was sent.
+
+    Raises
+    ------
+    RejectedInput
+        Metadata or headers break a rule; the pointer begins with the part's name.
+    """
+    scene = _scene_part(received.scene)
+    sensor = SENSORS.get(scene.sensor)
+    if sensor is None:
+        raise RejectedInput.at(
+            f"/{SCENE}/sensor",
+            f"No sensor profile has this id; there are {', '.join(SENSORS)}.",
+            code="unknown-sensor",
+        )
+    _check_time(scene, at=at)
+    files = {part: file.path for part, file in received.files.items()}
+    details, files = _with_one_nir(_details(scene), files)
+    headers = {part: inspect(path, pointer=f"/{part}") for part, path in files.items()}
+    _check_parts(details, headers, sensor)
+    check_together({f"/{part}": header for part, header in headers.items()})
+    bands = bands_of(details, files)
+    scalings_of(details, bands, sensor=sensor.id)
+    _check_feeds(bands)
+    grid = measuring_grid(scene_source(sensor.id, details, files))
+    sizes = {file.path: file for file in received.files.values()}
+    sent = SceneSent(
+        ref=scene.ref,
+        sensor=sensor.id,
+        platform=scene.platform,
+        tile=scene.tile,
+        acquired_at=scene.acquired_at,
+        processing_baseline=scene.processing_baseline,
+        details=details,
+        digest=_digest(details, {part: sizes[path].digest for part, path in files.items()}),
+        grid=grid,
+        footprint=footprint(grid),
+        files=[
+            FileSent(part=part, digest=sizes[path].digest, size=sizes[path].size)
+            for part, path in files.items()
+        ],
+        replace=scene.replace,
+    )
+    return sent, files
+
+
+def _scene_part(data: bytes) -> SceneIn:
+    try:
+        value = json.loads(data)
+    except ValueError as error:
+        raise RejectedInput("malformed-json", "The scene part is not valid JSON.") from error
+    return model_of(SceneIn, value, f"/{SCENE}")
+
+
+def _check_time(scene: SceneIn, *, at: datetime) -> None:
+    if not _EARLIEST <= scene.acquired_at <= at + _AHEAD:
+        raise RejectedInput.at(
+            f"/{SCENE}/acquired_at",
+            f"A scene is acquired from {_EARLIEST.year} on and at most a day ahead of now. Check "
+            "the year, and that the time is that of the acquisition.",
+        )
+
+
+def _details(scene: SceneIn) -> dict[str, Any]:
+    """Return the normalised metadata: what the digest covers, and what measuring needs."""
+    details = scene.model_dump(mode="json", exclude_none=True, exclude={"ref", "replace"})
+    details["acquired_at"] = written(scene.acquired_at)
+    if scene.stack is not None:
+        details[STACK] = [None if role is None else str(role) for role in scene.stack]
+    return details
+
+
+def _with_one_nir(
+    details: dict[str, Any], files: dict[str, Path]
+) -> tuple[dict[str, Any], dict[str, Path]]:
+    """Call the only near-infrared band ``nir``, except where the sensor has two."""
+    roles = {*files, *(details.get(STACK) or [])}
+    has_two = {role.value for role in SENSORS[details["sensor"]].roles} >= {"nir", "nir08"}
+    fixed = bool(SENSORS[details["sensor"]].bands)
+    if "nir08" not in roles or "nir" in roles or (has_two and fixed):
+        return details, files
+    renamed = {"nir" if part == "nir08" else part: path for part, path in files.items()}
+    if STACK in details:
+        stack = ["nir" if role == "nir08" else role for role in details[STACK]]
+        details = {**details, STACK: stack}
+    scaling = details.get("scaling", {})
+    if "nir08" in scaling:
+        scaling = {"nir" if role == "nir08" else role: own for role, own in scaling.items()}
+        details = {**details, "scaling": scaling}
+    return details, renamed
+
+
+def _check_parts(details: Mapping[str, Any], headers: Mapping[str, Header], sensor: Sensor) -> None:
+    _check_stack(details, headers)
+    for part, header in headers.items():
+        if part != STACK and header.count != 1:
+            raise RejectedInput.at(
+                f"/{part}",
+                "A part named by band role holds one band; send a file of several as `stack`, with "
+                "the role of each band in the metadata.",
+            )
+    for role, (part, _) in bands_of(details, headers).items():
+        if role != QUALITY and BandRole(role) not in sensor.roles:
+            raise RejectedInput.at(f"/{part}", f"{sensor.title} has no band {role}.")
+    _check_quality(details, headers, sensor)
+
+
+def _check_stack(details: Mapping[str, Any], headers: Mapping[str, Header]) -> None:
+    roles = details.get(STACK)
+    if (roles is None) != (STACK not in headers):
+        raise RejectedInput.at(
+            f"/{SCENE}/{STACK}",
+            "A part `stack` and the list `stack` in the metadata, the role of each of its bands "
+            "in order, go together.",
+        )
+    if roles is None:
+        return
+    named = [role for role in roles if role is not None]
+    if len(roles) != headers[STACK].count:
+        raise RejectedInput.at(
+            f"/{SCENE}/{STACK}",
+            f"The list names {len(roles)} bands, the file has {headers[STACK].count}; use null "
+            "for a band to skip.",
+        )
+    if len(set(named)) != len(named) or set(named) & (headers.keys() - {STACK}):
+        raise RejectedInput.at(f"/{SCENE}/{STACK}", "A band role is there twice; send each once.")
+
+
+def _check_quality(
+    details: Mapping[str, Any], headers: Mapping[str, Header], sensor: Sensor
+) -> None:
+    place = bands_of(details, headers).get(QUALITY)
+    is_waived = details.get(QUALITY) == "none"
+    if sensor.quality is None:
+        if place is not None:
+            raise RejectedInput.at(
+                f"/{place[0]}",
+                f"The profile {sensor.id} has no quality layer to read this by. Leave it out, and "
+                "set the cells that are not usable to the nodata number.",
+                code="wrong-quality-layer",
+            )
+        return
+    if place is None and not is_waived:
+        raise RejectedInput.at(
+            f"/{QUALITY}",
+            f"Scenes of {sensor.id} come with their quality layer ({sensor.quality.id.upper()}). "
+            'Send it, or say `"quality": "none"` to measure clouds as if they were ground.',
+            code="wrong-quality-layer",
+        )
+    if place is None:
+        return
+    if is_waived:
+        raise RejectedInput.at(
+            f"/{SCENE}/{QUALITY}", "A quality layer was sent; leave out `quality` or the layer."
+        )
+    part, band = place
+    if headers[part].dtypes[band - 1] not in sensor.quality.dtypes:
+        raise RejectedInput.at(
+            f"/{part}",
+            f"A quality layer of {sensor.id} holds whole numbers ({sensor.quality.dtypes[0]}); "
+            "this file holds others. Send the product's own classification.",
+            code="wrong-quality-layer",
+        )
+
+
+def _check_feeds(bands: Mapping[str, Any]) -> None:
+    if not any({role.value for role in index.roles} <= bands.keys() for index in WATCHED):
+        raise RejectedInput(
+            "no-index",
+            "These bands feed none of the watched indices. Send at least red and nir, for NDVI; "
+            "`GET /v1/indices` lists what each index needs.",
+        )
+
+
+def _digest(details: Mapping[str, Any], files: Mapping[str, str]) -> str:
+    """Return the digest of a scene: its files, and its metadata without ref and replace."""
+    told = json.dumps([details, files], sort_keys=True, ensure_ascii=False)
+    return hashlib.sha256(told.encode()).hexdigest()

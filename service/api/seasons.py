@@ -1,0 +1,203 @@
+"""Crop seasons: what grew where, from when to when."""
+
+from datetime import date
+from typing import Annotated, Any
+
+from fastapi import APIRouter
+from fastapi.responses import Response
+from pydantic import BaseModel, Field
+from sqlalchemy.orm import Session
+
+from service.api.batches import Faults, model_of
+from service.api.bodies import Bulk, BulkBody, csv_rows, json_items, unsupported_media_type
+from service.api.context import Caller, Context, Ctx, Reader, Steward
+from service.api.once import OnceOnly, json_answer
+from service.api.routes import contract_router
+from service.api.wire import Ref, Sent, Text
+from service.clock import now
+from service.errors import Fault, RejectedInput
+from service.seasons.axis import SeasonStart, season_ending_in, season_holding
+from service.settings import Settings
+from service.store.parcels import boundaries_at, get_parcel, is_within, parcels_by_ref
+from service.store.seasons import SeasonSent, overlapping, put_season, seasons_of
+from service.store.sessions import serialise
+from service.store.tables import CropSeason, Parcel
+
+router: APIRouter = contract_router("", "parcels")
+
+_COLUMNS = {
+    "parcel": True,
+    "crop": True,
+    "from_on": False,
+    "until_on": False,
+    "year": False,
+    "sown_on": False,
+    "harvested_on": False,
+}
+
+
+class SeasonIn(Sent):
+    """A crop season: its first and last day, or the year in which its crop year ends."""
+
+    parcel: Ref
+    crop: Text
+    from_on: date | None = None
+    until_on: date | None = None
+    year: Annotated[int, Field(ge=1972, le=2200)] | None = None
+    sown_on: date | None = None
+    harvested_on: date | None = None
+
+
+class SeasonOut(BaseModel):
+    """A crop season, both days included."""
+
+    crop: str
+    from_on: date
+    until_on: date
+    sown_on: date | None
+    harvested_on: date | None
+
+
+class SeasonsOut(BaseModel):
+    """A parcel's crop seasons in order of time."""
+
+    seasons: list[SeasonOut]
+
+
+class SeasonsPosted(BaseModel):
+    """What became of the seasons that were sent."""
+
+    created: int
+    updated: int
+    unchanged: int
+    rejected: int
+    errors: list[dict[str, str]]
+
+
+def season_start(latitude: float, settings: Settings) -> SeasonStart:
+    """Return when the crop year begins at a latitude."""
+    text = settings.season_start_north if latitude >= 0 else settings.season_start_south
+    return SeasonStart.parse(text)
+
+
+def season_of_day(
+    parcel: Parcel, crop: str, day: date, latitude: float, settings: Settings
+) -> SeasonSent:
+    """Return the crop year that holds a day, as a season of a crop."""
+    first, last = season_holding(day, season_start(latitude, settings))
+    return SeasonSent(parcel=parcel, crop=crop, from_on=first, until_on=last)
+
+
+@router.get("/parcels/{ref}/seasons")
+def get_seasons(ref: str, caller: Reader, context: Ctx) -> SeasonsOut:
+    """List a parcel's crop seasons."""
+    with context.sessions.reading() as session:
+        row = get_parcel(session, ref, holdings=caller.holdings)
+        seasons = seasons_of(session, [row.id]).get(row.id, [])
+    return SeasonsOut(seasons=[_out(season) for season in seasons])
+
+
+def _out(row: CropSeason) -> SeasonOut:
+    return SeasonOut(
+        crop=row.crop,
+        from_on=row.from_on,
+        until_on=row.until_on,
+        sown_on=row.sown_on,
+        harvested_on=row.harvested_on,
+    )
+
+
+@router.post("/seasons", response_model=SeasonsPosted)
+def post_seasons(body: Bulk, caller: Steward, context: Ctx, once: OnceOnly) -> Response:
+    """Add or correct crop seasons: one as JSON object, many as JSON array or CSV."""
+    faults = Faults()
+    sent = _sent(body, faults)
+    faults.refuse(unless_lenient=body.is_lenient)
+    counts = {"created": 0, "updated": 0, "unchanged": 0}
+    with context.sessions.writing() as session:
+        serialise(session, "parcels")
+        if (answer := once.replay(session, caller, body.digest)) is not None:
+            return answer
+        for item, season, seasons in _resolved(session, sent, caller, context, faults):
+            held = overlapping(season, seasons)
+            if held is not None:
+                detail = (
+                    f"Overlaps the season from {held.from_on} to {held.until_on}; send that very "
+                    "interval to correct it."
+                )
+                faults.add(item, Fault(pointer=f"/{item}", detail=detail), "season-overlaps")
+                continue
+            counts[put_season(session, season, seasons)] += 1
+        faults.refuse(unless_lenient=body.is_lenient)
+        made = SeasonsPosted(**counts, rejected=len(faults.rejected), errors=faults.listed())
+        return once.keep(session, caller, body.digest, json_answer(made))
+
+
+def _sent(body: BulkBody, faults: Faults) -> dict[int, SeasonIn]:
+    """Return the seasons that stand in a body, by their place in it."""
+    items: Any
+    if body.media_type == "text/csv":
+        items = (cells for _, cells in csv_rows(body.file, _COLUMNS))
+    elif body.media_type == "application/json":
+        is_array = body.file.read(1024).lstrip()[:1] == b"["
+        body.file.seek(0)
+        items = json_items(body.file, "item" if is_array else "")
+    else:
+        raise unsupported_media_type("application/json", "text/csv")
+    found = {}
+    for item, value in enumerate(items):
+        season = faults.collect(item, lambda: model_of(SeasonIn, value, f"/{item}"))  # noqa: B023
+        if season is not None:
+            found[item] = season
+    return found
+
+
+def _resolved(
+    session: Session,
+    sent: dict[int, SeasonIn],
+    caller: Caller,
+    context: Context,
+    faults: Faults,
+) -> Any:
+    """Yield each season with its interval worked out, and its parcel's seasons."""
+    parcels = parcels_by_ref(session, {season.parcel for season in sent.values()})
+    parcels = {ref: row for ref, row in parcels.items() if is_within(row, caller.holdings)}
+    ids = [row.id for row in parcels.values()]
+    outlines = boundaries_at(session, ids, at=now())
+    by_parcel = seasons_of(session, ids)
+    for item, season in sent.items():
+        row = parcels.get(season.parcel)
+        if row is None:
+            detail = "There is no parcel with this ref. Put the parcel first."
+            faults.add(item, Fault(pointer=f"/{item}/parcel", detail=detail))
+            continue
+        latitude = (outlines[row.id].south + outlines[row.id].north) / 2
+        start = season_start(latitude, context.settings)
+        resolved = faults.collect(item, lambda: _interval(season, row, start, f"/{item}"))  # noqa: B023
+        if resolved is not None:
+            yield item, resolved, by_parcel.setdefault(row.id, [])
+
+
+def _interval(season: SeasonIn, row: Parcel, start: SeasonStart, pointer: str) -> SeasonSent:
+    first, last = season.from_on, season.until_on
+    if season.year is not None:
+        if first is not None or last is not None:
+            raise RejectedInput.at(
+                f"{pointer}/year", "Send either `year`, or `from_on` and `until_on`."
+            )
+        first, last = season_ending_in(season.year, start)
+    first, last = season.sown_on or first, season.harvested_on or last
+    if first is None or last is None:
+        raise RejectedInput.at(
+            pointer, "Say when the season is: `year`, or `from_on` and `until_on`."
+        )
+    if first > last:
+        raise RejectedInput.at(pointer, "The season ends before it begins.")
+    return SeasonSent(
+        parcel=row,
+        crop=season.crop,
+        from_on=first,
+        until_on=last,
+        sown_on=season.sown_on,
+        harvested_on=season.harvested_on,
+    )

@@ -1,0 +1,119 @@
+"""Series: the figures of one parcel in time order."""
+
+from collections.abc import Sequence
+from datetime import datetime
+from typing import Annotated
+
+from fastapi import Query, Request, Response
+from sqlalchemy.orm import Session
+
+from service import __version__
+from service.api.context import Ctx, Reader
+from service.api.measures import measures_in, media_type_in, stats_in
+from service.api.routes import contract_router, is_known, not_modified, tag_of
+from service.api.wire import QueryInstant, Text, written
+from service.errors import RejectedInput
+from service.exports import SERIES_FORMATS, MeasureSeries, ParcelSeries
+from service.store.looks import LOOK_SHARE, PASS_GAP, Observed, observations, one_per_pass
+from service.store.parcels import get_parcel
+from service.store.seasons import crop_on, seasons_of
+from service.store.tables import CropSeason, Parcel
+
+router = contract_router("/parcels", "series")
+_FORMATS = {media_type: entry.name for media_type, entry in SERIES_FORMATS.items()}
+
+
+@router.get(
+    "/{ref}/series",
+    responses={200: {"content": {media_type: {} for media_type in SERIES_FORMATS}}},
+)
+def get_series(
+    ref: str,
+    caller: Reader,
+    context: Ctx,
+    request: Request,
+    index: Annotated[list[str] | None, Query(description="Index ids or band roles.")] = None,
+    since: Annotated[QueryInstant | None, Query(alias="from", description="Included.")] = None,
+    until: Annotated[QueryInstant | None, Query(alias="to", description="Not included.")] = None,
+    stat: Annotated[list[str] | None, Query(description="Statistics.")] = None,
+    min_valid: Annotated[
+        float, Query(ge=0, le=1, description="Drop looks with a smaller valid share.")
+    ] = LOOK_SHARE,
+    sensor: Annotated[Text | None, Query(description="One sensor only.")] = None,
+    as_of: Annotated[QueryInstant | None, Query(description="As known at that time.")] = None,
+    format: Annotated[str | None, Query(description="json or csv.")] = None,  # noqa: A002 - the contract's name
+) -> Response:
+    """Answer a parcel's series: one look a pass, as JSON by column or as CSV."""
+    measures = measures_in(index)
+    stats = stats_in(stat, measures)
+    media_type = media_type_in(format, request.headers.get("Accept", ""), _FORMATS)
+    if since is not None and until is not None and since >= until:
+        raise RejectedInput.parameter("to", "`to` must be later than `from`; it is not included.")
+    with context.sessions.reading() as session:
+        parcel = get_parcel(session, ref, holdings=caller.holdings)
+        # Nothing that the answer is made of changes without the revision.
+        asked = (measures, stats, since, until, min_valid, sensor, as_of, media_type)
+        tag = tag_of(__version__, parcel.ref, parcel.revision, asked)
+        if is_known(request, tag):
+            return not_modified(tag)
+        rows = _rows(session, parcel, since, until, sensor=sensor, as_of=as_of)
+        seasons = seasons_of(session, [parcel.id]).get(parcel.id, [])
+    series = ParcelSeries(
+        parcel=parcel.ref,
+        stats=stats,
+        measures=[
+            _measure_series(rows, measure, stats, seasons, (since, until), min_valid)
+            for measure in measures
+        ],
+    )
+    return Response(
+        SERIES_FORMATS[media_type].write(series), media_type=media_type, headers={"ETag": tag}
+    )
+
+
+def _rows(
+    session: Session,
+    parcel: Parcel,
+    since: datetime | None,
+    until: datetime | None,
+    *,
+    sensor: str | None,
+    as_of: datetime | None,
+) -> list[Observed]:
+    """Return what is needed to choose looks: a pass may straddle the ends of the interval."""
+    return list(
+        observations(
+            session,
+            [parcel.id],
+            since=since - PASS_GAP if since else None,
+            until=until + PASS_GAP if until else None,
+            sensor=sensor,
+            as_of=as_of,
+        )
+    )
+
+
+def _measure_series(
+    rows: Sequence[Observed],
+    measure: str,
+    stats: Sequence[str],
+    seasons: Sequence[CropSeason],
+    interval: tuple[datetime | None, datetime | None],
+    min_valid: float,
+) -> MeasureSeries:
+    since, until = interval
+    looks = [
+        look
+        for look in one_per_pass(row for row in rows if row.places.has(measure))
+        if look.of_look("valid_share") >= min_valid
+        and (since is None or look.acquired_at >= since)
+        and (until is None or look.acquired_at < until)
+    ]
+    return MeasureSeries(
+        measure=measure,
+        observed_at=[written(look.acquired_at) for look in looks],
+        scene=[look.scene_ref for look in looks],
+        sensor=[look.sensor for look in looks],
+        crop=[crop_on(seasons, look.acquired_at.date()) for look in looks],
+        stats={stat: [look.of_measure(measure, stat) for look in looks] for stat in stats},
+    )

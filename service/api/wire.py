@@ -1,0 +1,121 @@
+"""Wire types that several resources share."""
+
+import re
+import unicodedata
+from collections.abc import Sequence
+from datetime import UTC, date, datetime, time, timedelta
+from typing import Annotated, Any, Final
+
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, PlainSerializer
+
+from service.store.parcels import Box
+
+_RFC3339: Final = re.compile(
+    r"(\d{4}-\d\d-\d\d)[Tt ](\d\d:\d\d):(\d\d)(\.\d+)?([Zz]|[+-]\d\d:\d\d)"
+)
+_SPREADSHEET_FORMULA: Final = ("=", "+", "-", "@")
+
+
+class Sent(BaseModel):
+    """A body as sent: members that it does not know are refused."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+
+def instant_from(text: object) -> datetime:
+    """Return the instant that an RFC 3339 date-time names, in UTC.
+
+    A leap second counts as the first moment of the next minute.
+    """
+    match = _RFC3339.fullmatch(text) if isinstance(text, str) else None
+    if match is None:
+        raise ValueError(
+            "send an RFC 3339 date-time with its offset, such as 2024-06-03T10:36:29Z (in a URL "
+            "a + is written %2B)"
+        )
+    day, minute, second, fraction, offset = match.groups()
+    is_leap = second == "60"
+    written = f"{day}T{minute}:{'59' if is_leap else second}{fraction or ''}"
+    parsed = datetime.fromisoformat(written + ("+00:00" if offset in "Zz" else offset))
+    instant = parsed.astimezone(UTC)
+    return instant.replace(microsecond=0) + timedelta(seconds=1) if is_leap else instant
+
+
+def _instant_or_date(text: object) -> datetime:
+    if isinstance(text, str) and re.fullmatch(r"\d{4}-\d\d-\d\d", text):
+        return datetime.combine(date.fromisoformat(text), time(), tzinfo=UTC)
+    return instant_from(text)
+
+
+def _written(instant: datetime) -> str:
+    return instant.astimezone(UTC).isoformat().replace("+00:00", "Z")
+
+
+def written(instant: datetime) -> str:
+    """Return an instant as the contract writes it: RFC 3339, in UTC, with a Z."""
+    return _written(instant)
+
+
+Instant = Annotated[datetime, BeforeValidator(instant_from)]
+"""An instant in a body: the offset is mandatory."""
+
+QueryInstant = Annotated[datetime, BeforeValidator(_instant_or_date)]
+"""An instant in a query: a bare date means 00:00 UTC."""
+
+InstantOut = Annotated[datetime, PlainSerializer(_written, return_type=str)]
+"""An instant as answered."""
+
+
+def checked_ref(ref: str) -> str:
+    """Return a ref if it is safe in URLs, logs and spreadsheets, and in Unicode form NFC."""
+    text = _checked_text(ref)
+    if "/" in text or text in (".", ".."):
+        raise ValueError("a ref contains no / and is neither . nor ..")
+    return text
+
+
+def _checked_text(text: str) -> str:
+    if not text.isprintable() or text != text.strip() or not text:
+        raise ValueError("send printable characters without a blank at either end")
+    if not unicodedata.is_normalized("NFC", text):
+        raise ValueError("send Unicode in its composed form (NFC)")
+    if text.startswith(_SPREADSHEET_FORMULA):
+        raise ValueError("do not begin with = + - or @: a spreadsheet would take it for a formula")
+    return text
+
+
+Ref = Annotated[str, Field(min_length=1, max_length=100), AfterValidator(checked_ref)]
+"""A client's own reference."""
+
+Text = Annotated[str, Field(min_length=1, max_length=100), AfterValidator(_checked_text)]
+"""A short line of text, such as a crop or a label."""
+
+LongText = Annotated[str, Field(min_length=1, max_length=200), AfterValidator(_checked_text)]
+"""A line of text, such as a name."""
+
+
+def _box(text: object) -> Box:
+    try:
+        west, south, east, north = (float(part) for part in str(text).split(","))
+    except ValueError:
+        raise ValueError("send west,south,east,north in degrees") from None
+    if not (-180 <= west <= 180 and -180 <= east <= 180 and -90 <= south <= north <= 90):
+        raise ValueError(
+            "send west,south,east,north within -180 to 180 and -90 to 90, south first; west may "
+            "be larger than east across the antimeridian"
+        )
+    return west, south, east, north
+
+
+QueryBox = Annotated[Any, BeforeValidator(_box)]
+"""A bounding box in a query: west,south,east,north in degrees."""
+
+
+def plural_error(count: int) -> str:
+    """Return the detail of a problem with several errors."""
+    return f"{count} things are wrong; see `errors`. Nothing was kept."
+
+
+def joined(names: Sequence[str]) -> str:
+    """Return names as a list in a sentence."""
+    return ", ".join(names)
