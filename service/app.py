@@ -11,6 +11,7 @@ from starlette.middleware.cors import CORSMiddleware
 
 from service import __version__
 from service.api import health, indices, keys, overview, parcels, scenes, seasons, series
+from service.api.bodies import JSON_LIMIT_BYTES
 from service.api.context import Context
 from service.api.problems import answer_problems
 from service.jobs.resources import Resources
@@ -53,6 +54,7 @@ def create_app(settings: Settings) -> FastAPI:
         "aid: check on the ground before acting; follow local rules and licensed advice.",
         docs_url=None,
         redoc_url=None,
+        max_body_size=JSON_LIMIT_BYTES,
         lifespan=lifespan,
     )
     app.state.context = Context(work=work, promise=worker.promise, queue_problem=worker.problem)

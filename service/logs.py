@@ -50,5 +50,7 @@ def set_up_logs(level: str) -> None:
     root = logging.getLogger()
     root.handlers[:] = [handler]
     root.setLevel(level.upper())
-    for noisy in ("dbos", "alembic", "rasterio", "uvicorn.access"):
+    for noisy in ("dbos", "alembic", "uvicorn.access"):
         logging.getLogger(noisy).setLevel(logging.WARNING)
+    # It warns of every driver to skip that its build does not have.
+    logging.getLogger("rasterio").setLevel(logging.ERROR)

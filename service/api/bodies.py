@@ -13,6 +13,7 @@ import ijson
 from fastapi import Depends, Request
 from starlette.concurrency import run_in_threadpool
 
+from service.api.preferences import preferences_of
 from service.errors import RejectedInput
 
 MEBIBYTE: Final = 1024**2
@@ -86,12 +87,11 @@ async def _bulk_body(request: Request) -> AsyncIterator[BulkBody]:
         digest = await stream_to(request, file.write, limit=BULK_LIMIT_BYTES)
         file.seek(0)
         media_type = request.headers.get("Content-Type", "").partition(";")[0].strip().lower()
-        preferences = request.headers.get("Prefer", "").replace(" ", "").lower().split(",")
         yield BulkBody(
             file=file,
             media_type=media_type,
             digest=digest,
-            is_lenient="handling=lenient" in preferences,
+            is_lenient=preferences_of(request).get("handling") == "lenient",
         )
 
 

@@ -12,7 +12,14 @@ from sqlalchemy import select
 from sqlalchemy.orm import Session
 
 from service.api.batches import Faults, model_of
-from service.api.bodies import Bulk, BulkBody, json_items, json_members, unsupported_media_type
+from service.api.bodies import (
+    BULK_LIMIT_BYTES,
+    Bulk,
+    BulkBody,
+    json_items,
+    json_members,
+    unsupported_media_type,
+)
 from service.api.context import Caller, Context, Ctx, Reader, Steward
 from service.api.overlaps import overlap_warnings
 from service.api.paging import Cursor, Limit, link_next, place_in
@@ -101,7 +108,7 @@ class BoundariesOut(BaseModel):
     boundaries: list[BoundaryOut]
 
 
-@router.put("", response_model=ParcelsPut)
+@router.put("", response_model=ParcelsPut, max_body_size=BULK_LIMIT_BYTES)
 def put_parcels(
     body: Bulk,
     caller: Steward,

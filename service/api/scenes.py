@@ -6,18 +6,20 @@ from itertools import islice
 from typing import Annotated, Any, Literal
 from urllib.parse import quote
 
-from fastapi import Query, Request, Response
+from fastapi import Query, Request, Response, status
 from pydantic import BaseModel
 from sqlalchemy import select
 from sqlalchemy.orm import Session
+from starlette.concurrency import run_in_threadpool
 
-from service.api.context import Caller, Ctx, Ingester, Reader
-from service.api.once import OnceOnly, json_answer
+from service.api.context import Caller, Context, Ctx, Ingester, Reader
+from service.api.once import Once, OnceOnly, json_answer
 from service.api.paging import Cursor, Limit, link_next, place_in
+from service.api.preferences import Wait, is_settled
 from service.api.problems import problem_document, status_of
 from service.api.routes import contract_router
 from service.api.scene_checks import checked_scene
-from service.api.uploads import SceneUpload
+from service.api.uploads import ANY_SIZE, SceneReceived, SceneUpload
 from service.api.wire import InstantOut, QueryBox, QueryInstant, Text, instant_from, written
 from service.clock import now
 from service.errors import RejectedInput
@@ -70,7 +72,7 @@ class ScenesOut(BaseModel):
 
 
 class SceneParcelOut(BaseModel):
-    """One parcel in one scene; shares are of the whole parcel."""
+    """One parcel in one scene; shares are of the whole parcel, null without a quality layer."""
 
     parcel: str
     state: Literal["measured", "unseen"]
@@ -78,12 +80,12 @@ class SceneParcelOut(BaseModel):
     is_small: bool
     pixels: float
     valid_share: float
-    cloud: float
-    shadow: float
-    snow: float
+    cloud: float | None
+    shadow: float | None
+    snow: float | None
     nodata: float
     saturation: float
-    water: float
+    water: float | None
 
 
 class SceneParcelsOut(BaseModel):
@@ -146,9 +148,9 @@ def _address(row: Scene) -> str:
     return f"/v1/scenes/{quote(row.ref, safe='')}"
 
 
-@router.post("", status_code=202, response_model=SceneOut)
-def receive_scene(
-    received: SceneUpload, caller: Ingester, context: Ctx, once: OnceOnly
+@router.post("", status_code=202, response_model=SceneOut, max_body_size=ANY_SIZE)
+async def receive_scene(
+    received: SceneUpload, caller: Ingester, context: Ctx, once: OnceOnly, wait: Wait
 ) -> Response:
     """Keep a scene and promise its ingest.
 
@@ -156,6 +158,13 @@ def receive_scene(
     enqueues it should this process die before the next line. The same content sent again
     answers 200 with the scene that is there.
     """
+    ref, answer = await run_in_threadpool(_keep, received, caller, context, once)
+    return await _held(ref, answer, caller, context, wait)
+
+
+def _keep(
+    received: SceneReceived, caller: Caller, context: Context, once: Once
+) -> tuple[str, Response]:
     caller.must_see_all("a scene")
     at = now()
     sent, paths = checked_scene(received, at=at)
@@ -164,20 +173,33 @@ def receive_scene(
     fingerprint = f"{sent.ref}\n{sent.digest}\n{sent.replace}"
     with context.sessions.writing() as session:
         if (first := once.replay(session, caller, fingerprint)) is not None:
-            return first
+            return sent.ref, first
         row, is_promised = keep_scene(session, sent, at=at)
-        answer = once.keep(
-            session,
-            caller,
-            fingerprint,
-            json_answer(
-                _out(session, row, caller), 202 if is_promised else 200, Location=_address(row)
-            ),
+        made = json_answer(
+            _out(session, row, caller), 202 if is_promised else 200, Location=_address(row)
         )
+        answer = once.keep(session, caller, fingerprint, made)
         promised = (row.id, row.generation)
     if is_promised:
         context.promise(*promised)
-    return answer
+    return sent.ref, answer
+
+
+async def _held(
+    ref: str, answer: Response, caller: Caller, context: Context, seconds: float
+) -> Response:
+    """Hold a promise's answer while the caller waits for the work; 200 once it is done."""
+    if answer.status_code != status.HTTP_202_ACCEPTED or not seconds:
+        return answer
+    if not await is_settled(context, ref, seconds):
+        return answer
+    made = await run_in_threadpool(_read, ref, caller, context)
+    return json_answer(made, Location=answer.headers["Location"])
+
+
+def _read(ref: str, caller: Caller, context: Context) -> SceneOut:
+    with context.sessions.reading() as session:
+        return _out(session, get_scene(session, ref), caller)
 
 
 @router.get("")
@@ -218,10 +240,11 @@ def _after(cursor: str | None) -> tuple[datetime, int] | None:
 
 
 @router.get("/{ref}")
-def get_one_scene(ref: str, caller: Reader, context: Ctx) -> SceneOut:
+async def get_one_scene(ref: str, caller: Reader, context: Ctx, wait: Wait) -> SceneOut:
     """Answer a scene: its state, and the report once it is measured."""
-    with context.sessions.reading() as session:
-        return _out(session, get_scene(session, ref), caller)
+    if wait:
+        await is_settled(context, ref, wait)
+    return await run_in_threadpool(_read, ref, caller, context)
 
 
 @router.get("/{ref}/parcels")
@@ -279,18 +302,26 @@ def _state(parcel: ParcelInScene) -> Literal["measured", "unseen"]:
 
 def _parcel_out(parcel: ParcelInScene, ref: str) -> SceneParcelOut:
     figures = ("pixels", "valid_share", *LOSSES, "water")
+    rule = parcel.observed.places.rule
     return SceneParcelOut(
         parcel=ref,
         state=_state(parcel),
         reason=parcel.reason,
         is_small=parcel.is_small,
-        **{figure: parcel.observed.of_look(figure) for figure in figures},
+        **{figure: parcel.observed.figure(f"{rule}.{figure}") for figure in figures},
     )
 
 
 @router.post("/{ref}/retry", status_code=202, response_model=SceneOut)
-def retry_one_scene(ref: str, caller: Ingester, context: Ctx, once: OnceOnly) -> Response:
+async def retry_one_scene(
+    ref: str, caller: Ingester, context: Ctx, once: OnceOnly, wait: Wait
+) -> Response:
     """Run a failed scene again."""
+    answer = await run_in_threadpool(_retry, ref, caller, context, once)
+    return await _held(ref, answer, caller, context, wait)
+
+
+def _retry(ref: str, caller: Caller, context: Context, once: Once) -> Response:
     caller.must_see_all("a scene")
     with context.sessions.writing() as session:
         if (first := once.replay(session, caller, ref)) is not None:

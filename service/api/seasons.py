@@ -9,7 +9,14 @@ from pydantic import BaseModel, Field
 from sqlalchemy.orm import Session
 
 from service.api.batches import Faults, model_of
-from service.api.bodies import Bulk, BulkBody, csv_rows, json_items, unsupported_media_type
+from service.api.bodies import (
+    BULK_LIMIT_BYTES,
+    Bulk,
+    BulkBody,
+    csv_rows,
+    json_items,
+    unsupported_media_type,
+)
 from service.api.context import Caller, Context, Ctx, Reader, Steward
 from service.api.once import OnceOnly, json_answer
 from service.api.routes import contract_router
@@ -107,7 +114,7 @@ def _out(row: CropSeason) -> SeasonOut:
     )
 
 
-@router.post("/seasons", response_model=SeasonsPosted)
+@router.post("/seasons", response_model=SeasonsPosted, max_body_size=BULK_LIMIT_BYTES)
 def post_seasons(body: Bulk, caller: Steward, context: Ctx, once: OnceOnly) -> Response:
     """Add or correct crop seasons: one as JSON object, many as JSON array or CSV."""
     faults = Faults()

@@ -171,18 +171,19 @@ def find_rival(session: Session, sent: SceneSent | Scene) -> Scene | None:
 
 def _written(session: Session, row: Scene | None, sent: SceneSent, *, at: datetime) -> Scene:
     """Write what was sent into its row, new or not, and promise the ingest."""
+    grid = _grid_row(session, sent.grid, sent.footprint)
     if row is None:
         row = Scene(ref=sent.ref, kind="measured", generation=0, received_at=at)
-        session.add(row)
     row.sensor, row.platform, row.tile = sent.sensor, sent.platform, sent.tile
     row.acquired_at, row.processing_baseline = sent.acquired_at, sent.processing_baseline
-    row.details, row.digest = dict(sent.details), sent.digest
-    row.grid = _grid_row(session, sent.grid, sent.footprint)
+    row.details, row.digest, row.grid = dict(sent.details), sent.digest, grid
     kept = {file.part: file for file in row.files}
     row.files = [
         _file_row(kept.get(file.part), file) for file in sorted(sent.files, key=lambda f: f.part)
     ]
-    _requeue(session, row, at=at)
+    _promise(row, at=at)
+    session.add(row)
+    session.flush()
     return row
 
 
@@ -214,12 +215,16 @@ def _grid_row(session: Session, grid: Grid, footprint: Box) -> GridRow:
 
 
 def _requeue(session: Session, row: Scene, *, at: datetime) -> None:
+    _promise(row, at=at)
+    session.flush()
+
+
+def _promise(row: Scene, *, at: datetime) -> None:
     row.generation += 1
     row.state = SceneState.QUEUED
     row.progress = 0.0
     row.failure = None
     row.changed_at = at
-    session.flush()
 
 
 def retry_scene(session: Session, ref: str, *, at: datetime) -> Scene:

@@ -1,0 +1,48 @@
+"""What callers prefer (RFC 7240): to have good items land alone, to have the answer held."""
+
+from typing import Annotated, Final
+
+import anyio
+from fastapi import Depends, Request
+from sqlalchemy import select
+from starlette.concurrency import run_in_threadpool
+
+from service.api.context import Context
+from service.store.scenes import SceneState
+from service.store.tables import Scene
+
+MAX_WAIT_SECONDS: Final = 60.0
+_POLL_SECONDS: Final = 0.05
+_UNSETTLED: Final = (SceneState.QUEUED, SceneState.RUNNING)
+
+
+def preferences_of(request: Request) -> dict[str, str]:
+    """Return the preferences of a request by name; an empty value where none is given."""
+    found = {}
+    for entry in ",".join(request.headers.getlist("Prefer")).split(","):
+        name, _, value = entry.partition(";")[0].partition("=")
+        found[name.strip().lower()] = value.strip().strip('"').lower()
+    return found
+
+
+def _wait_seconds(request: Request) -> float:
+    value = preferences_of(request).get("wait", "")
+    return min(float(value), MAX_WAIT_SECONDS) if value.isdecimal() else 0.0
+
+
+Wait = Annotated[float, Depends(_wait_seconds)]
+"""For how many seconds the caller is ready to wait for the work to be done."""
+
+
+async def is_settled(context: Context, ref: str, seconds: float) -> bool:
+    """Wait until a scene's work is done or has failed; return whether that came in time."""
+    with anyio.move_on_after(seconds):
+        while not await run_in_threadpool(_look, context, ref):
+            await anyio.sleep(_POLL_SECONDS)
+        return True
+    return False
+
+
+def _look(context: Context, ref: str) -> bool:
+    with context.sessions.reading() as session:
+        return session.scalar(select(Scene.state).where(Scene.ref == ref)) not in _UNSETTLED
