@@ -61,6 +61,9 @@ class Settings(BaseSettings):
     queue_polling_seconds: float = Field(
         default=0.5, ge=0.02, le=60, description="How often the worker looks for work."
     )
+    drain_seconds: int = Field(
+        default=10, ge=0, le=600, description="How long an ending worker waits for its work."
+    )
     log_level: str = Field(default="info", pattern="^(debug|info|warning|error)$")
 
     @field_validator("allowed_origins", mode="before")

@@ -293,7 +293,7 @@ def _within(session: Session, row: Scene, holdings: Collection[str] | None) -> l
 
 def _refs(session: Session, parcel_ids: Iterable[int]) -> dict[int, str]:
     query = select(Parcel.id, Parcel.ref).where(Parcel.id.in_(list(parcel_ids)))
-    return dict(session.execute(query).tuples().all())
+    return dict(session.execute(query).all())
 
 
 def _state(parcel: ParcelInScene) -> Literal["measured", "unseen"]:

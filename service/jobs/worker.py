@@ -27,6 +27,7 @@ class Worker:
         self._work = work
         self._lock = fasteners.InterProcessLock(work.settings.data / "worker.lock")
         self._upkeep: Upkeep | None = None
+        self._engine: Engine | None = None
 
     def start(self) -> None:
         """Launch the engine, resume what was interrupted, and begin the upkeep.
@@ -43,12 +44,12 @@ class Worker:
         self._work.archive.clear_incoming()
         lend(self._work)
         settings = self._work.settings
-        engine = _engine(settings.engine_url, settings.data)
+        self._engine = _engine(settings.engine_url, settings.data)
         DBOS(
             config=DBOSConfig(
                 name="furrowlight",
                 system_database_url=settings.engine_url,
-                system_database_engine=engine,
+                system_database_engine=self._engine,
                 dbos_system_schema="queue",
                 application_version=_APPLICATION_VERSION,
                 executor_id=_EXECUTOR,
@@ -82,7 +83,9 @@ class Worker:
         """Take no more work, let what goes on end within seconds, and let go of the folder."""
         if self._upkeep is not None:
             self._upkeep.stop()
-        DBOS.destroy(workflow_completion_timeout_sec=10)
+        DBOS.destroy(workflow_completion_timeout_sec=self._work.settings.drain_seconds)
+        if self._engine is not None:
+            self._engine.dispose()
         lend(None)
         self._lock.release()
 

@@ -90,7 +90,7 @@ def _measured_outlines(session: Session, scene: Scene) -> dict[int, int]:
         .where(Write.scene_id == scene.id, Write.closed_at.is_(None), Write.digest == scene.digest)
         .order_by(Observation.write_id)
     )
-    return dict(session.execute(query).tuples().all())
+    return dict(session.execute(query).all())
 
 
 def has_write(session: Session, scene: Scene, generation: int) -> bool:
