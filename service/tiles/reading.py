@@ -28,7 +28,7 @@ from service.tiles.intake import Header, check_together, inspect, open_raster
 from service.tiles.parts import Area, part_shape, wanted_areas
 from service.zonal.grid import Grid
 
-STRIP_BYTES: Final = 64 * 2**20
+BLOCK_BYTES: Final = 64 * 2**20
 """Memory of one block, all bands together."""
 
 # A quarter of the raster library's cache (`environment`): a row of blocks that is read
@@ -128,7 +128,9 @@ def measuring_grid(source: SceneSource) -> Grid:
     return _finest([inspect(band.path, pointer=band.pointer).grid for band in source.bands])
 
 
-def read_blocks(source: SceneSource, cells: NDArray[np.int64]) -> Iterator[xr.Dataset]:
+def read_blocks(
+    source: SceneSource, cells: NDArray[np.int64], *, block_bytes: int = BLOCK_BYTES
+) -> Iterator[xr.Dataset]:
     """Yield the parts of a scene that hold the wanted cells.
 
     Parameters
@@ -137,6 +139,8 @@ def read_blocks(source: SceneSource, cells: NDArray[np.int64]) -> Iterator[xr.Da
         The scene's files.
     cells
         Flat row-major indices on the measuring grid, ascending and unique, shape (n,).
+    block_bytes
+        About how much memory a block may take.
 
     Yields
     ------
@@ -147,7 +151,7 @@ def read_blocks(source: SceneSource, cells: NDArray[np.int64]) -> Iterator[xr.Da
         the file's numbers in its type, with attributes ``scale``, ``offset``, ``nodata``,
         ``saturated``. Where a band has no cell stands its nodata number; a band without
         one comes as float with NaN. Rectangles do not overlap, each takes at most about
-        `STRIP_BYTES`, and together they hold every wanted cell once.
+        `block_bytes`, and together they hold every wanted cell once.
 
     Raises
     ------
@@ -162,7 +166,7 @@ def read_blocks(source: SceneSource, cells: NDArray[np.int64]) -> Iterator[xr.Da
             for layer in file.layers
         )
         headers = [file.header for file in scene.files]
-        part = part_shape(scene.grid, headers, cells=max(1, STRIP_BYTES // cell_bytes))
+        part = part_shape(scene.grid, headers, cells=max(1, block_bytes // cell_bytes))
         for area in wanted_areas(scene.grid, part, cells):
             yield _read_area(scene, area)
 

@@ -17,7 +17,6 @@ from numpy.typing import NDArray
 from service.errors import RejectedInput
 from service.spectral.roles import BandRole
 from service.spectral.scaling import Scaling
-from service.tiles import reading
 from service.tiles.reading import (
     BandSource,
     SceneSource,
@@ -82,13 +81,6 @@ def nearest(
     return found
 
 
-@pytest.fixture
-def small_strips(monkeypatch: pytest.MonkeyPatch) -> None:
-    """Shrink the memory of a block, so that small files are read in many."""
-    monkeypatch.setattr(reading, "STRIP_BYTES", 10_000)
-
-
-@pytest.mark.usefixtures("small_strips")
 @pytest.mark.parametrize("options", [TILED, {"blockysize": 1}, {"blockysize": 16}])
 def test_blocks_put_together_are_what_was_written(
     write_raster: WriteRaster, options: dict[str, Any]
@@ -98,7 +90,7 @@ def test_blocks_put_together_are_what_was_written(
         band(RED, write_raster("red.tif", red, **options)),
         band(NIR, write_raster("nir.tif", nir, **TILED)),
     )
-    blocks = list(read_blocks(source, all_cells(source)))
+    blocks = list(read_blocks(source, all_cells(source), block_bytes=10_000))
     assert len(blocks) > 10
     assert max(block.nbytes for block in blocks) < 2 * 10_000
     assert {block["red"].dtype for block in blocks} == {np.dtype("uint16")}
@@ -125,29 +117,26 @@ def test_a_block_says_where_it_lies_and_what_its_numbers_mean(write_raster: Writ
     assert block.rio.transform()[:6] == (10.0, 0.0, 500_070.0, 0.0, -10.0, 5_399_890.0)
 
 
-@pytest.mark.usefixtures("small_strips")
 def test_only_parts_that_hold_wanted_cells_are_read(write_raster: WriteRaster) -> None:
     red = numbers(400, 90)
     source = scene(band(RED, write_raster("red.tif", red, **TILED)))
     wanted = np.array([5 * 90 + 3, 5 * 90 + 4, 300 * 90 + 80, 310 * 90 + 70], dtype=np.int64)
-    blocks = list(read_blocks(source, wanted))
+    blocks = list(read_blocks(source, wanted, block_bytes=10_000))
     places = [(b.attrs["row0"], b.attrs["col0"], b["red"].shape) for b in blocks]
     assert places == [(5, 3, (1, 2)), (300, 70, (11, 11))]
     assert list(read_blocks(source, np.empty(0, dtype=np.int64))) == []
 
 
-@pytest.mark.usefixtures("small_strips")
 def test_every_wanted_cell_comes_exactly_once(write_raster: WriteRaster) -> None:
     red = numbers(200, 300)
     source = scene(band(RED, write_raster("red.tif", red, **TILED)))
     wanted = np.sort(RNG.choice(red.size, 500, replace=False)).astype(np.int64)
-    blocks = list(read_blocks(source, wanted))
+    blocks = list(read_blocks(source, wanted, block_bytes=10_000))
     assert len(blocks) > 3
     whole = put_together(blocks, "red", red.shape)
     np.testing.assert_array_equal(whole.ravel()[wanted], red.ravel()[wanted])
 
 
-@pytest.mark.usefixtures("small_strips")
 def test_coarser_bands_are_taken_at_the_finer_cells_centre(write_raster: WriteRaster) -> None:
     fine, half = numbers(60, 66), numbers(30, 33)
     # 30 m from a corner of its own, so that cells neither nest nor share an edge.
@@ -158,7 +147,7 @@ def test_coarser_bands_are_taken_at_the_finer_cells_centre(write_raster: WriteRa
         band(NIR, write_raster("nir.tif", half, transform=grid_transform(20.0), blockysize=3)),
     )
     assert measuring_grid(source).shape == fine.shape
-    blocks = list(read_blocks(source, all_cells(source)))
+    blocks = list(read_blocks(source, all_cells(source), block_bytes=10_000))
     assert len(blocks) > 3
     at = grid_transform(10.0)
     for name, expected in (
@@ -171,7 +160,6 @@ def test_coarser_bands_are_taken_at_the_finer_cells_centre(write_raster: WriteRa
     np.testing.assert_array_equal(read_tile(source)["swir16"], nearest(odd, odd_at, fine.shape, at))
 
 
-@pytest.mark.usefixtures("small_strips")
 @pytest.mark.parametrize(
     ("dtype", "nodata", "expected_dtype"),
     [
@@ -197,20 +185,19 @@ def test_outside_a_bands_extent_stands_its_nodata_or_nan(
     assert np.isnan(expected).any()
     if nodata in (0.0, -1.0):
         expected = np.where(np.isnan(expected), nodata, expected)
-    blocks = list(read_blocks(source, all_cells(source)))
+    blocks = list(read_blocks(source, all_cells(source), block_bytes=10_000))
     assert len(blocks) > 1
     assert {block["nir"].dtype for block in blocks} == {np.dtype(expected_dtype)}
     np.testing.assert_array_equal(put_together(blocks, "nir", fine.shape), expected)
 
 
-@pytest.mark.usefixtures("small_strips")
 @pytest.mark.parametrize("interleave", ["pixel", "band"])
 def test_bands_of_a_stack_are_counted_from_one(write_raster: WriteRaster, interleave: str) -> None:
     stack = np.stack([numbers(70, 80, "uint8") for _ in range(4)])
     path = write_raster("stack.tif", stack, interleave=interleave, **TILED)
     quality = BandSource(role="quality", path=path, scaling=None, band=4, nodata=0.0)
     source = scene(band(NIR, path, band=3), band(RED, path, band=1), quality=quality)
-    blocks = list(read_blocks(source, all_cells(source)))
+    blocks = list(read_blocks(source, all_cells(source), block_bytes=10_000))
     for name, index in (("nir", 2), ("red", 0), ("quality", 3)):
         np.testing.assert_array_equal(put_together(blocks, name, stack.shape[1:]), stack[index])
     assert blocks[0]["quality"].dtype == np.uint8
@@ -242,7 +229,6 @@ def test_lossless_jpeg2000_comes_back_as_written(write_raster: WriteRaster) -> N
     np.testing.assert_array_equal(tile["quality"], np.repeat(np.repeat(quality, 2, 0), 2, 1))
 
 
-@pytest.mark.usefixtures("small_strips")
 def test_rows_that_run_north_are_read_as_they_lie(write_raster: WriteRaster) -> None:
     up = Affine(10.0, 0.0, 500_000.0, 0.0, 10.0, 5_400_000.0)
     coarse_up = Affine(20.0, 0.0, 500_000.0, 0.0, 20.0, 5_400_000.0)
@@ -251,7 +237,7 @@ def test_rows_that_run_north_are_read_as_they_lie(write_raster: WriteRaster) -> 
         band(RED, write_raster("red.tif", red, transform=up)),
         band(NIR, write_raster("nir.tif", nir, transform=coarse_up)),
     )
-    blocks = list(read_blocks(source, all_cells(source)))
+    blocks = list(read_blocks(source, all_cells(source), block_bytes=10_000))
     np.testing.assert_array_equal(put_together(blocks, "red", red.shape), red)
     np.testing.assert_array_equal(
         put_together(blocks, "nir", red.shape), np.repeat(np.repeat(nir, 2, 0), 2, 1)
