@@ -2,7 +2,7 @@
 
 from alembic import context
 
-from service.store.tables import Base
+from service.store.alert_tables import Base
 
 connection = context.config.attributes["connection"]
 context.configure(

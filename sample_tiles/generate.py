@@ -8,56 +8,31 @@ sea of UTM zone 33N, so that no real field is shown.
 """
 
 import argparse
-import json
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
-import rasterio
-import shapely
-from affine import Affine
 from numpy.typing import NDArray
-from pyproj import Transformer
-from rasterio.features import rasterize
-from shapely.affinity import affine_transform
-from shapely.geometry import Polygon, box, mapping
-from shapely.geometry.polygon import orient
+from quillmere.surfaces import CELL_M, CLOUD_REFLECTANCE, ROLES, SHADOW_LIGHT, SURFACES
+from quillmere.tile import (
+    FINE_M,
+    SIDE_M,
+    Image,
+    averaged,
+    cells_inside,
+    geometry_of,
+    numbers_stored,
+    texture,
+    write_band,
+    write_json,
+)
+from shapely.geometry import Polygon, box
 
-Image = NDArray[np.float64]
 Point = tuple[float, float]
 
 DEFAULT_SEED: Final = 1106
-CRS: Final = "EPSG:32633"
-WEST_M: Final = 530_400.0
-NORTH_M: Final = 6_152_800.0
-SIDE_M: Final = 1920.0
-# The land is drawn on cells four times finer than the finest band, so that a cell on a
-# parcel's edge holds the mean of both sides, as a sensor would see it.
-FINE_M: Final = 2.5
-
-ROLES: Final = ("blue", "green", "red", "rededge071", "nir", "swir16", "swir22")
-CELL_M: Final = {
-    "blue": 10.0, "green": 10.0, "red": 10.0, "nir": 10.0,
-    "rededge071": 20.0, "swir16": 20.0, "swir22": 20.0, "quality": 20.0,
-}  # fmt: skip
-
-# Surface reflectance 0-1 in the order of ROLES. Canopy: PROSAIL run at leaf area index 3
-# (Jacquemoud et al. 2009). Soil: mean of 4248 laboratory spectra, times 0.6 because a field
-# is darker than a sieved sample. Stubble: mean of library spectra of litter, bark and wood.
-# Water: real clear-ish water samples. Cloud: medians of thick cloud in open samples. The
-# red-edge column and the cloud's blue, red-edge and swir22 are read between neighbours,
-# from memory of typical shapes.
-SURFACES: Final[Mapping[str, tuple[float, ...]]] = {
-    "canopy": (0.030, 0.050, 0.030, 0.092, 0.420, 0.230, 0.100),
-    "soil": (0.078, 0.120, 0.174, 0.186, 0.216, 0.282, 0.252),
-    "stubble": (0.090, 0.120, 0.170, 0.190, 0.270, 0.390, 0.280),
-    "water": (0.024, 0.040, 0.017, 0.016, 0.015, 0.021, 0.020),
-}
-CLOUD_REFLECTANCE: Final = (0.640, 0.640, 0.630, 0.650, 0.680, 0.470, 0.350)
-# Diffuse light reaches a shadow, more of it in the short wavelengths (typical, from memory).
-SHADOW_LIGHT: Final = (0.55, 0.48, 0.42, 0.40, 0.36, 0.28, 0.26)
 
 # Shares of each surface in a cover class; they add up to 1.
 COVERS: Final[Mapping[str, Mapping[str, float]]] = {
@@ -160,41 +135,13 @@ SCENES: Final = (
 )
 
 
-def grid_transform(cell_m: float) -> Affine:
-    """Return the affine transform of the tile at one cell size."""
-    return Affine(cell_m, 0, WEST_M, 0, -cell_m, NORTH_M)
-
-
-def on_map(shape: Polygon) -> Polygon:
-    """Return a shape given in metres right of and below the corner, in map coordinates."""
-    return affine_transform(shape, [1, 0, 0, -1, WEST_M, NORTH_M])
-
-
-def burned(shape: Polygon) -> NDArray[np.bool_]:
-    """Return which fine cells have their centre in a shape."""
-    side = round(SIDE_M / FINE_M)
-    mask: NDArray[np.uint8] = rasterize(
-        [(on_map(shape), 1)], (side, side), transform=grid_transform(FINE_M), dtype="uint8"
-    )
-    return mask.astype(np.bool_)
-
-
-def texture(random: np.random.Generator) -> Image:
-    """Return a smooth field of mean 0 and spread about 1 over the fine cells."""
-    side = round(SIDE_M / FINE_M)
-    knots = random.normal(size=(25, 25))
-    at = np.linspace(0, 24, side)
-    rows = np.stack([np.interp(at, np.arange(25), column) for column in knots.T], axis=1)
-    return np.stack([np.interp(at, np.arange(25), row) for row in rows], axis=0)
-
-
 def surface_shares(parcels: Sequence[Parcel], random: np.random.Generator) -> dict[str, Image]:
     """Return the share of each surface in every fine cell; they add up to 1 in each."""
     side = round(SIDE_M / FINE_M)
     drawn = [(parcel.shape, parcel.cover) for parcel in parcels] + [(Polygon(YARD), "bare")]
     shares = {name: np.full((side, side), COVERS["margin"].get(name, 0.0)) for name in SURFACES}
     for shape, cover in drawn:
-        inside = burned(shape)
+        inside = cells_inside(shape)
         for name in SURFACES:
             shares[name][inside] = COVERS[cover].get(name, 0.0)
     # Stand density varies within a field, at the expense of bare soil.
@@ -225,13 +172,6 @@ def cloud_cover(clouds: Sequence[Cloud]) -> tuple[Image, Image]:
     return opacity, shade
 
 
-def averaged(fine: Image, cell_m: float) -> Image:
-    """Return means over the cells of a band."""
-    step = round(cell_m / FINE_M)
-    side = fine.shape[0] // step
-    return np.asarray(fine.reshape(side, step, side, step).mean(axis=(1, 3)))
-
-
 def band_numbers(
     role: str,
     *,
@@ -246,8 +186,7 @@ def band_numbers(
     lit = ground * (1.0 - shade * (1.0 - SHADOW_LIGHT[at]))
     seen = averaged(lit * (1.0 - opacity) + CLOUD_REFLECTANCE[at] * opacity, CELL_M[role])
     noisy = seen + random.normal(size=seen.shape) * (0.001 + 0.01 * seen)
-    # Reflectance = number / 10000 - 0.1 since baseline 04.00; 0 and 65535 are reserved.
-    return np.clip(np.rint((noisy + 0.1) * 10_000), 1, 65_534).astype(np.uint16)
+    return numbers_stored(noisy)
 
 
 def quality_classes(
@@ -268,22 +207,8 @@ def quality_classes(
     return classes.astype(np.uint8)
 
 
-def write_band(path: Path, numbers: NDArray[Any], cell_m: float) -> None:
-    """Write one single-band GeoTIFF whose nodata number is 0."""
-    with rasterio.open(
-        path, "w", driver="GTiff", height=numbers.shape[0], width=numbers.shape[1], count=1,
-        dtype=numbers.dtype.name, crs=CRS, transform=grid_transform(cell_m), nodata=0,
-        compress="deflate", predictor=2, tiled=True, blockxsize=64, blockysize=64,
-    ) as file:  # fmt: skip
-        file.write(numbers, 1)
-
-
 def feature_of(parcel: Parcel) -> dict[str, Any]:
     """Return the GeoJSON feature of a parcel, WGS 84, as `PUT /v1/parcels` takes it."""
-    to_lonlat = Transformer.from_crs(CRS, "EPSG:4326", always_xy=True).transform
-    shape = orient(shapely.transform(on_map(parcel.shape), to_lonlat, interleaved=False))
-    rings = [[[round(lon, 7), round(lat, 7)] for lon, lat in ring]
-             for ring in mapping(shape)["coordinates"]]  # fmt: skip
     properties: dict[str, Any] = {
         "ref": parcel.ref,
         "name": parcel.name,
@@ -292,8 +217,7 @@ def feature_of(parcel: Parcel) -> dict[str, Any]:
     }
     if parcel.crop is not None:
         properties["crop"] = parcel.crop
-    geometry = {"type": "Polygon", "coordinates": rings}
-    return {"type": "Feature", "properties": properties, "geometry": geometry}
+    return {"type": "Feature", "properties": properties, "geometry": geometry_of(parcel.shape)}
 
 
 def scene_part(scene: Scene) -> dict[str, Any]:
@@ -324,7 +248,7 @@ def truth_of(parcel: Parcel, classes: NDArray[np.uint8]) -> dict[str, Any]:
     of them on its edge, lies between its cover and the margin around it.
     """
     shape = parcel.shape
-    inside = burned(shape)
+    inside = cells_inside(shape)
     step = round(CELL_M["quality"] / FINE_M)
     found = np.repeat(np.repeat(classes, step, axis=0), step, axis=1)[inside]
     on_tile = shape.intersection(box(0, 0, SIDE_M, SIDE_M)).area / shape.area
@@ -345,11 +269,6 @@ def truth_of(parcel: Parcel, classes: NDArray[np.uint8]) -> dict[str, Any]:
         "small": is_small,
         "ndvi": [round(min(ends) - 0.08, 3), round(max(ends) + 0.08, 3)],
     }
-
-
-def write_json(path: Path, document: Mapping[str, Any]) -> None:
-    """Write a JSON document, readable and the same each time."""
-    path.write_text(json.dumps(document, indent=1, ensure_ascii=False) + "\n", encoding="utf-8")
 
 
 def write_scene(folder: Path, scene: Scene, parcels: Sequence[Parcel], *, seed: int) -> None:

@@ -10,22 +10,52 @@ from starlette.concurrency import run_in_threadpool
 from starlette.middleware.cors import CORSMiddleware
 
 from service import __version__
-from service.api import health, indices, keys, overview, parcels, scenes, seasons, series
-from service.api.bodies import JSON_LIMIT_BYTES
+from service.api import (
+    alerts,
+    baselines,
+    health,
+    indices,
+    keys,
+    observations,
+    overview,
+    parcels,
+    scenes,
+    seasons,
+    series,
+    webhooks,
+)
 from service.api.context import Context
 from service.api.problems import answer_problems
+from service.errors import Unavailable
 from service.jobs.resources import Resources
 from service.jobs.worker import Worker
 from service.settings import Settings
 from service.store.sessions import Sessions, migrate, open_engine
 from service.tiles.archive import Archive
 
-_ROUTERS = (keys, parcels, seasons, scenes, indices, series, overview, health)
+_ROUTERS = (
+    keys,
+    parcels,
+    seasons,
+    scenes,
+    observations,
+    indices,
+    series,
+    baselines,
+    overview,
+    alerts,
+    webhooks,
+    health,
+)
 
 
 def open_resources(settings: Settings) -> Resources:
     """Open the data folder and the database, making and migrating what is not there."""
-    settings.data.mkdir(parents=True, exist_ok=True)
+    try:
+        settings.data.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        detail = f"The data folder can't be made: {error.strerror}."
+        raise Unavailable("not-ready", detail) from error
     engine = open_engine(settings.app_url)
     migrate(engine, lock_folder=settings.data)
     return Resources(
@@ -54,10 +84,10 @@ def create_app(settings: Settings) -> FastAPI:
         "aid: check on the ground before acting; follow local rules and licensed advice.",
         docs_url=None,
         redoc_url=None,
-        max_body_size=JSON_LIMIT_BYTES,
         lifespan=lifespan,
     )
-    app.state.context = Context(work=work, promise=worker.promise, queue_problem=worker.problem)
+    app.state.claim = worker.claim
+    app.state.context = Context(work=work, queue=worker)
     for module in _ROUTERS:
         app.include_router(module.router)
     answer_problems(app)

@@ -14,7 +14,8 @@ Column = Sequence[Any]
 class MeasureSeries:
     """One measure of one parcel in time order, by column.
 
-    `stats` are by name, None where unknown; instants are written as RFC 3339 in UTC.
+    `stats` are by name, None where unknown; instants are written as RFC 3339 in UTC. A name
+    with a point, ``baseline.mid``, is a column of a group.
     """
 
     measure: str
@@ -56,16 +57,26 @@ def json_by_column(series: ParcelSeries) -> bytes:
     """Write JSON with one array a column, ready to plot."""
     document = {
         "parcel": series.parcel,
-        "indices": {measure.measure: measure.columns() for measure in series.measures},
+        "indices": {measure.measure: _grouped(measure.columns()) for measure in series.measures},
     }
     return json.dumps(document, ensure_ascii=False, allow_nan=False).encode()
+
+
+def _grouped(columns: Mapping[str, Column]) -> dict[str, Any]:
+    """Return the columns with those of a group together."""
+    grouped: dict[str, Any] = {}
+    for name, column in columns.items():
+        group, _, member = name.rpartition(".")
+        (grouped.setdefault(group, {}) if group else grouped)[member] = column
+    return grouped
 
 
 def long_csv(series: ParcelSeries) -> bytes:
     """Write CSV with one row an observation and measure (RFC 4180); unknown is empty."""
     text = io.StringIO()
     writer = csv.writer(text)
-    writer.writerow(["parcel", "index", "observed_at", "scene", "sensor", "crop", *series.stats])
+    stats = [name.replace(".", "_") for name in series.stats]
+    writer.writerow(["parcel", "index", "observed_at", "scene", "sensor", "crop", *stats])
     for measure in series.measures:
         for row in zip(*measure.columns().values(), strict=True):
             writer.writerow([series.parcel, measure.measure, *row])

@@ -1,5 +1,6 @@
 """What an operator can set, by environment variables named ``FURROWLIGHT_…``."""
 
+from ipaddress import ip_network
 from pathlib import Path
 from typing import Annotated
 
@@ -58,6 +59,22 @@ class Settings(BaseSettings):
         pattern=r"^(0[1-9]|1[0-2])-(0[1-9]|1\d|2[0-8])$",
         description="First day of the crop year (MM-DD) for parcels south of the equator.",
     )
+    event_prefix: str = Field(
+        default="app.furrowlight",
+        pattern=r"^[a-z][a-z0-9-]*(\.[a-z0-9-]+)+$",
+        description="Reverse domain name before the names of events.",
+    )
+    public_url: str = Field(
+        default="", description="Address under which receivers of events reach the service."
+    )
+    webhook_networks: Annotated[tuple[str, ...], NoDecode] = Field(
+        default=(),
+        description="Networks (CIDR, comma-separated) that webhooks may reach beyond public "
+        "addresses, also by plain http.",
+    )
+    delivery_wait_scale: float = Field(
+        default=1.0, gt=0, le=10, description="Stretches the waits between delivery attempts."
+    )
     queue_polling_seconds: float = Field(
         default=0.5, ge=0.02, le=60, description="How often the worker looks for work."
     )
@@ -66,12 +83,22 @@ class Settings(BaseSettings):
     )
     log_level: str = Field(default="info", pattern="^(debug|info|warning|error)$")
 
-    @field_validator("allowed_origins", mode="before")
+    @field_validator("allowed_origins", "webhook_networks", mode="before")
     @classmethod
-    def _split_origins(cls, value: object) -> object:
+    def _split(cls, value: object) -> object:
         if isinstance(value, str):
             return tuple(part.strip() for part in value.split(",") if part.strip())
         return value
+
+    @field_validator("webhook_networks")
+    @classmethod
+    def _are_networks(cls, value: tuple[str, ...]) -> tuple[str, ...]:
+        return tuple(str(ip_network(text)) for text in value)
+
+    @property
+    def season_starts(self) -> tuple[str, str]:
+        """When crop years begin, north and south of the equator."""
+        return self.season_start_north, self.season_start_south
 
     @property
     def app_url(self) -> str:

@@ -7,7 +7,7 @@ Revises:
 import sqlalchemy as sa
 from alembic import op
 
-from service.store.columns import Figures, UtcDateTime
+from service.store.columns import Figure, Figures, UtcDateTime
 
 revision = "0001"
 down_revision = None
@@ -32,6 +32,29 @@ def upgrade() -> None:
         sa.UniqueConstraint("digest"),
         sa.UniqueConstraint("public_id"),
     )
+    op.create_table(
+        "baseline",
+        sa.Column("id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False),
+        sa.Column("axis", sa.String(length=5), nullable=False),
+        sa.Column("season", sa.Integer(), nullable=False),
+        sa.Column("history", sa.String(length=64), nullable=False),
+        sa.Column("version", sa.String(length=64), nullable=False),
+        sa.Column("measures", sa.JSON(), nullable=False),
+        sa.Column("arrays", sa.LargeBinary(), nullable=False),
+        sa.Column("fitted_at", UtcDateTime(), nullable=False),
+        sa.PrimaryKeyConstraint("id"),
+    )
+    op.create_index("ix_baseline_season", "baseline", ["axis", "season"], unique=False)
+    op.create_table(
+        "event",
+        sa.Column("id", sa.String(length=60), nullable=False),
+        sa.Column("name", sa.String(length=40), nullable=False),
+        sa.Column("subject", sa.String(length=120), nullable=False),
+        sa.Column("body", sa.LargeBinary(), nullable=False),
+        sa.Column("recorded_at", UtcDateTime(), nullable=False),
+        sa.PrimaryKeyConstraint("id"),
+    )
+    op.create_index(op.f("ix_event_recorded_at"), "event", ["recorded_at"], unique=False)
     op.create_table(
         "grid",
         sa.Column("id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False),
@@ -60,9 +83,10 @@ def upgrade() -> None:
         sa.Column("parcel_id", sa.BigInteger(), autoincrement=False, nullable=False),
         sa.Column("acquired_at", UtcDateTime(), nullable=False),
         sa.Column("write_id", sa.BigInteger(), nullable=False),
-        sa.Column("value", sa.Float(precision=24), nullable=True),
-        sa.Column("valid_share", sa.Float(precision=24), nullable=False),
+        sa.Column("value", Figure(), nullable=True),
+        sa.Column("valid_share", Figure(), nullable=False),
         sa.PrimaryKeyConstraint("measure", "parcel_id"),
+        postgresql_with={"fillfactor": 45},
         sqlite_with_rowid=False,
     )
     op.create_table(
@@ -87,6 +111,31 @@ def upgrade() -> None:
     )
     op.create_index("ix_observation_write", "observation", ["write_id"], unique=False)
     op.create_table(
+        "season_fold",
+        sa.Column("axis", sa.String(length=5), nullable=False),
+        sa.Column("season", sa.Integer(), autoincrement=False, nullable=False),
+        sa.Column("wanted", sa.Integer(), nullable=False),
+        sa.Column("done", sa.Integer(), nullable=False),
+        sa.Column("state", sa.LargeBinary(), nullable=True),
+        sa.PrimaryKeyConstraint("axis", "season"),
+    )
+    op.create_table(
+        "webhook",
+        sa.Column("id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False),
+        sa.Column("public_id", sa.String(length=40), nullable=False),
+        sa.Column("url", sa.String(), nullable=False),
+        sa.Column("events", sa.JSON(), nullable=False),
+        sa.Column("holdings", sa.JSON(none_as_null=True), nullable=True),
+        sa.Column("min_severity", sa.String(length=10), nullable=True),
+        sa.Column("secret", sa.String(length=120), nullable=False),
+        sa.Column("old_secret", sa.String(length=120), nullable=True),
+        sa.Column("old_secret_until", UtcDateTime(), nullable=True),
+        sa.Column("state", sa.String(length=20), nullable=False),
+        sa.Column("created_at", UtcDateTime(), nullable=False),
+        sa.PrimaryKeyConstraint("id"),
+        sa.UniqueConstraint("public_id"),
+    )
+    op.create_table(
         "answer",
         sa.Column(
             "api_key_id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False
@@ -104,6 +153,51 @@ def upgrade() -> None:
         sa.PrimaryKeyConstraint("api_key_id", "name"),
     )
     op.create_index(op.f("ix_answer_recorded_at"), "answer", ["recorded_at"], unique=False)
+    op.create_table(
+        "delivery",
+        sa.Column("id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False),
+        sa.Column("public_id", sa.String(length=40), nullable=False),
+        sa.Column("event_id", sa.String(length=60), nullable=False),
+        sa.Column(
+            "webhook_id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False
+        ),
+        sa.Column("state", sa.String(length=20), nullable=False),
+        sa.Column("generation", sa.Integer(), nullable=False),
+        sa.Column("attempts", sa.Integer(), nullable=False),
+        sa.Column("earlier_attempts", sa.Integer(), nullable=False),
+        sa.Column("begun_at", UtcDateTime(), nullable=False),
+        sa.Column("next_at", UtcDateTime(), nullable=False),
+        sa.ForeignKeyConstraint(
+            ["event_id"],
+            ["event.id"],
+        ),
+        sa.ForeignKeyConstraint(["webhook_id"], ["webhook.id"], ondelete="CASCADE"),
+        sa.PrimaryKeyConstraint("id"),
+        sa.UniqueConstraint("public_id"),
+    )
+    op.create_index("ix_delivery_state", "delivery", ["state"], unique=False)
+    op.create_index("ix_delivery_webhook", "delivery", ["webhook_id", "id"], unique=False)
+    op.create_index("ux_delivery_event", "delivery", ["event_id", "webhook_id"], unique=True)
+    op.create_table(
+        "judgement",
+        sa.Column("parcel_id", sa.BigInteger(), autoincrement=False, nullable=False),
+        sa.Column("acquired_at", UtcDateTime(), nullable=False),
+        sa.Column(
+            "baseline_id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False
+        ),
+        sa.Column("crop", sa.String(length=100), nullable=True),
+        sa.Column("score", sa.Float(precision=53), nullable=True),
+        sa.Column("unjudged", sa.String(length=100), nullable=True),
+        sa.Column("figures", Figures(), nullable=False),
+        sa.Column("recorded_at", UtcDateTime(), nullable=False),
+        sa.ForeignKeyConstraint(
+            ["baseline_id"],
+            ["baseline.id"],
+        ),
+        sa.PrimaryKeyConstraint("parcel_id", "acquired_at"),
+        sqlite_with_rowid=False,
+    )
+    op.create_index("ix_judgement_time", "judgement", ["acquired_at"], unique=False)
     op.create_table(
         "parcel",
         sa.Column("id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False),
@@ -128,6 +222,7 @@ def upgrade() -> None:
         sa.Column("id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False),
         sa.Column("ref", sa.String(length=100), nullable=False),
         sa.Column("kind", sa.String(length=20), nullable=False),
+        sa.Column("is_judged", sa.Boolean(), nullable=False),
         sa.Column("sensor", sa.String(length=100), nullable=False),
         sa.Column("platform", sa.String(length=100), nullable=True),
         sa.Column("tile", sa.String(length=100), nullable=True),
@@ -166,6 +261,51 @@ def upgrade() -> None:
         unique=True,
         sqlite_where=sa.text("state NOT IN ('withdrawn', 'superseded')"),
         postgresql_where=sa.text("state NOT IN ('withdrawn', 'superseded')"),
+    )
+    op.create_table(
+        "alert",
+        sa.Column("id", sa.String(length=40), nullable=False),
+        sa.Column(
+            "parcel_id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False
+        ),
+        sa.Column("axis", sa.String(length=5), nullable=False),
+        sa.Column("season", sa.Integer(), nullable=False),
+        sa.Column("rule", sa.String(length=100), nullable=False),
+        sa.Column("state", sa.String(length=20), nullable=False),
+        sa.Column("severity", sa.String(length=10), nullable=False),
+        sa.Column("measure", sa.String(length=100), nullable=False),
+        sa.Column("cause", sa.String(length=40), nullable=False),
+        sa.Column("verdict", sa.String(length=20), nullable=True),
+        sa.Column("first_departure_at", UtcDateTime(), nullable=False),
+        sa.Column("opened_at", UtcDateTime(), nullable=False),
+        sa.Column("closed_at", UtcDateTime(), nullable=True),
+        sa.Column("last_observed_at", UtcDateTime(), nullable=False),
+        sa.Column("recorded_at", UtcDateTime(), nullable=False),
+        sa.Column("revision", sa.Integer(), nullable=False),
+        sa.Column("details", sa.JSON(), nullable=False),
+        sa.ForeignKeyConstraint(
+            ["parcel_id"],
+            ["parcel.id"],
+        ),
+        sa.PrimaryKeyConstraint("id"),
+    )
+    op.create_index("ix_alert_fold", "alert", ["axis", "season"], unique=False)
+    op.create_index("ix_alert_opened", "alert", ["opened_at", "id"], unique=False)
+    op.create_index("ix_alert_parcel", "alert", ["parcel_id"], unique=False)
+    op.create_table(
+        "attempt",
+        sa.Column(
+            "delivery_id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False
+        ),
+        sa.Column("number", sa.Integer(), autoincrement=False, nullable=False),
+        sa.Column("started_at", UtcDateTime(), nullable=False),
+        sa.Column("seconds", sa.Float(precision=53), nullable=False),
+        sa.Column("status", sa.Integer(), nullable=True),
+        sa.Column("error", sa.String(length=40), nullable=True),
+        sa.Column("detail", sa.String(), nullable=True),
+        sa.Column("answer", sa.String(), nullable=False),
+        sa.ForeignKeyConstraint(["delivery_id"], ["delivery.id"], ondelete="CASCADE"),
+        sa.PrimaryKeyConstraint("delivery_id", "number"),
     )
     op.create_table(
         "boundary",
@@ -258,11 +398,29 @@ def upgrade() -> None:
         sa.PrimaryKeyConstraint("id"),
     )
     op.create_index("ux_write_scene", "write", ["scene_id", "generation"], unique=True)
+    op.create_table(
+        "alert_change",
+        sa.Column("alert_id", sa.String(length=40), nullable=False),
+        sa.Column("number", sa.Integer(), autoincrement=False, nullable=False),
+        sa.Column("kind", sa.String(length=20), nullable=False),
+        sa.Column("look_at", UtcDateTime(), nullable=False),
+        sa.Column("recorded_at", UtcDateTime(), nullable=False),
+        sa.Column("who", sa.String(length=100), nullable=True),
+        sa.Column("verdict", sa.String(length=20), nullable=True),
+        sa.Column("note", sa.String(length=2000), nullable=True),
+        sa.Column("what", sa.JSON(), nullable=False),
+        sa.ForeignKeyConstraint(
+            ["alert_id"],
+            ["alert.id"],
+        ),
+        sa.PrimaryKeyConstraint("alert_id", "number"),
+    )
     # ### end Alembic commands ###
 
 
 def downgrade() -> None:
     # ### commands auto generated by Alembic - please adjust! ###
+    op.drop_table("alert_change")
     op.drop_index("ux_write_scene", table_name="write")
     op.drop_table("write")
     op.drop_index(op.f("ix_scene_file_digest"), table_name="scene_file")
@@ -274,6 +432,11 @@ def downgrade() -> None:
     op.drop_index(op.f("ix_boundary_parcel_id"), table_name="boundary")
     op.drop_index("ix_boundary_box", table_name="boundary")
     op.drop_table("boundary")
+    op.drop_table("attempt")
+    op.drop_index("ix_alert_parcel", table_name="alert")
+    op.drop_index("ix_alert_opened", table_name="alert")
+    op.drop_index("ix_alert_fold", table_name="alert")
+    op.drop_table("alert")
     op.drop_index(
         "ux_scene_live_digest",
         table_name="scene",
@@ -285,13 +448,25 @@ def downgrade() -> None:
     op.drop_table("scene")
     op.drop_index(op.f("ix_parcel_holding_id"), table_name="parcel")
     op.drop_table("parcel")
+    op.drop_index("ix_judgement_time", table_name="judgement")
+    op.drop_table("judgement")
+    op.drop_index("ux_delivery_event", table_name="delivery")
+    op.drop_index("ix_delivery_webhook", table_name="delivery")
+    op.drop_index("ix_delivery_state", table_name="delivery")
+    op.drop_table("delivery")
     op.drop_index(op.f("ix_answer_recorded_at"), table_name="answer")
     op.drop_table("answer")
+    op.drop_table("webhook")
+    op.drop_table("season_fold")
     op.drop_index("ix_observation_write", table_name="observation")
     op.drop_table("observation")
     op.drop_table("layout")
     op.drop_table("latest")
     op.drop_table("holding")
     op.drop_table("grid")
+    op.drop_index(op.f("ix_event_recorded_at"), table_name="event")
+    op.drop_table("event")
+    op.drop_index("ix_baseline_season", table_name="baseline")
+    op.drop_table("baseline")
     op.drop_table("api_key")
     # ### end Alembic commands ###

@@ -1,7 +1,7 @@
 """Batches: all or nothing, or, if preferred, the good items with a list of the rest."""
 
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TypeVar
 
 from pydantic import BaseModel, ValidationError
@@ -15,14 +15,17 @@ Item = TypeVar("Item")
 
 @dataclass(slots=True)
 class Faults:
-    """The faults of a batch, by item."""
+    """The faults of a batch, by item; `lines` tells on which line of a CSV body an item ends."""
 
     faults: list[Fault] = field(default_factory=list)
     rejected: set[int] = field(default_factory=set)
     codes: set[str] = field(default_factory=set)
+    lines: dict[int, int] = field(default_factory=dict)
 
     def add(self, item: int, fault: Fault, code: str = "invalid-input") -> None:
         """Note a fault of an item, by its place in the batch."""
+        if item in self.lines:
+            fault = replace(fault, detail=f"Line {self.lines[item]}: {fault.detail}")
         self.faults.append(fault)
         self.rejected.add(item)
         self.codes.add(code)

@@ -20,6 +20,7 @@ MEBIBYTE: Final = 1024**2
 BULK_LIMIT_BYTES: Final = 64 * MEBIBYTE
 JSON_LIMIT_BYTES: Final = 2 * MEBIBYTE
 BULK_LIMIT_ROWS: Final = 100_000
+MAX_DEPTH: Final = 32
 _IN_MEMORY: Final = MEBIBYTE
 
 
@@ -113,6 +114,9 @@ def json_items(file: IO[bytes], prefix: str) -> Iterator[Any]:
     RejectedInput
         The body is not JSON, or has more items than a call may bring.
     """
+    for _ in _flat_events(file):
+        pass
+    file.seek(0)
     try:
         for number, item in enumerate(ijson.items(file, prefix, use_float=True)):
             if number >= BULK_LIMIT_ROWS:
@@ -128,23 +132,36 @@ def json_members(file: IO[bytes], *, but: str) -> dict[str, Any]:
     Of that member only the kind of its value is told: ``start_array``, ``number`` …
     """
     found: dict[str, Any] = {}
-    try:
-        name = None
-        for prefix, kind, value in ijson.parse(file, use_float=True):
-            if prefix == "" and kind == "map_key":
-                name = value
-                found[name] = None
-            elif prefix == "" and kind not in ("start_map", "end_map"):
-                raise RejectedInput.at("", "The body must be a JSON object.")
-            elif name is not None and prefix == name:
-                if name == but and found[name] is None:
-                    found[name] = kind
-                elif name != but and kind in ("string", "number", "boolean", "null"):
-                    found[name] = value
-    except (ijson.JSONError, UnicodeDecodeError, ValueError, OverflowError) as error:
-        raise RejectedInput("malformed-json", "The body is not valid JSON.") from error
+    name = None
+    for depth, kind, value in _flat_events(file):
+        if depth == 0 and kind not in ("start_map", "end_map"):
+            raise RejectedInput.at("", "The body must be a JSON object.")
+        if depth == 1 and kind == "map_key":
+            name = value
+            found[name] = None
+        elif depth == 1 and name is not None and not kind.startswith("end"):
+            found[name] = kind if name == but else value
     file.seek(0)
     return found
+
+
+def _flat_events(file: IO[bytes]) -> Iterator[tuple[int, str, Any]]:
+    """Yield a JSON body's events, each with the depth it stands at.
+
+    Paths to what is nested take time and memory by the square of the depth (a body of 100 kB
+    held a process up for minutes), so a body that is nested deeply is refused before they are
+    made.
+    """
+    depth = 0
+    try:
+        for kind, value in ijson.basic_parse(file, use_float=True):
+            depth -= kind in ("end_map", "end_array")
+            yield depth, kind, value
+            depth += kind in ("start_map", "start_array")
+            if depth > MAX_DEPTH:
+                raise RejectedInput.at("", f"JSON is taken up to {MAX_DEPTH} levels deep.")
+    except (ijson.JSONError, UnicodeDecodeError, ValueError, OverflowError) as error:
+        raise RejectedInput("malformed-json", "The body is not valid JSON.") from error
 
 
 def csv_rows(file: IO[bytes], columns: Mapping[str, bool]) -> Iterator[tuple[int, dict[str, Any]]]:

@@ -1,13 +1,15 @@
 """What handlers work with: the running service, and who is asking."""
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import Annotated
+from typing import Annotated, Final, Protocol
 
-from fastapi import Depends, Request
+from fastapi import Depends, Request, Security
+from fastapi.security import HTTPAuthorizationCredentials, HTTPBearer
 
 from service.clock import now
 from service.errors import NotAllowed
+from service.jobs.deliver import Promise
 from service.jobs.resources import Resources
 from service.settings import Settings
 from service.store.keys import Scope, find_valid_key
@@ -15,18 +17,48 @@ from service.store.sessions import Sessions
 from service.tiles.archive import Archive
 
 
+class Queue(Protocol):
+    """What handlers ask of the queue; each promise stands in the database already."""
+
+    def promise(self, scene_id: int, generation: int) -> None:
+        """Take up a scene's ingest."""
+
+    def promise_deliveries(self, promises: Sequence[Promise]) -> None:
+        """Take up attempts of deliveries."""
+
+    def promise_judging(self) -> None:
+        """Take up whatever judging is promised."""
+
+    def problem(self) -> str | None:
+        """Say what is wrong, None if nothing is."""
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Context:
     """The running service, as the handlers see it.
 
     Handlers open their own sessions, so that a write is committed before its answer is made.
-    `promise` hands a committed promise to the queue; `queue_problem` says what is wrong
-    with the queue, None if nothing is.
+    The queue takes committed promises of scenes, of deliveries and of judging.
     """
 
     work: Resources
-    promise: Callable[[int, int], None]
-    queue_problem: Callable[[], str | None]
+    queue: Queue
+
+    def promise(self, scene_id: int, generation: int) -> None:
+        """Hand a scene's promised ingest to the queue."""
+        self.queue.promise(scene_id, generation)
+
+    def promise_deliveries(self, promises: Sequence[Promise]) -> None:
+        """Hand promised attempts to the queue."""
+        self.queue.promise_deliveries(promises)
+
+    def promise_judging(self) -> None:
+        """Hand promised judging to the queue."""
+        self.queue.promise_judging()
+
+    def queue_problem(self) -> str | None:
+        """Return what is wrong with the queue, None if nothing is."""
+        return self.queue.problem()
 
     @property
     def settings(self) -> Settings:
@@ -80,16 +112,22 @@ class Caller:
             )
 
 
-def _caller(request: Request, context: Ctx) -> Caller:
-    scheme, _, secret = request.headers.get("Authorization", "").partition(" ")
-    if scheme.lower() != "bearer" or not secret.strip():
+_BEARER: Final = HTTPBearer(
+    auto_error=False, description="A key, from `furrowlight keys create` or `POST /v1/keys`."
+)
+
+
+def _caller(
+    context: Ctx, sent: Annotated[HTTPAuthorizationCredentials | None, Security(_BEARER)]
+) -> Caller:
+    if sent is None:
         raise NotAllowed(
             "no-key",
             "Send a key as `Authorization: Bearer <key>`; the operator makes one with "
             "`furrowlight keys create`.",
         )
     with context.sessions.reading() as session:
-        row = find_valid_key(session, secret.strip(), at=now())
+        row = find_valid_key(session, sent.credentials, at=now())
     if row is None:
         raise NotAllowed("unknown-key", "This key is unknown, has expired or was revoked.")
     return Caller(
@@ -116,4 +154,5 @@ def require(scope: Scope) -> Callable[[Caller], Caller]:
 Reader = Annotated[Caller, Depends(require(Scope.READ))]
 Ingester = Annotated[Caller, Depends(require(Scope.INGEST))]
 Steward = Annotated[Caller, Depends(require(Scope.MANAGE))]
+Triager = Annotated[Caller, Depends(require(Scope.TRIAGE))]
 Admin = Annotated[Caller, Depends(require(Scope.ADMIN))]

@@ -116,7 +116,7 @@ def _looks(
             for parcel_id, look in newest_looks(session, ids, until=at, measures=[measure])
         }
     query = (
-        select(Latest, Scene.ref)
+        select(Latest.parcel_id, Latest.acquired_at, Scene.ref, Latest.value, Latest.valid_share)
         .join(Write, Write.id == Latest.write_id)
         .join(Scene, Scene.id == Write.scene_id)
         .where(and_(Latest.measure == measure))
@@ -124,11 +124,11 @@ def _looks(
     return {
         row.parcel_id: _Look(
             observed_at=row.acquired_at,
-            scene=ref,
+            scene=row.ref,
             value=row.value,
             valid_share=row.valid_share,
         )
-        for row, ref in session.execute(query)
+        for row in session.execute(query)
     }
 
 

@@ -1,7 +1,7 @@
 """Parcels: inserted, updated, listed, retired; their boundary versions."""
 
 import json
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import Annotated, Any, Final
 
 import shapely
@@ -13,7 +13,6 @@ from sqlalchemy.orm import Session
 
 from service.api.batches import Faults, model_of
 from service.api.bodies import (
-    BULK_LIMIT_BYTES,
     Bulk,
     BulkBody,
     json_items,
@@ -23,11 +22,13 @@ from service.api.bodies import (
 from service.api.context import Caller, Context, Ctx, Reader, Steward
 from service.api.overlaps import overlap_warnings
 from service.api.paging import Cursor, Limit, link_next, place_in
-from service.api.routes import contract_router
+from service.api.problems import pointer_of
+from service.api.routes import contract_router, takes
 from service.api.seasons import season_of_day
-from service.api.wire import Instant, InstantOut, LongText, QueryBox, Ref, Sent, Text
+from service.api.wire import Instant, InstantOut, LongText, QueryBox, Ref, Sent, Text, written
 from service.clock import now
 from service.errors import Fault, RejectedInput
+from service.store.judging import want_judging_of_crops
 from service.store.parcels import (
     ParcelChange,
     ParcelsChanged,
@@ -108,10 +109,10 @@ class BoundariesOut(BaseModel):
     boundaries: list[BoundaryOut]
 
 
-@router.put("", response_model=ParcelsPut, max_body_size=BULK_LIMIT_BYTES)
+@router.put("", response_model=ParcelsPut, openapi_extra=takes(GEOJSON, "application/json"))
 def put_parcels(
-    body: Bulk,
     caller: Steward,
+    body: Bulk,
     context: Ctx,
     *,
     repair: Annotated[bool, Query(description="Mend rings that cross themselves.")] = False,
@@ -136,6 +137,7 @@ def put_parcels(
         answer = _told(kept, result, faults, warnings)
     for promise in promises:
         context.promise(*promise)
+    context.promise_judging()
     return answer
 
 
@@ -170,6 +172,7 @@ def _changes(
     if body.media_type not in ("application/json", GEOJSON):
         raise unsupported_media_type(GEOJSON)
     members = json_members(body.file, but="features")
+    _check_members(members)
     if members.get("type") != "FeatureCollection" or members.get("features") != "start_array":
         raise RejectedInput.at("", "Send a GeoJSON FeatureCollection with `features` (RFC 7946).")
     changes: dict[int, ParcelChange] = {}
@@ -197,6 +200,18 @@ def _changes(
         seen[change.ref] = item
         changes[item] = change
     return changes, warnings
+
+
+def _check_members(members: Mapping[str, Any]) -> None:
+    """Refuse what would be ignored, such as a `crs` that is not WGS 84."""
+    unknown = members.keys() - {"type", "features", "bbox"}
+    if unknown:
+        detail = (
+            "A FeatureCollection has `type` and `features` here; leave this member out. "
+            "Coordinates are WGS 84 degrees (RFC 7946)."
+        )
+        faults = [Fault(pointer=pointer_of([name]), detail=detail) for name in sorted(unknown)]
+        raise RejectedInput("invalid-input", detail, faults)
 
 
 def _check_size(vertices: int, repaired: int) -> None:
@@ -245,6 +260,7 @@ def _check_holding(
         detail = "This ref is taken. Refs are unique in the deployment; choose another."
         fault = Fault(pointer=f"/features/{item}/properties/ref", detail=detail)
         faults.add(item, fault, "ref-taken")
+        return
     holding = change.given.get("holding", row.holding.ref if row and row.holding else None)
     if holding not in caller.holdings:
         detail = "This key is limited to holdings; name one of them."
@@ -261,6 +277,7 @@ def _put_crops(
     named = [change for change in changes if change.given.get("crop")]
     seasons = seasons_of(session, [result.rows[change.ref].id for change in named])
     today = now().date()
+    labelled = []
     for change in named:
         row = result.rows[change.ref]
         latitude = change.outline.geometry.centroid.y
@@ -269,6 +286,9 @@ def _put_crops(
         if changed and change.ref in result.unchanged:
             result.unchanged.remove(change.ref)
             result.updated.append(change.ref)
+        if changed:
+            labelled.append(sent.from_on)
+    want_judging_of_crops(session, labelled, context.settings.season_starts)
 
 
 @router.get("", response_class=GeoJson)
@@ -339,7 +359,7 @@ def _feature(row: Parcel, boundary: Boundary, crop: str | None) -> dict[str, Any
             "crop": crop,
             "tags": row.tags,
             "area_ha": round(boundary.area_ha, 4),
-            "retired_at": row.retired_at.isoformat() if row.retired_at else None,
+            "retired_at": written(row.retired_at) if row.retired_at else None,
         },
         "geometry": geometry_of(boundary),
     }

@@ -204,6 +204,39 @@ KINDS: Final[Mapping[str, Kind]] = {
         title="Already served", page="Another process works on the same data folder."
     ),
     "not-ready": Kind(title="Not ready", page="The service can't work at present."),
+    "alert-not-found": Kind(title="Alert not found", page="No alert has this id."),
+    "alert-state": Kind(
+        title="Alert state", page="What was asked for does not fit what has become of the alert."
+    ),
+    "precondition-required": Kind(
+        title="Precondition required",
+        status=428,
+        page="Changes of an alert carry `If-Match` with its entity tag, so that two people do not "
+        "overwrite each other.",
+    ),
+    "precondition-failed": Kind(
+        title="Precondition failed",
+        status=412,
+        page="Somebody, or judging, has changed the alert since it was looked at.",
+    ),
+    "no-baseline": Kind(
+        title="No baseline",
+        page="What is normal for a parcel is worked out when a season of it is judged.",
+    ),
+    "not-kept": Kind(
+        title="Not kept",
+        page="Figures are kept as they were known at any time, what was expected of them is not.",
+    ),
+    "webhook-not-found": Kind(title="Webhook not found", page="No webhook has this id."),
+    "delivery-not-found": Kind(title="Delivery not found", page="No delivery has this id."),
+    "webhook-address": Kind(
+        title="Webhook address",
+        page="Events are sent by https to public addresses, and elsewhere only if the operator "
+        "allows it (`FURROWLIGHT_WEBHOOK_NETWORKS`).",
+    ),
+    "still-trying": Kind(
+        title="Still trying", page="Attempts to deliver this event are still being made."
+    ),
     "internal-error": Kind(
         title="Internal error",
         status=500,

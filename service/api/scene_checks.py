@@ -7,7 +7,7 @@ from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import Annotated, Any, Final, Literal
 
-from pydantic import Field, FiniteFloat, model_validator
+from pydantic import AfterValidator, Field, FiniteFloat, model_validator
 
 from service.api.batches import model_of
 from service.api.uploads import QUALITY, SCENE, STACK, SceneReceived
@@ -33,6 +33,18 @@ class ScalingSent(Sent):
     offset: FiniteFloat
 
 
+def _stack_role(role: str | None) -> str | None:
+    if role in (None, QUALITY, *BandRole):
+        return role
+    raise ValueError(
+        f"send a band role ({', '.join(BandRole)}), quality, or null for a band to skip"
+    )
+
+
+StackRole = Annotated[str | None, AfterValidator(_stack_role)]
+"""What a band of a stack is; None if it is to be skipped."""
+
+
 class SceneIn(Sent):
     """The ``scene`` part: what the files are."""
 
@@ -43,7 +55,7 @@ class SceneIn(Sent):
     platform: Text | None = None
     tile: Text | None = None
     scaling: ScalingSent | dict[BandRole, ScalingSent] | None = None
-    stack: Annotated[list[BandRole | Literal["quality"] | None], Field(min_length=1)] | None = None
+    stack: Annotated[list[StackRole], Field(min_length=1)] | None = None
     nodata: FiniteFloat | None = None
     quality: Literal["none"] | None = None
     replace: bool = False
@@ -53,9 +65,23 @@ class SceneIn(Sent):
     def _one_or_by_role(cls, value: Any) -> Any:
         """Decide between one scaling and one per role, so that faults name the right place."""
         sent = value.get("scaling") if isinstance(value, Mapping) else None
-        if isinstance(sent, Mapping) and ("scale" in sent or "offset" in sent):
-            return {**value, "scaling": model_of(ScalingSent, sent, f"/{SCENE}/scaling")}
-        return value
+        return value if sent is None else {**value, "scaling": _scaling_from(sent)}
+
+
+def _scaling_from(sent: object) -> ScalingSent | dict[BandRole, ScalingSent]:
+    pointer = f"/{SCENE}/scaling"
+    if not isinstance(sent, Mapping) or not sent or "scale" in sent or "offset" in sent:
+        return model_of(ScalingSent, sent, pointer)
+    if not sent.keys() <= set(BandRole):
+        raise RejectedInput.at(
+            pointer,
+            "Scaling is one object with `scale` and `offset`, or one for each band role "
+            f"({', '.join(BandRole)}).",
+        )
+    return {
+        BandRole(role): model_of(ScalingSent, own, f"{pointer}/{role}")
+        for role, own in sent.items()
+    }
 
 
 def checked_scene(received: SceneReceived, *, at: datetime) -> tuple[SceneSent, dict[str, Path]]:
@@ -77,7 +103,7 @@ def checked_scene(received: SceneReceived, *, at: datetime) -> tuple[SceneSent, 
             f"No sensor profile has this id; there are {', '.join(SENSORS)}.",
             code="unknown-sensor",
         )
-    _check_time(scene, at=at)
+    check_acquired(scene.acquired_at, f"/{SCENE}/acquired_at", at=at)
     files = {part: file.path for part, file in received.files.items()}
     details, files = _with_one_nir(_details(scene), files)
     headers = {part: inspect(path, pointer=f"/{part}") for part, path in files.items()}
@@ -111,15 +137,22 @@ def checked_scene(received: SceneReceived, *, at: datetime) -> tuple[SceneSent, 
 def _scene_part(data: bytes) -> SceneIn:
     try:
         value = json.loads(data)
-    except ValueError as error:
+    except (ValueError, RecursionError) as error:
         raise RejectedInput("malformed-json", "The scene part is not valid JSON.") from error
     return model_of(SceneIn, value, f"/{SCENE}")
 
 
-def _check_time(scene: SceneIn, *, at: datetime) -> None:
-    if not _EARLIEST <= scene.acquired_at <= at + _AHEAD:
+def check_acquired(acquired_at: datetime, pointer: str, *, at: datetime) -> None:
+    """Refuse a time at which nothing here was acquired.
+
+    Raises
+    ------
+    RejectedInput
+        It is before the first satellites of this kind, or more than a day ahead.
+    """
+    if not _EARLIEST <= acquired_at <= at + _AHEAD:
         raise RejectedInput.at(
-            f"/{SCENE}/acquired_at",
+            pointer,
             f"A scene is acquired from {_EARLIEST.year} on and at most a day ahead of now. Check "
             "the year, and that the time is that of the acquisition.",
         )
@@ -130,7 +163,7 @@ def _details(scene: SceneIn) -> dict[str, Any]:
     details = scene.model_dump(mode="json", exclude_none=True, exclude={"ref", "replace"})
     details["acquired_at"] = written(scene.acquired_at)
     if scene.stack is not None:
-        details[STACK] = [None if role is None else str(role) for role in scene.stack]
+        details[STACK] = list(scene.stack)
     return details
 
 

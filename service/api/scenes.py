@@ -14,16 +14,17 @@ from starlette.concurrency import run_in_threadpool
 
 from service.api.context import Caller, Context, Ctx, Ingester, Reader
 from service.api.once import Once, OnceOnly, json_answer
-from service.api.paging import Cursor, Limit, link_next, place_in
+from service.api.paging import Cursor, Limit, foreign_cursor, link_next, place_in
 from service.api.preferences import Wait, is_settled
 from service.api.problems import problem_document, status_of
-from service.api.routes import contract_router
+from service.api.routes import contract_router, takes
 from service.api.scene_checks import checked_scene
-from service.api.uploads import ANY_SIZE, SceneReceived, SceneUpload
+from service.api.uploads import SceneReceived, SceneUpload
 from service.api.wire import InstantOut, QueryBox, QueryInstant, Text, instant_from, written
 from service.clock import now
 from service.errors import RejectedInput
 from service.store.batches import in_batches
+from service.store.judging import want_judging_of_scenes
 from service.store.looks import observations_of_scene
 from service.store.parcels import is_within
 from service.store.reports import LOSSES, ParcelInScene, parcel_in_scene, scene_counts
@@ -61,6 +62,7 @@ class SceneOut(BaseModel):
     parcels_measured: int | None
     parcels_unseen: dict[str, int] | None
     parcels_small: int | None
+    alerts_opened: int | None
     indices: dict[str, Any] | None
     seconds: dict[str, float] | None
 
@@ -125,6 +127,7 @@ _REPORT = (
     "parcels_measured",
     "parcels_unseen",
     "parcels_small",
+    "alerts_opened",
     "indices",
     "seconds",
 )
@@ -148,9 +151,11 @@ def _address(row: Scene) -> str:
     return f"/v1/scenes/{quote(row.ref, safe='')}"
 
 
-@router.post("", status_code=202, response_model=SceneOut, max_body_size=ANY_SIZE)
+@router.post(
+    "", status_code=202, response_model=SceneOut, openapi_extra=takes("multipart/form-data")
+)
 async def receive_scene(
-    received: SceneUpload, caller: Ingester, context: Ctx, once: OnceOnly, wait: Wait
+    caller: Ingester, received: SceneUpload, context: Ctx, once: OnceOnly, wait: Wait
 ) -> Response:
     """Keep a scene and promise its ingest.
 
@@ -236,7 +241,12 @@ def get_scenes(
 
 def _after(cursor: str | None) -> tuple[datetime, int] | None:
     place = place_in(cursor, str, int)
-    return None if place is None else (instant_from(place[0]), place[1])
+    if place is None:
+        return None
+    try:
+        return instant_from(place[0]), place[1]
+    except ValueError as error:
+        raise foreign_cursor() from error
 
 
 @router.get("/{ref}")
@@ -339,4 +349,8 @@ def withdraw_one_scene(ref: str, caller: Ingester, context: Ctx) -> SceneOut:
     """Withdraw a scene and what was measured from it; the figures stay queryable by `as_of`."""
     caller.must_see_all("a scene")
     with context.sessions.writing() as session:
-        return _out(session, withdraw_scene(session, ref, at=now()), caller)
+        row = withdraw_scene(session, ref, at=now())
+        want_judging_of_scenes(session, [row], context.settings.season_starts)
+        told = _out(session, row, caller)
+    context.promise_judging()
+    return told

@@ -1,5 +1,6 @@
 """Crop seasons: what grew where, from when to when."""
 
+from collections.abc import Iterator
 from datetime import date
 from typing import Annotated, Any
 
@@ -10,7 +11,6 @@ from sqlalchemy.orm import Session
 
 from service.api.batches import Faults, model_of
 from service.api.bodies import (
-    BULK_LIMIT_BYTES,
     Bulk,
     BulkBody,
     csv_rows,
@@ -19,12 +19,13 @@ from service.api.bodies import (
 )
 from service.api.context import Caller, Context, Ctx, Reader, Steward
 from service.api.once import OnceOnly, json_answer
-from service.api.routes import contract_router
-from service.api.wire import Ref, Sent, Text
+from service.api.routes import contract_router, takes
+from service.api.wire import Day, Ref, Sent, Text
 from service.clock import now
 from service.errors import Fault, RejectedInput
 from service.seasons.axis import SeasonStart, season_ending_in, season_holding
 from service.settings import Settings
+from service.store.judging import want_judging_of_crops
 from service.store.parcels import boundaries_at, get_parcel, is_within, parcels_by_ref
 from service.store.seasons import SeasonSent, overlapping, put_season, seasons_of
 from service.store.sessions import serialise
@@ -48,11 +49,11 @@ class SeasonIn(Sent):
 
     parcel: Ref
     crop: Text
-    from_on: date | None = None
-    until_on: date | None = None
+    from_on: Day | None = None
+    until_on: Day | None = None
     year: Annotated[int, Field(ge=1972, le=2200)] | None = None
-    sown_on: date | None = None
-    harvested_on: date | None = None
+    sown_on: Day | None = None
+    harvested_on: Day | None = None
 
 
 class SeasonOut(BaseModel):
@@ -114,73 +115,91 @@ def _out(row: CropSeason) -> SeasonOut:
     )
 
 
-@router.post("/seasons", response_model=SeasonsPosted, max_body_size=BULK_LIMIT_BYTES)
-def post_seasons(body: Bulk, caller: Steward, context: Ctx, once: OnceOnly) -> Response:
+@router.post(
+    "/seasons",
+    response_model=SeasonsPosted,
+    openapi_extra=takes("application/json", "text/csv"),
+)
+def post_seasons(caller: Steward, body: Bulk, context: Ctx, once: OnceOnly) -> Response:
     """Add or correct crop seasons: one as JSON object, many as JSON array or CSV."""
     faults = Faults()
     sent = _sent(body, faults)
     faults.refuse(unless_lenient=body.is_lenient)
+    labelled: list[date] = []
     counts = {"created": 0, "updated": 0, "unchanged": 0}
     with context.sessions.writing() as session:
         serialise(session, "parcels")
-        if (answer := once.replay(session, caller, body.digest)) is not None:
-            return answer
+        if (first := once.replay(session, caller, body.digest)) is not None:
+            return first
         for item, season, seasons in _resolved(session, sent, caller, context, faults):
+            pointer, _ = sent[item]
             held = overlapping(season, seasons)
             if held is not None:
                 detail = (
                     f"Overlaps the season from {held.from_on} to {held.until_on}; send that very "
                     "interval to correct it."
                 )
-                faults.add(item, Fault(pointer=f"/{item}", detail=detail), "season-overlaps")
+                faults.add(item, Fault(pointer=pointer, detail=detail), "season-overlaps")
                 continue
-            counts[put_season(session, season, seasons)] += 1
+            outcome = put_season(session, season, seasons)
+            counts[outcome] += 1
+            if outcome != "unchanged":
+                labelled.append(season.from_on)
         faults.refuse(unless_lenient=body.is_lenient)
+        want_judging_of_crops(session, labelled, context.settings.season_starts)
         made = SeasonsPosted(**counts, rejected=len(faults.rejected), errors=faults.listed())
-        return once.keep(session, caller, body.digest, json_answer(made))
+        answer = once.keep(session, caller, body.digest, json_answer(made))
+    context.promise_judging()
+    return answer
 
 
-def _sent(body: BulkBody, faults: Faults) -> dict[int, SeasonIn]:
-    """Return the seasons that stand in a body, by their place in it."""
-    items: Any
+def _sent(body: BulkBody, faults: Faults) -> dict[int, tuple[str, SeasonIn]]:
+    """Return the seasons that stand in a body with their pointers, by their place in it."""
+    found = {}
+    for item, (pointer, value) in enumerate(_items(body, faults)):
+        season = faults.collect(item, lambda: model_of(SeasonIn, value, pointer))  # noqa: B023
+        if season is not None:
+            found[item] = pointer, season
+    return found
+
+
+def _items(body: BulkBody, faults: Faults) -> Iterator[tuple[str, Any]]:
+    """Yield each item of a body with its pointer; a single object has the empty one."""
     if body.media_type == "text/csv":
-        items = (cells for _, cells in csv_rows(body.file, _COLUMNS))
+        for item, (line, cells) in enumerate(csv_rows(body.file, _COLUMNS)):
+            faults.lines[item] = line
+            yield f"/{item}", cells
     elif body.media_type == "application/json":
         is_array = body.file.read(1024).lstrip()[:1] == b"["
         body.file.seek(0)
-        items = json_items(body.file, "item" if is_array else "")
+        for item, value in enumerate(json_items(body.file, "item" if is_array else "")):
+            yield f"/{item}" if is_array else "", value
     else:
         raise unsupported_media_type("application/json", "text/csv")
-    found = {}
-    for item, value in enumerate(items):
-        season = faults.collect(item, lambda: model_of(SeasonIn, value, f"/{item}"))  # noqa: B023
-        if season is not None:
-            found[item] = season
-    return found
 
 
 def _resolved(
     session: Session,
-    sent: dict[int, SeasonIn],
+    sent: dict[int, tuple[str, SeasonIn]],
     caller: Caller,
     context: Context,
     faults: Faults,
 ) -> Any:
     """Yield each season with its interval worked out, and its parcel's seasons."""
-    parcels = parcels_by_ref(session, {season.parcel for season in sent.values()})
+    parcels = parcels_by_ref(session, {season.parcel for _, season in sent.values()})
     parcels = {ref: row for ref, row in parcels.items() if is_within(row, caller.holdings)}
     ids = [row.id for row in parcels.values()]
     outlines = boundaries_at(session, ids, at=now())
     by_parcel = seasons_of(session, ids)
-    for item, season in sent.items():
+    for item, (pointer, season) in sent.items():
         row = parcels.get(season.parcel)
         if row is None:
             detail = "There is no parcel with this ref. Put the parcel first."
-            faults.add(item, Fault(pointer=f"/{item}/parcel", detail=detail))
+            faults.add(item, Fault(pointer=f"{pointer}/parcel", detail=detail))
             continue
         latitude = (outlines[row.id].south + outlines[row.id].north) / 2
         start = season_start(latitude, context.settings)
-        resolved = faults.collect(item, lambda: _interval(season, row, start, f"/{item}"))  # noqa: B023
+        resolved = faults.collect(item, lambda: _interval(season, row, start, pointer))  # noqa: B023
         if resolved is not None:
             yield item, resolved, by_parcel.setdefault(row.id, [])
 

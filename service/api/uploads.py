@@ -23,8 +23,6 @@ STACK: Final = "stack"
 QUALITY: Final = "quality"
 _PARTS: Final = frozenset({SCENE, STACK, QUALITY, *(role.value for role in BandRole)})
 _HEADER_LIMIT: Final = 8_192
-ANY_SIZE: Final = 2**62
-"""For the framework's own limit: a setting limits scenes, counted while they stream."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

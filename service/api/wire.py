@@ -2,17 +2,21 @@
 
 import re
 import unicodedata
-from collections.abc import Sequence
-from datetime import UTC, date, datetime, time, timedelta
+from collections.abc import Iterable
+from datetime import UTC, date, datetime, timedelta
 from typing import Annotated, Any, Final
 
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, PlainSerializer
 
 from service.store.parcels import Box
 
+_DAY: Final = re.compile(r"\d{4}-\d\d-\d\d", re.ASCII)
 _RFC3339: Final = re.compile(
-    r"(\d{4}-\d\d-\d\d)[Tt ](\d\d:\d\d):(\d\d)(\.\d+)?([Zz]|[+-]\d\d:\d\d)"
+    r"(\d{4}-\d\d-\d\d)[Tt ](\d\d:\d\d):(\d\d)(\.\d+)?([Zz]|[+-]\d\d:\d\d)", re.ASCII
 )
+_FIRST_YEAR: Final = 1000
+_LAST_YEAR: Final = 9998
+"""A year away from what instants can hold, so that sums with them never leave it."""
 _SPREADSHEET_FORMULA: Final = ("=", "+", "-", "@")
 
 
@@ -36,14 +40,19 @@ def instant_from(text: object) -> datetime:
     day, minute, second, fraction, offset = match.groups()
     is_leap = second == "60"
     written = f"{day}T{minute}:{'59' if is_leap else second}{fraction or ''}"
-    parsed = datetime.fromisoformat(written + ("+00:00" if offset in "Zz" else offset))
+    try:
+        parsed = datetime.fromisoformat(written + ("+00:00" if offset in "Zz" else offset))
+    except ValueError:
+        raise ValueError("there is no such date or time of day; check it") from None
+    if not _FIRST_YEAR <= parsed.year <= _LAST_YEAR:
+        raise ValueError(f"send a year from {_FIRST_YEAR} to {_LAST_YEAR}")
     instant = parsed.astimezone(UTC)
     return instant.replace(microsecond=0) + timedelta(seconds=1) if is_leap else instant
 
 
 def _instant_or_date(text: object) -> datetime:
-    if isinstance(text, str) and re.fullmatch(r"\d{4}-\d\d-\d\d", text):
-        return datetime.combine(date.fromisoformat(text), time(), tzinfo=UTC)
+    if isinstance(text, str) and _DAY.fullmatch(text):
+        return instant_from(f"{text}T00:00:00Z")
     return instant_from(text)
 
 
@@ -58,6 +67,19 @@ def written(instant: datetime) -> str:
 
 Instant = Annotated[datetime, BeforeValidator(instant_from)]
 """An instant in a body: the offset is mandatory."""
+
+
+def _day_from(text: object) -> date:
+    if not isinstance(text, str) or not _DAY.fullmatch(text):
+        raise ValueError("send a date as YYYY-MM-DD")
+    try:
+        return date.fromisoformat(text)
+    except ValueError:
+        raise ValueError("there is no such day; check it") from None
+
+
+Day = Annotated[date, BeforeValidator(_day_from)]
+"""A date in a body."""
 
 QueryInstant = Annotated[datetime, BeforeValidator(_instant_or_date)]
 """An instant in a query: a bare date means 00:00 UTC."""
@@ -116,6 +138,6 @@ def plural_error(count: int) -> str:
     return f"{count} things are wrong; see `errors`. Nothing was kept."
 
 
-def joined(names: Sequence[str]) -> str:
+def joined(names: Iterable[str]) -> str:
     """Return names as a list in a sentence."""
     return ", ".join(names)

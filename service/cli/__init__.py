@@ -7,7 +7,7 @@ from typing import Final
 
 import typer
 
-from service.cli import demo, keys, serve
+from service.cli import alerts, demo, keys, serve
 from service.errors import (
     Conflict,
     FurrowlightError,
@@ -39,6 +39,7 @@ app = typer.Typer(
 app.command("demo")(demo.demo)
 app.command("serve")(serve.serve)
 app.add_typer(keys.app, name="keys")
+app.add_typer(alerts.app, name="alerts")
 
 
 def main() -> None:

@@ -1,7 +1,9 @@
 """What the client commands share: calls of the HTTP API, and its problems as our errors."""
 
+import os
 from collections.abc import Mapping
 from http import HTTPStatus
+from pathlib import Path
 from typing import Any, Final
 
 import httpx
@@ -36,6 +38,30 @@ def connect(address: str, *, key: str) -> httpx.Client:
         timeout=CALL_SECONDS,
         trust_env=False,
     )
+
+
+def connect_from_environment() -> httpx.Client:
+    """Return a client of the service that FURROWLIGHT_URL and FURROWLIGHT_KEY_FILE name.
+
+    Raises
+    ------
+    RejectedInput
+        One of them is not set, or the file can't be read.
+    """
+    address, key_file = os.environ.get("FURROWLIGHT_URL"), os.environ.get("FURROWLIGHT_KEY_FILE")
+    if not address or not key_file:
+        raise RejectedInput(
+            "no-connection",
+            "Set FURROWLIGHT_URL to the service's address and FURROWLIGHT_KEY_FILE to a file "
+            "with the key in it.",
+        )
+    try:
+        key = Path(key_file).read_text(encoding="utf-8").strip()
+    except OSError as error:
+        raise RejectedInput(
+            "no-connection", f"The key file can't be read: {error.strerror}."
+        ) from error
+    return connect(address, key=key)
 
 
 def call(client: httpx.Client, method: str, path: str, **request: Any) -> dict[str, Any]:

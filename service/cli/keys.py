@@ -5,7 +5,8 @@ from typing import Annotated
 
 import typer
 from rich.console import Console
-from rich.table import Table
+from rich.table import Column, Table
+from rich.text import Text
 
 from service.api.wire import written
 from service.app import open_resources
@@ -55,11 +56,10 @@ def create(
 
 @app.command("list")
 def list_all(data: _Data = None) -> None:
-    """List keys without their secrets."""
-    table = Table("id", "label", "scopes", "holdings", "created", "revoked")
+    """List keys without their secrets: a table on a terminal, else tab-separated lines."""
     with _resources(data).sessions.reading() as session:
-        for row in list_keys(session, holdings=None, after_id=0):
-            table.add_row(
+        rows = [
+            (
                 row.public_id,
                 row.label,
                 ",".join(row.scopes),
@@ -67,7 +67,18 @@ def list_all(data: _Data = None) -> None:
                 written(row.created_at),
                 written(row.revoked_at) if row.revoked_at else "",
             )
-    Console().print(table)
+            for row in list_keys(session, holdings=None, after_id=0)
+        ]
+    console = Console()
+    if not console.is_terminal:
+        for cells in rows:
+            typer.echo("\t".join(cells))
+        return
+    # An id is needed whole, to revoke its key.
+    table = Table(Column("id", no_wrap=True), "label", "scopes", "holdings", "created", "revoked")
+    for cells in rows:
+        table.add_row(*(Text(cell, overflow="fold") for cell in cells))
+    console.print(table)
 
 
 @app.command()

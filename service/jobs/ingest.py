@@ -1,4 +1,4 @@
-"""The ingest workflow: measure, then finish; or say why not."""
+"""The ingest workflow: measure, judge, finish; or say why not."""
 
 from typing import Any, Final
 
@@ -8,11 +8,15 @@ from sqlalchemy.exc import OperationalError
 
 from service.clock import now
 from service.errors import FurrowlightError, Unavailable
+from service.jobs.announce import announce_scene
+from service.jobs.assess import enqueue_fresh_deliveries, judge
 from service.jobs.measuring import measure_scene
 from service.jobs.resources import resources
+from service.store.alerts import count_opened_by
 from service.store.scenes import SceneState, lock_scene
 
 QUEUE: Final = "ingest"
+_UNFINISHED: Final = (SceneState.QUEUED, SceneState.RUNNING)
 _log = structlog.get_logger()
 
 
@@ -28,18 +32,22 @@ def enqueue(scene_id: int, generation: int) -> None:
 
 
 # Three crashes of the process in the same scene are no coincidence: the sweep then fails it.
-@DBOS.workflow(name="ingest", max_recovery_attempts=3)
+@DBOS.workflow(name="ingest", max_recovery_attempts=2)
 def ingest(scene_id: int, generation: int) -> str:
     """Measure a scene and finish it; return its state, or ``left`` if it is another's by now."""
     structlog.contextvars.bind_contextvars(scene_id=scene_id, generation=generation)
     try:
         outcome = measure(scene_id, generation)
-        return finish(scene_id, generation) if outcome == "measured" else outcome
+        if outcome == "measured":
+            judge()
+            outcome = finish(scene_id, generation)
     except Exception:  # noqa: BLE001 - a bug of ours is logged, and told on the scene
         _log.exception("ingest failed")
-        return give_up(scene_id, generation)
+        outcome = give_up(scene_id, generation)
     finally:
         structlog.contextvars.unbind_contextvars("scene_id", "generation")
+    enqueue_fresh_deliveries()
+    return outcome
 
 
 def _worth_retrying(error: BaseException) -> bool:
@@ -62,14 +70,17 @@ def measure(scene_id: int, generation: int) -> str:
 
 @DBOS.step(name="finish", retries_allowed=True, max_attempts=5, should_retry=_worth_retrying)
 def finish(scene_id: int, generation: int) -> str:
-    """Say that a scene is done."""
-    with resources().sessions.writing() as session:
+    """Say that a scene is done: its looks are judged too."""
+    work = resources()
+    with work.sessions.writing() as session:
         row = lock_scene(session, scene_id)
         if row.generation != generation or row.state != SceneState.RUNNING:
             return "left"
         row.state = SceneState.DONE
         row.progress = 1.0
         row.changed_at = now()
+        row.report = {**(row.report or {}), "alerts_opened": count_opened_by(session, row)}
+        announce_scene(session, work.settings, row, at=row.changed_at)
     _log.info("scene done")
     return "done"
 
@@ -88,14 +99,24 @@ INTERNAL_FAILURE: Final[dict[str, Any]] = {
 }
 
 
+CRASHED_FAILURE: Final[dict[str, Any]] = {
+    "code": "internal-error",
+    "detail": "The service ended three times while it was measuring this scene, perhaps for want "
+    "of memory. Send a retry once the cause is mended.",
+    "errors": [],
+}
+
+
 def fail(scene_id: int, generation: int, failure: dict[str, Any]) -> str:
-    """Keep on the scene why it failed, unless it is another's by now."""
-    with resources().sessions.writing() as session:
+    """Keep on the scene why it failed, unless it is another's by now or came to an end."""
+    work = resources()
+    with work.sessions.writing() as session:
         row = lock_scene(session, scene_id)
-        if row.generation != generation:
+        if row.generation != generation or row.state not in _UNFINISHED:
             return "left"
         row.state = SceneState.FAILED
         row.failure = failure
         row.changed_at = now()
+        announce_scene(session, work.settings, row, at=row.changed_at)
     _log.warning("scene failed", code=failure["code"])
     return "failed"

@@ -21,6 +21,7 @@ from service.spectral.indices import INDICES, Index
 from service.spectral.quality import QualityLayer
 from service.spectral.roles import BandRole
 from service.spectral.sensors import SENSORS
+from service.store.judging import want_judging_of_scenes
 from service.store.looks import observations_of_scene
 from service.store.observations import Measured, has_write, parcels_to_measure, record
 from service.store.reports import out_of_range, scene_counts
@@ -69,20 +70,22 @@ def measure_scene(work: Resources, scene_id: int, generation: int) -> bool:
             return False
         if not has_write(session, row, generation):
             record(session, row, measured, at=now())
-            _supersede(session, row)
+            replaced = _supersede(session, row)
+            want_judging_of_scenes(session, [row, *replaced], work.settings.season_starts)
         seconds["total"] = round(time.monotonic() - started, 3)
         row.report = _report(list(observations_of_scene(session, scene_id)), observed, seconds)
         row.progress = 0.9
     return True
 
 
-def _supersede(session: Session, row: Scene) -> None:
+def _supersede(session: Session, row: Scene) -> list[Scene]:
     """End the life of the scene that this one replaces, in the step that brings its figures."""
     if row.supersedes_id is None:
-        return
+        return []
     replaced = lock_scene(session, row.supersedes_id)
     if replaced.state not in (SceneState.SUPERSEDED, SceneState.WITHDRAWN):
         retire_figures(session, replaced, SceneState.SUPERSEDED, at=now())
+    return [replaced]
 
 
 def _begin(work: Resources, scene_id: int, generation: int) -> Scene | None:

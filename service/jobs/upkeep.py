@@ -9,11 +9,13 @@ import structlog
 from dbos import DBOS
 
 from service.clock import now
-from service.jobs import ingest
+from service.jobs import assess, deliver, ingest
 from service.jobs.resources import Resources
 from service.store.answers import forget_old_answers
+from service.store.batches import in_batches
 from service.store.scenes import SceneState, kept_digests, put_back, unfinished_scenes
 from service.store.tables import Scene
+from service.store.webhooks import waiting_deliveries
 
 SWEEP_SECONDS: Final = 60.0
 ORPHAN_SECONDS: Final = 24 * 3600.0
@@ -21,12 +23,13 @@ ORPHAN_SECONDS: Final = 24 * 3600.0
 WORKFLOWS_KEPT_FOR: Final = timedelta(days=30)
 _PURGE_BATCH: Final = 500
 _UNKNOWN: Final = "unknown"
-_ENDED: Final = frozenset({"SUCCESS", "ERROR", "CANCELLED", "MAX_RECOVERY_ATTEMPTS_EXCEEDED"})
+_CRASHED: Final = "MAX_RECOVERY_ATTEMPTS_EXCEEDED"
+_ENDED: Final = frozenset({"SUCCESS", "ERROR", "CANCELLED"})
 _log = structlog.get_logger()
 
 
 class Upkeep:
-    """A thread that sweeps at start, every minute, and whenever it is woken."""
+    """A thread that sweeps at start and every minute."""
 
     def __init__(self, work: Resources) -> None:
         self._work = work
@@ -58,11 +61,13 @@ class Upkeep:
 
 
 def sweep(work: Resources) -> None:
-    """Bring promised scenes and the queue into agreement.
+    """Bring promises and the queue into agreement.
 
     A promise without a workflow is enqueued. A scene at work whose workflow the queue does
     not know is promised anew. A scene whose workflow ended without telling it has failed.
     """
+    assess.enqueue_wanted(work)
+    _sweep_deliveries(work)
     with work.sessions.reading() as session:
         scenes = unfinished_scenes(session)
     states = _workflow_states(scenes)
@@ -72,8 +77,22 @@ def sweep(work: Resources) -> None:
             ingest.enqueue(scene.id, scene.generation)
         elif state == _UNKNOWN:
             _promise_anew(work, scene)
+        elif state == _CRASHED:
+            ingest.fail(scene.id, scene.generation, ingest.CRASHED_FAILURE)
         elif state in _ENDED:
             ingest.fail(scene.id, scene.generation, ingest.INTERNAL_FAILURE)
+
+
+def _sweep_deliveries(work: Resources) -> None:
+    """Enqueue promised attempts that the queue does not know."""
+    at = now()
+    with work.sessions.reading() as session:
+        promises = [deliver.promise_of(row, at=at) for row in waiting_deliveries(session)]
+    for some in in_batches(promises):
+        ids = [promise.workflow_id for promise in some]
+        found = DBOS.list_workflows(workflow_ids=ids, load_input=False, load_output=False)
+        known = {workflow.workflow_id for workflow in found}
+        deliver.enqueue([promise for promise in some if promise.workflow_id not in known])
 
 
 def _workflow_states(scenes: Sequence[Scene]) -> dict[str, str]:

@@ -1,5 +1,6 @@
 """Starting and stopping the queue's engine in this process."""
 
+from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any, Final
 
@@ -9,13 +10,14 @@ from dbos import DBOS, DBOSConfig, DBOSPortableJSONSerializer
 from sqlalchemy import Engine, create_engine, event, make_url
 
 from service.errors import Unavailable
-from service.jobs import ingest
+from service.jobs import assess, deliver, ingest
 from service.jobs.resources import Resources, lend
 from service.jobs.upkeep import Upkeep
 
 _log = structlog.get_logger()
 _APPLICATION_VERSION: Final = "1"
 """Constant, so that work promised by one release is carried out by the next."""
+_DELIVERIES_AT_ONCE: Final = 8
 _EXECUTOR: Final = "embedded"
 """Stable, so that the same machine resumes what a crash interrupted."""
 
@@ -29,18 +31,22 @@ class Worker:
         self._upkeep: Upkeep | None = None
         self._engine: Engine | None = None
 
-    def start(self) -> None:
-        """Launch the engine, resume what was interrupted, and begin the upkeep.
+    def claim(self) -> None:
+        """Take the data folder for this process, unless it has it already.
 
         Raises
         ------
         Unavailable
             Another process works on this data folder.
         """
-        if not self._lock.acquire(blocking=False):
+        if not self._lock.acquired and not self._lock.acquire(blocking=False):
             raise Unavailable(
                 "worker-running", "Another process is already serving this data folder."
             )
+
+    def start(self) -> None:
+        """Claim the folder, launch the engine, resume what was interrupted, begin the upkeep."""
+        self.claim()
         self._work.archive.clear_incoming()
         lend(self._work)
         settings = self._work.settings
@@ -63,15 +69,38 @@ class Worker:
             worker_concurrency=1,
             polling_interval_sec=settings.queue_polling_seconds,
         )
+        DBOS.register_queue(
+            assess.QUEUE,
+            worker_concurrency=1,
+            polling_interval_sec=settings.queue_polling_seconds,
+        )
+        # A slow receiver holds up only itself.
+        DBOS.register_queue(
+            deliver.QUEUE,
+            worker_concurrency=_DELIVERIES_AT_ONCE,
+            partition_concurrency=1,
+            polling_interval_sec=settings.queue_polling_seconds,
+        )
         self._upkeep = Upkeep(self._work)
         self._upkeep.start()
 
     def promise(self, scene_id: int, generation: int) -> None:
         """Hand a committed promise to the queue at once; if that fails, the sweep will."""
+        self._hand(lambda: ingest.enqueue(scene_id, generation))
+
+    def promise_deliveries(self, promises: Sequence[deliver.Promise]) -> None:
+        """Hand promised attempts to the queue at once; if that fails, the sweep will."""
+        self._hand(lambda: deliver.enqueue(promises))
+
+    def promise_judging(self) -> None:
+        """Hand promised judging to the queue at once; if that fails, the sweep will."""
+        self._hand(lambda: assess.enqueue_wanted(self._work))
+
+    def _hand(self, enqueue: Callable[[], None]) -> None:
         try:
-            ingest.enqueue(scene_id, generation)
+            enqueue()
         except Exception:  # noqa: BLE001 - the promise stands in the database
-            _log.exception("enqueueing failed", scene_id=scene_id)
+            _log.exception("enqueueing failed")
 
     def problem(self) -> str | None:
         """Return what is wrong with the queue, None if nothing is."""

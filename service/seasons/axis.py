@@ -43,3 +43,12 @@ def season_holding(day: date, start: SeasonStart) -> tuple[date, date]:
     if first > day:
         first = start.in_year(day.year - 1)
     return season_from(first, start)
+
+
+def day_of_season(day: date, start: SeasonStart) -> tuple[int, int]:
+    """Return the crop year that holds a day, named by the year it ends in, and the day of it.
+
+    The first day is 0. With a start on 1 October, 2023-10-02 is day 1 of 2024.
+    """
+    first, last = season_holding(day, start)
+    return last.year, (day - first).days

@@ -5,7 +5,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import ARRAY, REAL, BigInteger, DateTime, Dialect, LargeBinary
+from sqlalchemy import ARRAY, REAL, BigInteger, DateTime, Dialect, Float, LargeBinary
 from sqlalchemy.types import TypeDecorator, TypeEngine
 
 _EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
@@ -84,3 +84,17 @@ class Figures(TypeDecorator[NDArray[np.float32]]):
         if dialect.name == "sqlite":
             return np.frombuffer(value, dtype="<f4")
         return np.asarray(value, dtype=np.float32)
+
+
+class Figure(TypeDecorator[float]):
+    """One float32, given back in its shortest decimals, as series give figures.
+
+    SQLite keeps it as a float64, whose own decimals would be those of the conversion.
+    """
+
+    impl = Float(24)
+    cache_ok = True
+
+    def process_result_value(self, value: float | None, _dialect: Dialect) -> float | None:
+        """Round what SQLite gives back."""
+        return None if value is None else float(str(np.float32(value)))

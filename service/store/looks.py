@@ -42,6 +42,12 @@ class Places:
         """Whether observations of this layout hold a measure."""
         return f"{measure}.mean" in self.by_column
 
+    @property
+    def measures(self) -> list[str]:
+        """The measures that observations of this layout hold."""
+        means = (column for column in self.by_column if column.endswith(".mean"))
+        return [column.removesuffix(".mean") for column in means]
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Observed:
@@ -75,7 +81,7 @@ class Observed:
         if stat == "valid_share":
             return self.of_look("valid_share")
         if stat == "pixels" and f"{measure}.pixels" not in self.places.by_column:
-            return self.of_look("pixels")
+            return self.figure(f"{self.places.rule}.pixels")
         return self.figure(f"{measure}.{stat}")
 
 
@@ -87,6 +93,7 @@ def observations(
     until: datetime | None = None,
     as_of: datetime | None = None,
     sensor: str | None = None,
+    is_judged: bool | None = None,
 ) -> Iterator[Observed]:
     """Yield observations by parcel and acquisition; `since` and `until` are included.
 
@@ -104,17 +111,24 @@ def observations(
             query = query.where(Observation.acquired_at <= until)
         if sensor is not None:
             query = query.where(Scene.sensor == sensor)
+        if is_judged is not None:
+            query = query.where(Scene.is_judged == is_judged)
         query = query.order_by(Observation.parcel_id, Observation.acquired_at, Observation.write_id)
         yield from _unpacked(session, query, layouts)
 
 
 def observations_of_scene(session: Session, scene_id: int) -> Iterator[Observed]:
     """Yield the newest current observation of each parcel in a scene, by parcel."""
-    query = _query().where(Write.scene_id == scene_id, Write.closed_at.is_(None))
-    query = query.order_by(Observation.parcel_id, Observation.write_id)
-    rows = _unpacked(session, query, {})
+    rows = all_observations_of_scene(session, scene_id)
     for _, of_parcel in groupby(rows, key=lambda row: row.parcel_id):
         yield list(of_parcel)[-1]
+
+
+def all_observations_of_scene(session: Session, scene_id: int) -> Iterator[Observed]:
+    """Yield the current observations of a scene, by parcel and then in order of writing."""
+    query = _query().where(Write.scene_id == scene_id, Write.closed_at.is_(None))
+    query = query.order_by(Observation.parcel_id, Observation.write_id)
+    return _unpacked(session, query, {})
 
 
 def _query() -> Rows:
@@ -226,6 +240,7 @@ def newest_looks(
     """
     missing = set(parcel_ids)
     seen: dict[int, list[Observed]] = {parcel_id: [] for parcel_id in parcel_ids}
+    oldest = _oldest(session, measures)
     for bucket in reversed(_buckets(session, None, until)):
         if not missing:
             return
@@ -237,24 +252,53 @@ def newest_looks(
             since=begin,
             until=end if until is None else min(end, until),
         )
+        older = {measure for measure, since in oldest.items() if since < begin}
         for parcel_id, of_parcel in groupby(rows, key=lambda row: row.parcel_id):
             seen[parcel_id] = [*of_parcel, *seen[parcel_id]]
             found = _newest(seen[parcel_id], measures)
-            # A pass may straddle the bucket's beginning; older history decides then.
-            if _is_complete(found, measures, begin + PASS_GAP):
+            if older <= found.keys() and _is_settled(found, seen[parcel_id], begin):
                 missing.discard(parcel_id)
                 del seen[parcel_id]
-                yield parcel_id, found
+                if found:
+                    yield parcel_id, found
     for parcel_id in sorted(missing):
         if found := _newest(seen[parcel_id], measures):
             yield parcel_id, found
 
 
-def _is_complete(
-    found: Mapping[str, Observed], measures: Sequence[str] | None, since: datetime
-) -> bool:
-    wanted = measures if measures is not None else list(found)
-    return bool(wanted) and all(m in found and found[m].acquired_at >= since for m in wanted)
+def _oldest(session: Session, measures: Sequence[str] | None) -> dict[str, datetime]:
+    """Return since when there are figures by measure, of all parcels together."""
+    query = (
+        select(Write.layout_id, func.min(Scene.acquired_at, type_=Scene.acquired_at.type))
+        .join(Scene, Scene.id == Write.scene_id)
+        .where(Write.closed_at.is_(None))
+        .group_by(Write.layout_id)
+    )
+    oldest: dict[str, datetime] = {}
+    for layout_id, since in session.execute(query):
+        for measure in _places(session.get_one(Layout, layout_id)).measures:
+            oldest[measure] = min(since, oldest.get(measure, since))
+    return oldest if measures is None else {m: oldest[m] for m in measures if m in oldest}
+
+
+def _is_settled(found: Mapping[str, Observed], rows: Sequence[Observed], begin: datetime) -> bool:
+    """Whether no history before `begin` can belong to the passes of these looks.
+
+    Passes are counted from the first scene that has none shortly before it, so a row of
+    scenes that follow each other closely hangs together.
+    """
+    looks = {look.write_id: look for look in found.values()}
+    return all(_begins(look, rows) >= begin + PASS_GAP for look in looks.values())
+
+
+def _begins(look: Observed, rows: Sequence[Observed]) -> datetime:
+    begun = look.acquired_at
+    for row in reversed(rows):
+        if row.acquired_at < begun - PASS_GAP:
+            break
+        if row.platform == look.platform and row.acquired_at < begun:
+            begun = row.acquired_at
+    return begun
 
 
 def _newest(rows: Sequence[Observed], measures: Sequence[str] | None) -> dict[str, Observed]:
@@ -274,11 +318,4 @@ def _newest(rows: Sequence[Observed], measures: Sequence[str] | None) -> dict[st
 
 
 def _measures(layouts: Iterable[Places]) -> list[str]:
-    return sorted(
-        {
-            column.removesuffix(".mean")
-            for places in layouts
-            for column in places.by_column
-            if column.endswith(".mean")
-        }
-    )
+    return sorted({measure for places in layouts for measure in places.measures})

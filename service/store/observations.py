@@ -1,7 +1,4 @@
-"""Writing observations: append-only writes, and the newest look kept beside them.
-
-Here is the only place that packs an observation.
-"""
+"""Writing observations: append-only writes, and the newest look kept beside them."""
 
 import hashlib
 import json
@@ -12,12 +9,11 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import ColumnElement, delete, func, insert, or_, select, update
-from sqlalchemy.dialects import postgresql, sqlite
+from sqlalchemy import ColumnElement, delete, func, or_, select, update
 from sqlalchemy.orm import Session
 
 from service.store.batches import in_batches
-from service.store.columns import microseconds
+from service.store.bulk import advance_latest, insert_latest, insert_observations
 from service.store.looks import LOOK_SHARE, PASS_GAP, bucket_of, newest_looks
 from service.store.parcels import bump_revisions, in_force, intersects
 from service.store.sessions import serialise
@@ -118,15 +114,38 @@ def record(session: Session, scene: Scene, measured: Measured, *, at: datetime) 
     )
     session.add(write)
     session.flush()
-    _insert_rows(session, scene.acquired_at, write.id, measured)
-    if replaced:
-        _close(session, replaced, at=at)
+    parcel_ids, figures = _insert(session, scene, write, measured)
+    closed = _close(session, replaced, at=at) if replaced else []
     bump_revisions(session, [write.id])
-    if is_first and _is_alone_in_pass(session, scene):
-        _advance_latest(session, scene, write, measured)
-    else:
-        rebuild_latest(session, measured.parcel_ids)
+    serialise(session, "latest")
+    contested = {*parcel_ids.tolist(), *closed}
+    if is_first:
+        contested = _seen_in_same_pass(session, scene)
+        # Nothing but this write decides about the pass of the others.
+        alone = np.array([p not in contested for p in parcel_ids.tolist()], dtype=bool)
+        _advance_latest(session, write, measured, scene, parcel_ids[alone], figures[alone])
+        contested &= {*parcel_ids.tolist()}
+    rebuild_latest(session, sorted(contested))
     return write
+
+
+def _insert(
+    session: Session, scene: Scene, write: Write, measured: Measured
+) -> tuple[NDArray[np.int64], NDArray[np.float32]]:
+    """Insert the observations in key order; return parcels and figures in that order."""
+    order = np.argsort(np.asarray(measured.parcel_ids, dtype=np.int64))
+    parcel_ids = np.asarray(measured.parcel_ids, dtype=np.int64)[order]
+    figures = measured.figures[order]
+    insert_observations(
+        session,
+        bucket=bucket_of(scene.acquired_at),
+        acquired_at=scene.acquired_at,
+        write_id=write.id,
+        parcel_ids=parcel_ids,
+        boundary_ids=np.asarray(measured.boundary_ids, dtype=np.int64)[order],
+        figures=figures,
+    )
+    return parcel_ids, figures
 
 
 def _layout(session: Session, measured: Measured) -> Layout:
@@ -141,53 +160,12 @@ def _layout(session: Session, measured: Measured) -> Layout:
     return row
 
 
-def _insert_rows(
-    session: Session, acquired_at: datetime, write_id: int, measured: Measured
-) -> None:
-    """Insert the packed rows in key order: in bulk, as each database takes them fastest."""
-    bucket = bucket_of(acquired_at)
-    order = np.argsort(np.asarray(measured.parcel_ids, dtype=np.int64))
-    keys = ((int(measured.parcel_ids[i]), int(measured.boundary_ids[i]), i) for i in order)
-    if session.get_bind().dialect.name == "sqlite":
-        packed = measured.figures.astype("<f4")
-        instant = microseconds(acquired_at)
-        driver = session.connection().connection.driver_connection
-        assert driver is not None  # noqa: S101 - a session in a transaction has a connection
-        driver.executemany(
-            "INSERT INTO observation "
-            "(bucket, parcel_id, acquired_at, write_id, boundary_id, figures) "
-            "VALUES (?, ?, ?, ?, ?, ?)",
-            ((bucket, p, instant, write_id, b, packed[i].tobytes()) for p, b, i in keys),
-        )
-        return
-    driver = session.connection().connection.driver_connection
-    assert driver is not None  # noqa: S101
-    with (
-        driver.cursor() as cursor,
-        cursor.copy(
-            "COPY observation (bucket, parcel_id, acquired_at, write_id, boundary_id, figures) "
-            "FROM STDIN (FORMAT BINARY)"
-        ) as copy,
-    ):
-        copy.set_types(["int4", "int8", "timestamptz", "int8", "int8", "float4[]"])
-        for parcel_id, boundary_id, i in keys:
-            copy.write_row(
-                (
-                    bucket,
-                    parcel_id,
-                    acquired_at,
-                    write_id,
-                    boundary_id,
-                    measured.figures[i].tolist(),
-                )
-            )
-
-
 def close_writes(session: Session, scene_id: int, *, at: datetime) -> None:
     """Close a scene's current writes: from now on they answer by `as_of` only."""
     closed = _current_writes(session, scene_id)
     if closed:
         parcel_ids = _close(session, closed, at=at)
+        serialise(session, "latest")
         rebuild_latest(session, parcel_ids)
 
 
@@ -211,11 +189,12 @@ def _close(session: Session, write_ids: Sequence[int], *, at: datetime) -> list[
     return sorted(session.scalars(query))
 
 
-def _is_alone_in_pass(session: Session, scene: Scene) -> bool:
-    """Whether no other scene with current figures can be of the same pass."""
+def _seen_in_same_pass(session: Session, scene: Scene) -> set[int]:
+    """Return the parcels that other scenes observed which can be of the same pass."""
     query = (
-        select(Scene.id)
-        .join(Write, Write.scene_id == Scene.id)
+        select(Observation.parcel_id)
+        .join(Write, Write.id == Observation.write_id)
+        .join(Scene, Scene.id == Write.scene_id)
         .where(
             Scene.id != scene.id,
             Write.closed_at.is_(None),
@@ -224,85 +203,52 @@ def _is_alone_in_pass(session: Session, scene: Scene) -> bool:
             Scene.acquired_at <= scene.acquired_at + PASS_GAP,
         )
     )
-    return session.scalar(query.limit(1)) is None
+    return set(session.scalars(query))
 
 
-def _advance_latest(session: Session, scene: Scene, write: Write, measured: Measured) -> None:
+def _advance_latest(
+    session: Session,
+    write: Write,
+    measured: Measured,
+    scene: Scene,
+    parcel_ids: NDArray[np.int64],
+    figures: NDArray[np.float32],
+) -> None:
     """Put this write's looks where the newest ones stood, unless those are newer."""
     places = {column: place for place, column in enumerate(measured.columns)}
-    shares = measured.figures[:, places[f"{measured.recipe['rule']}.valid_share"]]
-    is_look = shares >= np.float32(LOOK_SHARE)
-    for column, place in places.items():
-        measure, _, stat = column.partition(".")
-        if stat == "mean":
-            rows = [
-                _latest_row(measure, int(parcel_id), scene.acquired_at, write.id, value, share)
-                for parcel_id, value, share, seen in zip(
-                    measured.parcel_ids, measured.figures[:, place], shares, is_look, strict=True
-                )
-                if seen
-            ]
-            _upsert_latest(session, rows)
-
-
-def _latest_row(
-    measure: str,
-    parcel_id: int,
-    acquired_at: datetime,
-    write_id: int,
-    value: np.float32 | float | None,
-    valid_share: np.float32 | float,
-) -> dict[str, Any]:
-    return {
-        "measure": measure,
-        "parcel_id": parcel_id,
-        "acquired_at": acquired_at,
-        "write_id": write_id,
-        "value": None if value is None or np.isnan(value) else float(value),
-        "valid_share": float(valid_share),
-    }
-
-
-def _upsert_latest(session: Session, rows: Sequence[dict[str, Any]]) -> None:
-    if not rows:
-        return
-    dialect = sqlite if session.get_bind().dialect.name == "sqlite" else postgresql
-    statement = dialect.insert(Latest)
-    sent = statement.excluded
-    session.execute(
-        statement.on_conflict_do_update(
-            index_elements=["measure", "parcel_id"],
-            set_={
-                "acquired_at": sent.acquired_at,
-                "write_id": sent.write_id,
-                "value": sent.value,
-                "valid_share": sent.valid_share,
-            },
-            where=Latest.acquired_at <= sent.acquired_at,
-        ),
-        rows,
+    share_place = places[f"{measured.recipe['rule']}.valid_share"]
+    is_look = figures[:, share_place] >= np.float32(LOOK_SHARE)
+    advance_latest(
+        session,
+        acquired_at=scene.acquired_at,
+        write_id=write.id,
+        parcel_ids=parcel_ids[is_look],
+        figures=figures[is_look],
+        places={c.removesuffix(".mean"): p for c, p in places.items() if c.endswith(".mean")},
+        share_place=share_place,
     )
 
 
 def rebuild_latest(session: Session, parcel_ids: Sequence[int]) -> None:
     """Work out the newest looks of some parcels anew, from their observations."""
-    for some in in_batches(int(parcel_id) for parcel_id in parcel_ids):
+    for some in in_batches(parcel_ids):
         session.execute(
             delete(Latest)
             .where(Latest.parcel_id.in_(some))
             .execution_options(synchronize_session=False)
         )
-        rows = [
-            _latest_row(
-                measure,
-                parcel_id,
-                look.acquired_at,
-                look.write_id,
-                look.of_measure(measure, "mean"),
-                look.of_look("valid_share"),
-            )
-            for parcel_id, looks in newest_looks(session, some)
-            for measure, look in looks.items()
-        ]
-        if rows:
-            session.execute(insert(Latest), rows)
+        insert_latest(
+            session,
+            [
+                (
+                    measure,
+                    parcel_id,
+                    look.acquired_at,
+                    look.write_id,
+                    look.of_measure(measure, "mean"),
+                    look.of_look("valid_share"),
+                )
+                for parcel_id, looks in newest_looks(session, some)
+                for measure, look in looks.items()
+            ],
+        )

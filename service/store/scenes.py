@@ -173,7 +173,7 @@ def _written(session: Session, row: Scene | None, sent: SceneSent, *, at: dateti
     """Write what was sent into its row, new or not, and promise the ingest."""
     grid = _grid_row(session, sent.grid, sent.footprint)
     if row is None:
-        row = Scene(ref=sent.ref, kind="measured", generation=0, received_at=at)
+        row = Scene(ref=sent.ref, kind="measured", is_judged=True, generation=0, received_at=at)
     row.sensor, row.platform, row.tile = sent.sensor, sent.platform, sent.tile
     row.acquired_at, row.processing_baseline = sent.acquired_at, sent.processing_baseline
     row.details, row.digest, row.grid = dict(sent.details), sent.digest, grid

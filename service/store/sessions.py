@@ -12,7 +12,10 @@ from alembic.config import Config
 from alembic.runtime.migration import MigrationContext
 from alembic.script import ScriptDirectory
 from sqlalchemy import Connection, Engine, create_engine, event, make_url, text
+from sqlalchemy.exc import OperationalError
 from sqlalchemy.orm import Session, sessionmaker
+
+from service.errors import Unavailable
 
 _HERE = Path(__file__).resolve().parent
 
@@ -96,10 +99,20 @@ def migrate(engine: Engine, *, lock_folder: Path) -> None:
 
     Each migration and the note that it ran commit together, so a crash leaves the schema at
     one version or the next. A start that finds nothing to do writes nothing.
+
+    Raises
+    ------
+    Unavailable
+        The database can't be reached.
     """
     with fasteners.InterProcessLock(lock_folder / "migrate.lock"):
-        if is_migrated(engine):
-            return
+        try:
+            if is_migrated(engine):
+                return
+        except OperationalError as error:
+            raise Unavailable(
+                "not-ready", "The database can't be reached. Is it running, and is its URL right?"
+            ) from error
         with engine.execution_options(furrowlight_writes=True).begin() as connection:
             if connection.dialect.name == "postgresql":
                 connection.execute(

@@ -19,7 +19,7 @@ from sqlalchemy import (
 from sqlalchemy.orm import DeclarativeBase, Mapped, mapped_column, relationship
 from sqlalchemy.types import TypeEngine
 
-from service.store.columns import Figures, UtcDateTime
+from service.store.columns import Figure, Figures, UtcDateTime
 
 
 class Base(DeclarativeBase):
@@ -158,7 +158,8 @@ class Scene(Base):
 
     A row in state `queued` is the promise of its ingest. `generation` names the attempt: each
     retry, replacement or repeated measurement raises it, and a step that finds another
-    generation than its own leaves the row alone.
+    generation than its own leaves the row alone. Figures imported to shape baselines alone
+    are not judged.
     """
 
     __tablename__ = "scene"
@@ -177,6 +178,7 @@ class Scene(Base):
     id: Mapped[int] = mapped_column(RowId, primary_key=True)
     ref: Mapped[str] = mapped_column(String(100), unique=True)
     kind: Mapped[str] = mapped_column(String(20))
+    is_judged: Mapped[bool]
     sensor: Mapped[str] = mapped_column(String(100))
     platform: Mapped[str | None] = mapped_column(String(100))
     tile: Mapped[str | None] = mapped_column(String(100))
@@ -259,14 +261,15 @@ class Latest(Base):
     """The newest look of a parcel by measure, for the overview: derived, kept with each write."""
 
     __tablename__ = "latest"
-    __table_args__ = ({"sqlite_with_rowid": False},)
+    # Every scene rewrites most rows: with room beside them PostgreSQL does it in place.
+    __table_args__ = ({"sqlite_with_rowid": False, "postgresql_with": {"fillfactor": 45}},)
 
     measure: Mapped[str] = mapped_column(String(100), primary_key=True)
     parcel_id: Mapped[int] = mapped_column(BigInteger, primary_key=True, autoincrement=False)
     acquired_at: Mapped[datetime]
     write_id: Mapped[int] = mapped_column(BigInteger)
-    value: Mapped[float | None] = mapped_column(Float(24))
-    valid_share: Mapped[float] = mapped_column(Float(24))
+    value: Mapped[float | None] = mapped_column(Figure)
+    valid_share: Mapped[float] = mapped_column(Figure)
 
 
 class Answer(Base):
@@ -281,3 +284,82 @@ class Answer(Base):
     headers: Mapped[dict[str, Any]]
     body: Mapped[bytes] = mapped_column(LargeBinary)
     recorded_at: Mapped[datetime] = mapped_column(index=True)
+
+
+class Webhook(Base):
+    """A registered receiver of events.
+
+    While a secret is being replaced, the old one still signs beside the new one.
+    """
+
+    __tablename__ = "webhook"
+
+    id: Mapped[int] = mapped_column(RowId, primary_key=True)
+    public_id: Mapped[str] = mapped_column(String(40), unique=True)
+    url: Mapped[str] = mapped_column(String)
+    events: Mapped[list[str]]
+    holdings: Mapped[list[str] | None] = mapped_column(JSON(none_as_null=True))
+    min_severity: Mapped[str | None] = mapped_column(String(10))
+    secret: Mapped[str] = mapped_column(String(120))
+    old_secret: Mapped[str | None] = mapped_column(String(120))
+    old_secret_until: Mapped[datetime | None]
+    state: Mapped[str] = mapped_column(String(20))
+    created_at: Mapped[datetime]
+
+
+class Event(Base):
+    """Something that happened, as it is told: its body is the same for every receiver."""
+
+    __tablename__ = "event"
+
+    id: Mapped[str] = mapped_column(String(60), primary_key=True)
+    name: Mapped[str] = mapped_column(String(40))
+    subject: Mapped[str] = mapped_column(String(120))
+    body: Mapped[bytes] = mapped_column(LargeBinary)
+    recorded_at: Mapped[datetime] = mapped_column(index=True)
+
+
+class Delivery(Base):
+    """One event for one receiver. A row in state `waiting` is the promise of an attempt.
+
+    A round of attempts that was asked for anew raises `generation`; `earlier_attempts` are
+    those of the rounds before.
+    """
+
+    __tablename__ = "delivery"
+    __table_args__ = (
+        Index("ux_delivery_event", "event_id", "webhook_id", unique=True),
+        Index("ix_delivery_webhook", "webhook_id", "id"),
+        Index("ix_delivery_state", "state"),
+    )
+
+    id: Mapped[int] = mapped_column(RowId, primary_key=True)
+    public_id: Mapped[str] = mapped_column(String(40), unique=True)
+    event_id: Mapped[str] = mapped_column(ForeignKey("event.id"))
+    webhook_id: Mapped[int] = mapped_column(ForeignKey("webhook.id", ondelete="CASCADE"))
+    state: Mapped[str] = mapped_column(String(20))
+    generation: Mapped[int]
+    attempts: Mapped[int]
+    earlier_attempts: Mapped[int]
+    begun_at: Mapped[datetime]
+    next_at: Mapped[datetime]
+
+    event: Mapped[Event] = relationship(lazy="joined")
+    webhook: Mapped[Webhook] = relationship(lazy="joined")
+
+
+class Attempt(Base):
+    """One POST of a delivery, and what came of it."""
+
+    __tablename__ = "attempt"
+
+    delivery_id: Mapped[int] = mapped_column(
+        ForeignKey("delivery.id", ondelete="CASCADE"), primary_key=True
+    )
+    number: Mapped[int] = mapped_column(primary_key=True, autoincrement=False)
+    started_at: Mapped[datetime]
+    seconds: Mapped[float] = mapped_column(Float(53))
+    status: Mapped[int | None]
+    error: Mapped[str | None] = mapped_column(String(40))
+    detail: Mapped[str | None] = mapped_column(String)
+    answer: Mapped[str] = mapped_column(String)

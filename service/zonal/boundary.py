@@ -17,6 +17,10 @@ MAX_VERTICES: Final = 10_000
 """Validity checks slow down steeply with the vertices: 10 s were seen at 100,000."""
 MAX_REPAIR_VERTICES: Final = 500
 """Repair costs up to the square of the vertices (0.6 s for 500 random ones, 13 s for 2,000)."""
+MIN_AREA_HA: Final = 1e-4
+"""Positions on a line enclose next to nothing instead of nothing, by rounding."""
+_HA_PER_SQUARE_DEGREE: Final = 1.25e6
+"""At most: 111.7 km squared."""
 _POLYGONAL: Final = {"Polygon": 3, "MultiPolygon": 4}
 _ELLIPSOID: Final = Geod(ellps="WGS84")
 
@@ -70,16 +74,20 @@ def outline_from_geojson(
         The geometry is not polygonal, leaves the WGS 84 bounds, has too many vertices, no
         area or too much, or crosses itself; the error says where.
     """
-    _check_rings(geometry, pointer)
-    shape = shapely.force_2d(shapely.from_geojson(json.dumps(geometry)))
+    shape = shapely.from_geojson(json.dumps(_checked(geometry, pointer)))
     was_repaired = False
     if not shape.is_valid:
         shape = _repaired(shape, pointer, repair=repair)
         was_repaired = True
     shape = shapely.orient_polygons(shape)
     area_ha = abs(_ELLIPSOID.geometry_area_perimeter(shape)[0]) / 10_000
-    if shape.is_empty or area_ha <= 0:
-        raise RejectedInput.at(pointer, "The outline has no area.", code="invalid-geometry")
+    # Geodesics between positions on one line enclose a little; the line itself does not.
+    if min(area_ha, shape.area * _HA_PER_SQUARE_DEGREE) < MIN_AREA_HA:
+        raise RejectedInput.at(
+            pointer,
+            "The outline has no area: it covers less than a square metre.",
+            code="invalid-geometry",
+        )
     if area_ha > area_limit_ha:
         raise RejectedInput.at(
             pointer,
@@ -90,8 +98,8 @@ def outline_from_geojson(
     return Outline(geometry=shape, area_ha=area_ha, was_repaired=was_repaired)
 
 
-def _check_rings(geometry: object, pointer: str) -> None:
-    """Refuse what is not polygonal GeoJSON within the WGS 84 bounds, before building anything."""
+def _checked(geometry: object, pointer: str) -> dict[str, Any]:
+    """Return a geometry without heights; refuse what is not polygonal GeoJSON within WGS 84."""
     kind = geometry.get("type") if isinstance(geometry, Mapping) else None
     depth = _POLYGONAL.get(kind) if isinstance(kind, str) else None
     if depth is None or not isinstance(geometry, Mapping):
@@ -99,6 +107,13 @@ def _check_rings(geometry: object, pointer: str) -> None:
             pointer,
             "A parcel needs a geometry of type Polygon or MultiPolygon; points, lines and "
             "collections have no area to measure.",
+            code="invalid-geometry",
+        )
+    if not geometry.keys() <= {"type", "coordinates", "bbox"}:
+        raise RejectedInput.at(
+            pointer,
+            "A geometry has `type` and `coordinates`, nothing else: positions are WGS 84 degrees "
+            "(RFC 7946).",
             code="invalid-geometry",
         )
     rings = _rings(geometry.get("coordinates"), depth, f"{pointer}/coordinates")
@@ -111,6 +126,14 @@ def _check_rings(geometry: object, pointer: str) -> None:
         )
     for ring, where in rings:
         _check_ring(ring, where)
+    return {"type": kind, "coordinates": _flat(geometry["coordinates"])}
+
+
+def _flat(coordinates: Any) -> Any:
+    """Return nested positions without their heights."""
+    if isinstance(coordinates[0], list):
+        return [_flat(part) for part in coordinates]
+    return coordinates[:2]
 
 
 def _rings(value: Any, depth: int, pointer: str) -> list[tuple[Sequence[Any], str]]:
@@ -132,7 +155,8 @@ def _check_ring(ring: Sequence[Any], pointer: str) -> None:
     if positions is None:
         raise RejectedInput.at(
             pointer,
-            "Each position must be a list of numbers: longitude, latitude.",
+            "Each position must be a list of two numbers, longitude and latitude, or of three "
+            "with a height (RFC 7946).",
             code="invalid-geometry",
         )
     if len(ring) < 4 or not np.array_equal(positions[0], positions[-1]):
@@ -157,8 +181,10 @@ def _positions(ring: Sequence[Any]) -> NDArray[np.float64] | None:
     try:
         if any(type(part) not in (int, float) for position in ring for part in position):
             return None
+        if any(len(position) > 3 for position in ring):
+            return None
         positions = np.array([position[:2] for position in ring], dtype=np.float64)
-    except (TypeError, ValueError, KeyError):
+    except (TypeError, ValueError, KeyError, OverflowError):
         return None
     return positions if positions.ndim == 2 and positions.shape[1] == 2 else None
 

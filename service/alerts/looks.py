@@ -1,0 +1,53 @@
+"""A look that departed, with the figures that an alert and its cause are made of."""
+
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass
+from typing import Any
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class DepartedLook:
+    """A look whose score reached the share of the threshold that tells of a cause.
+
+    Attributes
+    ----------
+    at
+        Acquisition of the look, microseconds since 1970.
+    departs
+        Whether the score reached the threshold itself.
+    index
+        The measure that leads the score.
+    observed, expected, shortfall
+        By measure, known figures only.
+    departures
+        By measure of the rule, with the sign of the shortfall.
+    water
+        Share of the parcel's cells classed as water; None = unknown.
+    is_weak
+        Whether the cohort was too small to vouch for a single look.
+    """
+
+    at: int
+    scene: str
+    crop: str
+    score: float
+    departs: bool
+    index: str
+    observed: Mapping[str, float]
+    expected: Mapping[str, float]
+    shortfall: Mapping[str, float]
+    departures: Mapping[str, float]
+    water: float | None
+    basis: str
+    is_new_crop: bool
+    is_weak: bool
+    baseline: str
+
+    def as_dict(self) -> dict[str, Any]:
+        """Return plain members, fit for JSON."""
+        return asdict(self)
+
+    @classmethod
+    def from_dict(cls, members: Mapping[str, Any]) -> "DepartedLook":
+        """Return the look that `as_dict` wrote."""
+        return cls(**members)

@@ -1,0 +1,95 @@
+"""Medians over many looks at once, NaN left out."""
+
+from typing import Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+Figures = NDArray[np.float64]
+Counts = NDArray[np.int64]
+
+SPREAD_OF_MEDIAN: Final = 1.4826
+"""Median absolute deviation → standard deviation of a normal distribution (1 / Φ⁻¹(3/4))."""
+
+
+def medians(values: Figures) -> tuple[Figures, Counts]:
+    """Return the median of each row and how many numbers it rests on.
+
+    Parameters
+    ----------
+    values
+        Shape (measures, looks), NaN = unknown.
+
+    Returns
+    -------
+    tuple
+        Medians, shape (measures,), NaN where a row has no number; counts, shape (measures,).
+    """
+    count = np.count_nonzero(np.isfinite(values), axis=1)
+    if values.shape[1] == 0:
+        return np.full(values.shape[0], np.nan), count
+    if count.min() == values.shape[1]:
+        return np.median(values, axis=1), count
+    # Sorting puts NaN last, so the numbers of a row stand in front.
+    return _middle(np.sort(values, axis=1), np.zeros_like(count), count), count
+
+
+def windowed_medians(
+    day: Counts, values: Figures, *, centres: Counts, reach: int
+) -> tuple[Figures, Counts]:
+    """Return medians of the looks within `reach` days of each centre.
+
+    Parameters
+    ----------
+    day
+        Day of season of each look, ascending, shape (looks,).
+    values
+        Shape (measures, looks), NaN = unknown.
+    centres
+        Days of season, shape (centres,).
+    reach
+        Days to either side that count, both ends included.
+
+    Returns
+    -------
+    tuple
+        Medians and counts, shape (centres, measures).
+    """
+    first = np.searchsorted(day, centres - reach, side="left")
+    last = np.searchsorted(day, centres + reach, side="right")
+    found = [medians(values[:, a:b]) for a, b in zip(first, last, strict=True)]
+    return np.stack([median for median, _ in found]), np.stack([count for _, count in found])
+
+
+def grouped_medians(starts: Counts, values: Figures) -> tuple[Figures, Counts]:
+    """Return the median of each group of neighbouring looks.
+
+    Parameters
+    ----------
+    starts
+        Where each group begins, ascending from 0, shape (groups,).
+    values
+        Shape (measures, looks), NaN = unknown.
+
+    Returns
+    -------
+    tuple
+        Medians and counts, shape (measures, groups).
+    """
+    looks = values.shape[1]
+    group = np.repeat(np.arange(starts.size), np.diff(np.append(starts, looks)))
+    found = np.empty((values.shape[0], starts.size))
+    counts = np.empty((values.shape[0], starts.size), dtype=np.int64)
+    for measure, row in enumerate(values):
+        counts[measure] = np.bincount(group[np.isfinite(row)], minlength=starts.size)
+        ranked = row[np.lexsort((row, group))]
+        found[measure] = _middle(ranked[None, :], starts, counts[measure])
+    return found, counts
+
+
+def _middle(ranked: Figures, starts: Counts, count: Counts) -> Figures:
+    """Return the middle of `count` ascending numbers from each start on; NaN for none."""
+    rows = np.arange(count.size) if ranked.shape[0] > 1 else np.zeros(count.size, dtype=np.int64)
+    below = ranked[rows, starts + np.maximum(count - 1, 0) // 2]
+    above = ranked[rows, starts + np.where(count > 0, count // 2, 0)]
+    return np.where(count > 0, 0.5 * (below + above), np.nan)

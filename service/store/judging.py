@@ -1,0 +1,304 @@
+"""What judging reads: the axes of parcels, their looks by pass, what a person did."""
+
+import hashlib
+import io
+import json
+import zlib
+from collections.abc import Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from datetime import UTC, date, datetime, time, timedelta
+from itertools import groupby
+from typing import Any, Final
+
+import numpy as np
+from sqlalchemy import func, or_, select
+from sqlalchemy.orm import Session
+
+from service.alerts.actions import Action, ActionKind
+from service.seasons.axis import SeasonStart, season_ending_in, season_holding
+from service.seasons.baseline import Baselines
+from service.store.alert_tables import AlertChange, AlertRow, BaselineRow, SeasonFold
+from service.store.looks import PASS_GAP, Observed, observations, one_per_pass
+from service.store.tables import Boundary, CropSeason, Observation, Parcel, Scene, Write
+
+SPOILED: Final = ("confirmed", "bad_data")
+"""Verdicts that take an alert's looks out of the baselines; no verdict does so too."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Axis:
+    """A season axis: when its crop years begin, and the parcels on it."""
+
+    id: str
+    start: SeasonStart
+    refs: Mapping[int, str]
+
+    def season_of(self, instant: datetime) -> int:
+        """Return the season that holds an instant, by the year in which it ends."""
+        return season_holding(instant.date(), self.start)[1].year
+
+    def begins_at(self, season: int) -> datetime:
+        """Return the first moment of a season."""
+        return _midnight(season_ending_in(season, self.start)[0])
+
+    def ends_at(self, season: int) -> datetime:
+        """Return the first moment after a season."""
+        return _midnight(season_ending_in(season, self.start)[1] + timedelta(days=1))
+
+    def day_of(self, instant: datetime) -> int:
+        """Return the day of season from 0."""
+        return (instant.date() - season_holding(instant.date(), self.start)[0]).days
+
+
+def _midnight(day: date) -> datetime:
+    return datetime.combine(day, time(), tzinfo=UTC)
+
+
+def axes(session: Session, starts: tuple[str, str]) -> list[Axis]:
+    """Return the season axes that have parcels; `starts` are north and south of the equator."""
+    latitude = func.max(Boundary.south + Boundary.north)
+    query = (
+        select(Parcel.id, Parcel.ref, latitude)
+        .join(Boundary, Boundary.parcel_id == Parcel.id)
+        .where(Boundary.closed_at.is_(None))
+        .group_by(Parcel.id, Parcel.ref)
+    )
+    refs: dict[str, dict[int, str]] = {}
+    for parcel_id, ref, twice_latitude in session.execute(query):
+        start = starts[0] if twice_latitude >= 0 else starts[1]
+        refs.setdefault(start, {})[parcel_id] = ref
+    return [
+        Axis(id=start, start=SeasonStart.parse(start), refs=of_axis)
+        for start, of_axis in sorted(refs.items())
+    ]
+
+
+def want_judging(session: Session, axis: Axis, season: int) -> None:
+    """Promise that a season's looks are judged, and those of later seasons that were."""
+    row = session.get(SeasonFold, (axis.id, season), with_for_update=True)
+    if row is None:
+        row = SeasonFold(axis=axis.id, season=season, wanted=0, done=0, state=None)
+        session.add(row)
+    row.wanted += 1
+    _want_from(session, axis.id, season + 1)
+
+
+def want_judging_of(session: Session, alert: AlertRow) -> None:
+    """Promise that what a person did with an alert is taken up, in its season and later ones."""
+    _want_from(session, alert.axis, alert.season)
+
+
+def want_judging_of_scenes(
+    session: Session, scenes: Iterable[Scene], starts: tuple[str, str]
+) -> None:
+    """Promise that the looks which scenes touch are judged, and what rests on them.
+
+    A scene that only shapes baselines makes later seasons be judged anew, not its own.
+    """
+    known = axes(session, starts)
+    wanted: dict[tuple[str, int], bool] = {}
+    for scene in scenes:
+        for axis in axes_of_scene(session, scene, known):
+            key = (axis.id, axis.season_of(scene.acquired_at))
+            wanted[key] = wanted.get(key, False) or scene.is_judged
+    by_id = {axis.id: axis for axis in known}
+    for (axis_id, season), is_judged in sorted(wanted.items()):
+        if is_judged:
+            want_judging(session, by_id[axis_id], season)
+        else:
+            _want_from(session, axis_id, season + 1)
+
+
+def want_judging_of_crops(session: Session, days: Iterable[date], starts: tuple[str, str]) -> None:
+    """Promise judging anew from the earliest of some days on: labels have changed."""
+    first = min(days, default=None)
+    if first is None:
+        return
+    for axis in axes(session, starts):
+        _want_from(session, axis.id, season_holding(first, axis.start)[1].year)
+
+
+def _want_from(session: Session, axis_id: str, season: int) -> None:
+    query = select(SeasonFold).where(SeasonFold.axis == axis_id, SeasonFold.season >= season)
+    for row in session.scalars(query.with_for_update()):
+        row.wanted += 1
+    session.flush()
+
+
+def wanted_folds(session: Session) -> Sequence[SeasonFold]:
+    """Return the folds that are promised, in order of time."""
+    query = select(SeasonFold).where(SeasonFold.wanted > SeasonFold.done)
+    return session.scalars(query.order_by(SeasonFold.season, SeasonFold.axis)).all()
+
+
+def axes_of_scene(session: Session, scene: Scene, known: Sequence[Axis]) -> list[Axis]:
+    """Return the axes of the parcels that a scene was ever measured for."""
+    query = (
+        select(Observation.parcel_id)
+        .join(Write, Write.id == Observation.write_id)
+        .where(Write.scene_id == scene.id)
+        .distinct()
+    )
+    parcels = set(session.scalars(query))
+    return [axis for axis in known if not parcels.isdisjoint(axis.refs)]
+
+
+Look = tuple[Observed, dict[str, float]]
+"""The observation that a look rests on, and its figures by measure."""
+
+
+def looks_of(
+    session: Session,
+    axis: Axis,
+    measures: Sequence[str],
+    *,
+    since: datetime | None,
+    until: datetime,
+    is_judged: bool | None = None,
+) -> Iterator[tuple[int, list[Look]]]:
+    """Yield each parcel with its looks from `since` until before `until`, one per pass.
+
+    A look's figures are those of its scene: of each measure the newest write that has it.
+    """
+    rows = observations(
+        session,
+        sorted(axis.refs),
+        since=since - PASS_GAP if since else None,
+        until=until + PASS_GAP,
+        is_judged=is_judged,
+    )
+    for parcel_id, of_parcel in groupby(rows, key=lambda row: row.parcel_id):
+        known = list(of_parcel)
+        by_scene: dict[int, list[Observed]] = {}
+        for row in known:
+            by_scene.setdefault(row.scene_id, []).append(row)
+        looks = [
+            (look, _figures(by_scene[look.scene_id], measures))
+            for look in one_per_pass(known)
+            if (since is None or look.acquired_at >= since) and look.acquired_at < until
+        ]
+        yield parcel_id, looks
+
+
+def _figures(rows: Sequence[Observed], measures: Sequence[str]) -> dict[str, float]:
+    found: dict[str, float] = {}
+    for row in sorted(rows, key=lambda row: row.write_id):
+        for measure in measures:
+            if row.places.has(measure):
+                value = row.figure(f"{measure}.mean")
+                found[measure] = np.nan if value is None else value
+    return found
+
+
+def history_key(session: Session, axis: Axis, season: int) -> str:
+    """Return a hash of all that a season's baselines are fitted from."""
+    begin = axis.begins_at(season)
+    writes = session.execute(
+        select(func.count(), func.max(Write.id), func.count(Write.closed_at))
+        .join(Scene, Scene.id == Write.scene_id)
+        .where(Scene.acquired_at < begin)
+    ).one()
+    first = season_ending_in(season, axis.start)[0]
+    crops = session.execute(
+        select(CropSeason.parcel_id, CropSeason.crop, CropSeason.from_on, CropSeason.until_on)
+        .where(CropSeason.from_on < first)
+        .order_by(CropSeason.parcel_id, CropSeason.from_on)
+    ).all()
+    spoiled = [(p, a.isoformat(), b.isoformat()) for p, a, b in spoiled_looks(session, begin)]
+    told = [axis.id, season, len(axis.refs), list(writes), [list(map(str, row)) for row in crops]]
+    return hashlib.sha256(json.dumps([told, spoiled]).encode()).hexdigest()
+
+
+def spoiled_looks(session: Session, until: datetime) -> list[tuple[int, datetime, datetime]]:
+    """Return (parcel, first, last instant) of looks that must not shape a baseline."""
+    query = select(AlertRow).where(
+        AlertRow.state != "retracted",
+        AlertRow.first_departure_at < until,
+        or_(AlertRow.verdict.is_(None), AlertRow.verdict.in_(SPOILED)),
+    )
+    return [
+        (row.parcel_id, row.first_departure_at, row.closed_at or until)
+        for row in session.scalars(query.order_by(AlertRow.id))
+    ]
+
+
+def find_baselines(session: Session, axis_id: str, season: int) -> BaselineRow | None:
+    """Return the baselines in use for a season."""
+    query = select(BaselineRow).where(BaselineRow.axis == axis_id, BaselineRow.season == season)
+    return session.scalar(query.order_by(BaselineRow.id.desc()).limit(1))
+
+
+def find_newest_baselines(session: Session, axis_id: str) -> BaselineRow | None:
+    """Return the baselines in use for the newest season of an axis that is judged."""
+    query = select(BaselineRow).where(BaselineRow.axis == axis_id)
+    newest = query.order_by(BaselineRow.season.desc(), BaselineRow.id.desc())
+    return session.scalar(newest.limit(1))
+
+
+def packed(baselines: Baselines) -> bytes:
+    """Return baselines as the bytes of an npz file."""
+    file = io.BytesIO()
+    np.savez_compressed(file, **baselines.to_arrays())  # type: ignore[arg-type]
+    return file.getvalue()
+
+
+def unpacked(arrays: bytes) -> Baselines:
+    """Return the baselines that `packed` wrote."""
+    with np.load(io.BytesIO(arrays), allow_pickle=False) as file:
+        return Baselines.from_arrays(dict(file))
+
+
+def squeezed(state: Mapping[str, Any]) -> bytes:
+    """Return a fold's state as compressed JSON."""
+    return zlib.compress(json.dumps(state, separators=(",", ":")).encode(), 1)
+
+
+def unsqueezed(state: bytes) -> dict[str, Any]:
+    """Return the state that `squeezed` wrote."""
+    members: dict[str, Any] = json.loads(zlib.decompress(state))
+    return members
+
+
+def state_before(session: Session, axis: Axis, season: int) -> bytes | None:
+    """Return what the last judged season before one remembers at its end."""
+    query = (
+        select(SeasonFold.state)
+        .where(
+            SeasonFold.axis == axis.id, SeasonFold.season < season, SeasonFold.state.is_not(None)
+        )
+        .order_by(SeasonFold.season.desc())
+    )
+    return session.scalar(query.limit(1))
+
+
+def actions_in(session: Session, axis: Axis, season: int) -> list[Action]:
+    """Return what people did with alerts in a season, in the order in which they did it."""
+    query = (
+        select(AlertChange, AlertRow)
+        .join(AlertRow, AlertRow.id == AlertChange.alert_id)
+        .where(
+            AlertRow.axis == axis.id,
+            AlertChange.who.is_not(None),
+            AlertChange.look_at >= axis.begins_at(season),
+            AlertChange.look_at < axis.ends_at(season),
+        )
+        .order_by(AlertChange.recorded_at, AlertChange.alert_id, AlertChange.number)
+    )
+    return [
+        Action(
+            kind=ActionKind(change.kind),
+            parcel=axis.refs[row.parcel_id],
+            rule=row.rule,
+            at=change.look_at,
+            verdict=change.verdict,
+        )
+        for change, row in session.execute(query)
+    ]
+
+
+def crops_on(
+    seasons: Mapping[int, Sequence[CropSeason]], parcel_id: int, days: Iterable[date]
+) -> list[str | None]:
+    """Return what grew on a parcel on some days."""
+    own = seasons.get(parcel_id, ())
+    return [next((s.crop for s in own if s.from_on <= d <= s.until_on), None) for d in days]

@@ -1,0 +1,96 @@
+"""The real command line, dying as by ``kill -9`` at a named point.
+
+Run as ``python tests/faults/crashing.py POINT serve --data …``. The service knows nothing of
+it: a function that it calls at the point is wrapped from here, and no handler, no `finally`
+and no commit runs after the signal.
+"""
+
+import os
+import signal
+import sys
+import threading
+from collections.abc import Callable, Mapping
+from functools import partial
+from itertools import count
+from typing import Any, Final
+
+import alembic.op
+from dbos import DBOS
+
+import service.api.scenes
+import service.cli
+import service.jobs.ingest
+import service.jobs.measuring
+import service.jobs.upkeep
+import service.store.observations
+
+
+def die() -> None:
+    """End this process as a power cut would."""
+    os.kill(os.getpid(), signal.SIGKILL)
+
+
+def before(owner: Any, name: str, *, times: int = 1, act: Callable[[], None] = die) -> None:
+    """Act when a function is about to be called for the so-manieth time."""
+    wrapped = getattr(owner, name)
+    calls = count(start=1)
+
+    def acting(*args: Any, **kwargs: Any) -> Any:
+        if next(calls) == times:
+            act()
+        return wrapped(*args, **kwargs)
+
+    setattr(owner, name, acting)
+
+
+def after(owner: Any, name: str) -> None:
+    """Die when a function has done its work, before its caller learns of it."""
+    wrapped = getattr(owner, name)
+
+    def dying(*args: Any, **kwargs: Any) -> None:
+        wrapped(*args, **kwargs)
+        die()
+
+    setattr(owner, name, dying)
+
+
+def ask_to_end_and_go_on() -> None:
+    """Ask this process to end, as an operator would, and keep its step at work."""
+    os.kill(os.getpid(), signal.SIGTERM)
+    threading.Event().wait()
+
+
+def sweep_often() -> None:
+    """Let no test wait for the minute between two sweeps."""
+    service.jobs.upkeep.SWEEP_SECONDS = 0.1  # type: ignore[misc]
+
+
+POINTS: Final[Mapping[str, Callable[[], None]]] = {
+    # Nothing dies.
+    "never": sweep_often,
+    # The files are kept and there is no row: not begun, or not committed.
+    "before-row": partial(before, service.api.scenes, "keep_scene"),
+    "row-not-committed": partial(after, service.api.scenes, "keep_scene"),
+    # The row is there and its job is not; or it is, and the client has no answer.
+    "before-job": partial(before, service.jobs.ingest, "enqueue"),
+    "after-job": partial(after, service.jobs.ingest, "enqueue"),
+    # Measuring: before the pixels, among the rows, before the commit.
+    "before-pixels": partial(before, service.jobs.measuring, "observe"),
+    "rows-inserted": partial(before, service.store.observations, "bump_revisions"),
+    "rows-not-committed": partial(after, service.jobs.measuring, "record"),
+    # The observations are there and the scene is not done: the queue knows nothing of the
+    # step's end, or it does, or the end is not committed.
+    "step-not-noted": partial(after, service.jobs.ingest, "measure_scene"),
+    "before-finish": partial(before, service.jobs.ingest, "finish"),
+    "done-not-committed": partial(before, service.jobs.ingest, "now"),
+    # Starting: among the first tables, before the queue's engine, with the engine running.
+    "migrating": partial(before, alembic.op, "create_table", times=5),
+    "before-engine": partial(before, DBOS, "launch"),
+    "engine-running": partial(before, DBOS, "register_queue"),
+    # No crash, but a step that does not end when it should.
+    "asked-to-end": partial(before, service.jobs.measuring, "observe", act=ask_to_end_and_go_on),
+}
+
+if __name__ == "__main__":
+    POINTS[sys.argv.pop(1)]()
+    service.cli.main()

@@ -1,0 +1,92 @@
+"""Scored looks by hand, for tests of what opens and closes alerts."""
+
+from collections.abc import Mapping, Sequence
+from datetime import UTC, datetime, timedelta
+
+import numpy as np
+
+from service.alerts.alert import Change
+from service.alerts.instants import microseconds
+from service.alerts.looks import DepartedLook
+from service.alerts.persistence import Scored, watch_pass
+from service.alerts.rules import RULES, Rule
+from service.alerts.watch import Watch
+
+RULE = RULES["default"]
+FIRST = datetime(2024, 5, 1, 10, 30, tzinfo=UTC)
+
+
+def on(day: int) -> datetime:
+    """Return the instant of a pass, days after the first."""
+    return FIRST + timedelta(days=day)
+
+
+def scored(
+    day: int,
+    scores: Mapping[str, float],
+    *,
+    shortfalls: Mapping[str, float] | None = None,
+    is_weak: bool = False,
+    rule: Rule = RULE,
+) -> Scored:
+    """Return looks with given scores, all led by NDVI.
+
+    `shortfalls` by measure hold for every look; without them NDVI falls short by a twentieth of
+    the score.
+    """
+    parcels = list(scores)
+    values = np.array([scores[parcel] for parcel in parcels])
+
+    def short(at: int) -> dict[str, float]:
+        return dict(shortfalls or {"ndvi": -float(values[at]) / 20})
+
+    def describe(at: int) -> DepartedLook:
+        return DepartedLook(
+            at=microseconds(on(day)),
+            scene=f"scene-{day}",
+            crop="barley",
+            score=float(values[at]),
+            departs=bool(values[at] >= rule.thresholds.look),
+            index="ndvi",
+            observed={name: 0.8 + each for name, each in short(at).items()},
+            expected=dict.fromkeys(short(at), 0.8),
+            shortfall=short(at),
+            departures={"ndvi": -float(values[at])},
+            water=None,
+            basis="own",
+            is_new_crop=False,
+            is_weak=is_weak,
+            baseline="v1",
+        )
+
+    names = [watched.index for watched in rule.measures]
+    size = len(parcels)
+    return Scored(
+        opening=on(day),
+        parcels=parcels,
+        at=np.full(size, microseconds(on(day))),
+        score=values,
+        threshold=np.full(size, rule.thresholds.look),
+        single_look=np.full(size, np.inf if is_weak else rule.thresholds.single_look),
+        cause_from=np.full(size, rule.thresholds.cause),
+        shortfalls=np.array([[short(at).get(n, np.nan) for n in names] for at in range(size)]),
+        describe=describe,
+    )
+
+
+def watched(
+    scores: Sequence[float],
+    *,
+    watch: Watch | None = None,
+    first_day: int = 0,
+    is_weak: bool = False,
+    rule: Rule = RULE,
+) -> tuple[Watch, list[Change]]:
+    """Return the memory of parcel A, and all changes, after looks every five days."""
+    watch = watch or Watch.nothing(rule)
+    changes: list[Change] = []
+    for at, score in enumerate(scores):
+        looks = scored(first_day + at * 5, {"A": score}, is_weak=is_weak, rule=rule)
+        watch, new = watch_pass(watch, looks, rule)
+        changes += new
+    return watch, changes
