@@ -2,10 +2,10 @@
 
 from alembic import context
 
-from service.store.alert_tables import Base
+from service.store.alert_tables import AlertRow
 
 connection = context.config.attributes["connection"]
 context.configure(
-    connection=connection, target_metadata=Base.metadata, transaction_per_migration=False
+    connection=connection, target_metadata=AlertRow.metadata, transaction_per_migration=False
 )
 context.run_migrations()

@@ -3,24 +3,41 @@
 import logging
 import re
 import sys
-from collections.abc import MutableMapping
+from collections.abc import Mapping, MutableMapping
 from typing import Any
 
 import structlog
 
-_SECRET = re.compile(r"\b(flk_|whsec_)[A-Za-z0-9_+/=-]{8,}")
-_URL_TAIL = re.compile(r"(https?://)(?:[^/\s@]*@)?([^\s?#]*)[?#]\S*")
+_SECRET = re.compile(r"(flk_|whsec_)[A-Za-z0-9_+/=-]{8,}")
+# A URL's user info, its place, its query and fragment.
+_URL = re.compile(
+    r"(\b[A-Za-z][A-Za-z0-9+.-]{0,30}://)(?:[^/\s?#]*@)?([^\s?#]*)(?:[?#][^\s\"'<>]*)?"
+)
 
 
 def redacted(text: str) -> str:
-    """Return the text without key secrets and without query strings of URLs."""
-    return _URL_TAIL.sub(r"\1\2", _SECRET.sub(r"\1[redacted]", text))
+    """Return the text without key secrets, and without user info and queries of URLs."""
+    return _URL.sub(r"\1\2", _SECRET.sub(r"\1[redacted]", text))
+
+
+def _redacted_within(value: Any) -> Any:
+    if isinstance(value, str):
+        return redacted(value)
+    if isinstance(value, Mapping):
+        return {_redacted_within(name): _redacted_within(part) for name, part in value.items()}
+    if isinstance(value, list | tuple | set):
+        return [_redacted_within(part) for part in value]
+    return value
 
 
 def _redact(
     _logger: object, _method: str, event: MutableMapping[str, Any]
 ) -> MutableMapping[str, Any]:
-    return {name: redacted(v) if isinstance(v, str) else v for name, v in event.items()}
+    # The records of other libraries stand here too, under names that begin with "_".
+    return {
+        name: value if name.startswith("_") else _redacted_within(value)
+        for name, value in event.items()
+    }
 
 
 def set_up_logs(level: str) -> None:

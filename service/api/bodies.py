@@ -126,6 +126,21 @@ def json_items(file: IO[bytes], prefix: str) -> Iterator[Any]:
         raise RejectedInput("malformed-json", "The body is not valid JSON.") from error
 
 
+def json_array(file: IO[bytes]) -> Iterator[Any]:
+    """Yield the items of a body that must be a JSON array.
+
+    Raises
+    ------
+    RejectedInput
+        The body is not JSON, is no array, or has more items than a call may bring.
+    """
+    _, first, _ = next(_flat_events(file))
+    if first != "start_array":
+        raise RejectedInput.at("", "The body must be a JSON array of objects.")
+    file.seek(0)
+    yield from json_items(file, "item")
+
+
 def json_members(file: IO[bytes], *, but: str) -> dict[str, Any]:
     """Return the plain members of a JSON object, without reading one member's array into memory.
 

@@ -2,25 +2,28 @@
 
 from collections.abc import Iterator
 from datetime import datetime
+from functools import partial
 from typing import Annotated, Any, Final
 
 from fastapi import Query, Response
-from pydantic import BaseModel, Field, FiniteFloat, model_validator
+from pydantic import BaseModel, BeforeValidator, Field, FiniteFloat
 from sqlalchemy.orm import Session
+from starlette.concurrency import run_in_threadpool
 
 from service.api.batches import Faults, model_of
 from service.api.bodies import (
     Bulk,
     BulkBody,
     csv_rows,
-    json_items,
+    json_array,
     unsupported_media_type,
 )
-from service.api.context import Caller, Ctx, Ingester
-from service.api.once import OnceOnly, json_answer
-from service.api.routes import contract_router
+from service.api.context import Caller, Context, Ctx, Ingester
+from service.api.once import Once, OnceOnly, json_answer
+from service.api.preferences import Wait, is_judged
+from service.api.routes import contract_router, takes
 from service.api.scene_checks import check_acquired
-from service.api.wire import Instant, Ref, Sent, Text
+from service.api.wire import Instant, Ref, Sent, Text, joined
 from service.clock import now
 from service.errors import Fault, RejectedInput
 from service.spectral.indices import INDICES
@@ -37,6 +40,17 @@ _COLUMNS: Final = {
     **dict.fromkeys((*STATS[1:], "valid_share", "sensor", "source", "harmonised"), False),
 }
 _RANGES: Final = {"normalised": (-1.0, 1.0), "band": (-0.5, 2.0), "other": (-100.0, 100.0)}
+_RANKED: Final = ("min", "p10", "p50", "p90", "max")
+_MOST_PIXELS: Final = 1e9
+
+
+def _refuse_flag(value: object) -> object:
+    if isinstance(value, bool):
+        raise ValueError("send a number, not true or false")  # noqa: TRY004 - what pydantic takes for a fault
+    return value
+
+
+Number = Annotated[FiniteFloat, BeforeValidator(_refuse_flag)]
 
 
 class FigureIn(Sent):
@@ -45,38 +59,47 @@ class FigureIn(Sent):
     parcel: Ref
     index: str
     observed_at: Instant
-    mean: FiniteFloat
-    sd: Annotated[FiniteFloat, Field(ge=0)] | None = None
-    min: FiniteFloat | None = None
-    p10: FiniteFloat | None = None
-    p50: FiniteFloat | None = None
-    p90: FiniteFloat | None = None
-    max: FiniteFloat | None = None
-    pixels: Annotated[FiniteFloat, Field(ge=0)] | None = None
-    valid_share: Annotated[FiniteFloat, Field(ge=0, le=1)] | None = None
+    mean: Number
+    sd: Annotated[Number, Field(ge=0)] | None = None
+    min: Number | None = None
+    p10: Number | None = None
+    p50: Number | None = None
+    p90: Number | None = None
+    max: Number | None = None
+    pixels: Annotated[Number, Field(ge=0, le=_MOST_PIXELS)] | None = None
+    valid_share: Annotated[Number, Field(ge=0, le=1)] | None = None
     sensor: Text = "import"
     source: Text = "import"
     harmonised: bool = False
 
-    @model_validator(mode="after")
-    def _is_possible(self) -> "FigureIn":
-        low, high = _range_of(self.index)
-        inner = [v for v in (self.min, self.p10, self.p50, self.p90, self.max) if v is not None]
-        if not all(low <= value <= high for value in (self.mean, *inner)):
-            raise ValueError(
-                f"figures of this measure lie from {low:g} to {high:g}; send reflectance as a "
-                "fraction and indices unscaled"
+
+def _check_possible(figure: FigureIn, pointer: str) -> None:
+    """Refuse figures that no surface gives."""
+    low, high = _range_of(figure.index, f"{pointer}/index")
+    ranked = {name: getattr(figure, name) for name in _RANKED}
+    known = {name: value for name, value in ranked.items() if value is not None}
+    for name, value in {"mean": figure.mean, **known}.items():
+        if not low <= value <= high:
+            raise RejectedInput.at(
+                f"{pointer}/{name}",
+                f"Figures of this measure lie from {low:g} to {high:g}. Send reflectance as a "
+                "fraction and indices unscaled.",
             )
-        if inner != sorted(inner):
-            raise ValueError("min, p10, p50, p90 and max must not decrease in this order")
-        return self
+    if figure.sd is not None and figure.sd > high - low:
+        raise RejectedInput.at(
+            f"{pointer}/sd", "No figures of this measure lie so far apart. Check the unit."
+        )
+    if list(known.values()) != sorted(known.values()):
+        detail = f"{joined(_RANKED)} must not decrease in this order."
+        raise RejectedInput.at(f"{pointer}/{next(iter(known))}", detail)
 
 
-def _range_of(measure: str) -> tuple[float, float]:
+def _range_of(measure: str, pointer: str) -> tuple[float, float]:
     if measure in set(BandRole):
         return _RANGES["band"]
     if measure not in INDICES:
-        raise ValueError(f"there is no such index; there are {', '.join(INDICES)}, and band roles")
+        detail = f"There is no such index. There are {joined(INDICES)}, and the band roles."
+        raise RejectedInput.at(pointer, detail)
     return _RANGES["normalised" if INDICES[measure].normalised else "other"]
 
 
@@ -90,21 +113,39 @@ class ObservationsPosted(BaseModel):
     errors: list[dict[str, str]]
 
 
-@router.post("", response_model=ObservationsPosted)
-def post_observations(
-    body: Bulk,
+@router.post(
+    "",
+    response_model=ObservationsPosted,
+    openapi_extra=takes("application/json", "text/csv"),
+)
+async def post_observations(
     caller: Ingester,
+    body: Bulk,
     context: Ctx,
     once: OnceOnly,
+    wait: Wait,
     *,
     assess: Annotated[bool, Query(description="Judge them as if just measured.")] = False,
 ) -> Response:
-    """Keep figures measured elsewhere, from a JSON array or CSV."""
+    """Keep figures measured elsewhere, from a JSON array or CSV.
+
+    `Prefer: wait` holds the answer until whatever judging is promised is done.
+    """
+    keep = partial(_keep, body, caller, context, once, assess=assess)
+    answer = await run_in_threadpool(keep)
+    if wait:
+        await is_judged(context, wait)
+    return answer
+
+
+def _keep(
+    body: BulkBody, caller: Caller, context: Context, once: Once, *, assess: bool
+) -> Response:
     faults = Faults()
     at = now()
     sent = {}
-    for item, line, value in _items(body):
-        figure = faults.collect(item, lambda: _figure(value, item, line, at=at))  # noqa: B023
+    for item, value in enumerate(_items(body, faults)):
+        figure = faults.collect(item, lambda: _figure(value, item, at=at))  # noqa: B023
         if figure is not None:
             sent[item] = figure
     faults.refuse(unless_lenient=body.is_lenient)
@@ -128,30 +169,22 @@ def post_observations(
     return answer
 
 
-def _items(body: BulkBody) -> Iterator[tuple[int, int | None, Any]]:
-    """Yield each row with its place and, in CSV, its line."""
+def _items(body: BulkBody, faults: Faults) -> Iterator[Any]:
+    """Yield each row; of a CSV body the faults learn on which line it ends."""
     if body.media_type == "text/csv":
         for item, (line, cells) in enumerate(csv_rows(body.file, _COLUMNS)):
-            yield item, line, cells
+            faults.lines[item] = line
+            yield cells
     elif body.media_type == "application/json":
-        for item, value in enumerate(json_items(body.file, "item")):
-            yield item, None, value
+        yield from json_array(body.file)
     else:
         raise unsupported_media_type("application/json", "text/csv")
 
 
-def _figure(value: object, item: int, line: int | None, *, at: datetime) -> FigureIn:
-    try:
-        figure = model_of(FigureIn, value, f"/{item}")
-        check_acquired(figure.observed_at, f"/{item}/observed_at", at=at)
-    except RejectedInput as error:
-        if line is None:
-            raise
-        told = [
-            Fault(pointer=fault.pointer, detail=f"Line {line}: {fault.detail}")
-            for fault in error.faults
-        ]
-        raise RejectedInput(error.code, error.detail, told) from error
+def _figure(value: object, item: int, *, at: datetime) -> FigureIn:
+    figure = model_of(FigureIn, value, f"/{item}")
+    _check_possible(figure, f"/{item}")
+    check_acquired(figure.observed_at, f"/{item}/observed_at", at=at)
     return figure
 
 

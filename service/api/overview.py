@@ -13,8 +13,8 @@ from sqlalchemy import and_, select
 from sqlalchemy.orm import Session
 
 from service.api.context import Ctx, Reader
+from service.api.features import GEOJSON, geometry_of
 from service.api.measures import measures_in, media_type_in
-from service.api.parcels import GEOJSON, geometry_of
 from service.api.routes import contract_router
 from service.api.wire import QueryInstant, Ref, Text, written
 from service.clock import now

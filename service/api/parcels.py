@@ -1,12 +1,10 @@
 """Parcels: inserted, updated, listed, retired; their boundary versions."""
 
-import json
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from typing import Annotated, Any, Final
 
 import shapely
 from fastapi import Query, Request, Response
-from fastapi.responses import JSONResponse
 from pydantic import BaseModel, Field
 from sqlalchemy import select
 from sqlalchemy.orm import Session
@@ -20,19 +18,19 @@ from service.api.bodies import (
     unsupported_media_type,
 )
 from service.api.context import Caller, Context, Ctx, Reader, Steward
+from service.api.features import GEOJSON, GeoJson, features_of, geometry_of
 from service.api.overlaps import overlap_warnings
 from service.api.paging import Cursor, Limit, link_next, place_in
 from service.api.problems import pointer_of
 from service.api.routes import contract_router, takes
 from service.api.seasons import season_of_day
-from service.api.wire import Instant, InstantOut, LongText, QueryBox, Ref, Sent, Text, written
+from service.api.wire import Instant, InstantOut, LongText, QueryBox, Ref, Sent, Text
 from service.clock import now
 from service.errors import Fault, RejectedInput
 from service.store.judging import want_judging_of_crops
 from service.store.parcels import (
     ParcelChange,
     ParcelsChanged,
-    boundaries_at,
     get_parcel,
     in_force,
     intersects,
@@ -44,21 +42,14 @@ from service.store.parcels import (
     visible,
 )
 from service.store.scenes import remeasure
-from service.store.seasons import crop_on, put_crop_of_day, seasons_of
+from service.store.seasons import put_crop_of_day, seasons_of
 from service.store.sessions import serialise
 from service.store.tables import Boundary, CropSeason, Holding, Parcel, ParcelTag
 from service.zonal.boundary import outline_from_geojson
 
-GEOJSON: Final = "application/geo+json"
 MAX_VERTICES_A_CALL: Final = 250_000
 MAX_REPAIRED_VERTICES_A_CALL: Final = 5_000
 router = contract_router("/parcels", "parcels")
-
-
-class GeoJson(JSONResponse):
-    """A GeoJSON answer (RFC 7946)."""
-
-    media_type = GEOJSON
 
 
 class PropertiesSent(Sent):
@@ -319,7 +310,7 @@ def get_parcels(
         query = query.where(Parcel.id.in_(_tagged(tag)))
     with context.sessions.reading() as session:
         rows = session.scalars(query.limit(limit + 1)).all()
-        features = _features(session, rows[:limit])
+        features = features_of(session, rows[:limit])
     answer = GeoJson({"type": "FeatureCollection", "features": features})
     if len(rows) > limit:
         link_next(request, answer, rows[limit - 1].id)
@@ -337,46 +328,12 @@ def _tagged(tag: str) -> Any:
     return select(ParcelTag.parcel_id).where(ParcelTag.tag == tag)
 
 
-def _features(session: Session, rows: Sequence[Parcel]) -> list[dict[str, Any]]:
-    ids = [row.id for row in rows]
-    at = now()
-    boundaries = boundaries_at(session, ids, at=at)
-    seasons = seasons_of(session, ids)
-    return [
-        _feature(row, boundaries[row.id], crop_on(seasons.get(row.id, []), at.date()))
-        for row in rows
-    ]
-
-
-def _feature(row: Parcel, boundary: Boundary, crop: str | None) -> dict[str, Any]:
-    return {
-        "type": "Feature",
-        "id": row.ref,
-        "properties": {
-            "ref": row.ref,
-            "name": row.name,
-            "holding": row.holding.ref if row.holding else None,
-            "crop": crop,
-            "tags": row.tags,
-            "area_ha": round(boundary.area_ha, 4),
-            "retired_at": written(row.retired_at) if row.retired_at else None,
-        },
-        "geometry": geometry_of(boundary),
-    }
-
-
-def geometry_of(boundary: Boundary) -> dict[str, Any]:
-    """Return a boundary as GeoJSON geometry."""
-    geometry: dict[str, Any] = json.loads(shapely.to_geojson(shapely.from_wkb(boundary.wkb)))
-    return geometry
-
-
 @router.get("/{ref}", response_class=GeoJson)
 def get_one_parcel(ref: str, caller: Reader, context: Ctx) -> Response:
     """Answer one parcel, retired or not, as GeoJSON feature."""
     with context.sessions.reading() as session:
         row = get_parcel(session, ref, holdings=caller.holdings)
-        return GeoJson(_features(session, [row])[0])
+        return GeoJson(features_of(session, [row])[0])
 
 
 @router.delete("/{ref}", response_class=GeoJson)
@@ -385,7 +342,7 @@ def delete_parcel(ref: str, caller: Steward, context: Ctx) -> Response:
     with context.sessions.writing() as session:
         row = get_parcel(session, ref, holdings=caller.holdings)
         retire_parcel(session, row, at=now())
-        return GeoJson(_features(session, [row])[0])
+        return GeoJson(features_of(session, [row])[0])
 
 
 @router.get("/{ref}/boundaries")

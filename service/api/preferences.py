@@ -1,5 +1,6 @@
 """What callers prefer (RFC 7240): to have good items land alone, to have the answer held."""
 
+from collections.abc import Callable
 from typing import Annotated, Final
 
 import anyio
@@ -8,6 +9,7 @@ from sqlalchemy import select
 from starlette.concurrency import run_in_threadpool
 
 from service.api.context import Context
+from service.store.judging import is_judging_wanted
 from service.store.scenes import SceneState
 from service.store.tables import Scene
 
@@ -36,13 +38,27 @@ Wait = Annotated[float, Depends(_wait_seconds)]
 
 async def is_settled(context: Context, ref: str, seconds: float) -> bool:
     """Wait until a scene's work is done or has failed; return whether that came in time."""
+    return await _comes_true(lambda: _has_ended(context, ref), seconds)
+
+
+async def is_judged(context: Context, seconds: float) -> bool:
+    """Wait until no judging is promised; return whether that came in time."""
+    return await _comes_true(lambda: _nothing_wanted(context), seconds)
+
+
+async def _comes_true(holds: Callable[[], bool], seconds: float) -> bool:
     with anyio.move_on_after(seconds):
-        while not await run_in_threadpool(_look, context, ref):
+        while not await run_in_threadpool(holds):
             await anyio.sleep(_POLL_SECONDS)
         return True
     return False
 
 
-def _look(context: Context, ref: str) -> bool:
+def _nothing_wanted(context: Context) -> bool:
+    with context.sessions.reading() as session:
+        return not is_judging_wanted(session)
+
+
+def _has_ended(context: Context, ref: str) -> bool:
     with context.sessions.reading() as session:
         return session.scalar(select(Scene.state).where(Scene.ref == ref)) not in _UNSETTLED

@@ -234,6 +234,11 @@ KINDS: Final[Mapping[str, Kind]] = {
         page="Events are sent by https to public addresses, and elsewhere only if the operator "
         "allows it (`FURROWLIGHT_WEBHOOK_NETWORKS`).",
     ),
+    "webhook-disabled": Kind(
+        title="Webhook disabled",
+        page="The receiver is disabled, by a person or because it said that it is gone for good; "
+        "nothing is sent to it. Set its state to active, then try again.",
+    ),
     "still-trying": Kind(
         title="Still trying", page="Attempts to deliver this event are still being made."
     ),

@@ -29,16 +29,25 @@ class ContractRoute(APIRoute):
     def get_route_handler(self) -> Callable[[Request], Coroutine[Any, Any, Response]]:
         """Wrap the handler with what holds for all of them."""
         handle = super().get_route_handler()
-        takes_json = self.body_field is not None
+        body = self.body_field
+        is_optional = body is not None and not body.field_info.is_required()
         params = get_flat_params(self.dependant)
         known = {param.alias for param in params if isinstance(param.field_info, Query)}
 
         async def handled(request: Request) -> Response:
             refuse_unknown(request, known)
-            response = await handle(await _with_json(request) if takes_json else request)
+            if body is not None and not (is_optional and _has_no_body(request)):
+                request = await _with_json(request)
+            response = await handle(request)
             return with_tag(request, response) if request.method == "GET" else response
 
         return handled
+
+
+def _has_no_body(request: Request) -> bool:
+    """Whether a request says that it brings no body (RFC 9112, 6.3)."""
+    length = request.headers.get("Content-Length", "0")
+    return length == "0" and "Transfer-Encoding" not in request.headers
 
 
 async def _with_json(request: Request) -> Request:

@@ -24,6 +24,7 @@ from service.store.webhooks import (
     WebhookState,
     add_webhook,
     attempts_of,
+    check_enabled,
     get_delivery,
     get_webhook,
     list_deliveries,
@@ -246,6 +247,7 @@ def ping_webhook(webhook_id: str, caller: Steward, context: Ctx, once: OnceOnly)
         if (first := once.replay(session, caller, webhook_id)) is not None:
             return first
         row = get_webhook(session, webhook_id, holdings=caller.holdings)
+        check_enabled(row)
         promised = announce_ping(session, context.settings, row, key=secrets.token_hex(8), at=at)
         made = _delivery(session, promised[0].delivery_id)
         answer = once.keep(session, caller, webhook_id, json_answer(made, 202))

@@ -5,7 +5,8 @@ from typing import Annotated, Any, Final
 
 import typer
 from rich.console import Console
-from rich.table import Table
+from rich.table import Column, Table
+from rich.text import Text
 
 from service.cli.client import call, connect_from_environment
 
@@ -24,7 +25,7 @@ def list_all(
     parcel: Annotated[str | None, typer.Option(help="One parcel only.")] = None,
     as_json: _Json = False,
 ) -> None:
-    """List alerts, the last opened first."""
+    """List alerts, the last opened first: a table on a terminal, else tab-separated lines."""
     asked = {"state": state, "holding": holding, "parcel": parcel, "limit": 1000}
     params = {name: value for name, value in asked.items() if value is not None}
     with connect_from_environment() as client:
@@ -33,10 +34,16 @@ def list_all(
         for alert in alerts:
             typer.echo(json.dumps(alert, ensure_ascii=False))
         return
-    table = Table(*_COLUMNS)
+    console = Console()
+    if not console.is_terminal:
+        for alert in alerts:
+            typer.echo("\t".join(_row(alert)))
+        return
+    # An id is needed whole, to show or close its alert.
+    table = Table(Column(_COLUMNS[0], no_wrap=True), *_COLUMNS[1:])
     for alert in alerts:
-        table.add_row(*_row(alert))
-    Console().print(table if alerts else "No alerts.")
+        table.add_row(*(Text(cell, overflow="fold") for cell in _row(alert)))
+    console.print(table if alerts else "No alerts.")
 
 
 def _row(alert: dict[str, Any]) -> list[str]:

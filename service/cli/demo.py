@@ -1,18 +1,20 @@
-"""`furrowlight demo`: the whole job once, on an invented scene, over HTTP.
+"""`furrowlight demo`: the whole job once, on an invented season, over HTTP.
 
-It starts the real service in a child process, sends parcels and a scene as any client
-would, and holds the figures against what was put into the scene.
+It starts the real service in a child process, registers and posts as any client would,
+receives the alerts, and holds them against what was put into the season.
 """
 
 import json
+import os
 import signal
+import sys
 import tempfile
 import time
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Annotated, Any, Final
-from urllib.parse import quote
 
 import httpx
 import typer
@@ -21,68 +23,124 @@ from rich.progress import Progress
 
 from service.cli.children import output_of, running_service
 from service.cli.client import call, connect
-from service.cli.demo_figures import LOSSES, SHOWN, Row, faults_of, table_of
+from service.cli.demo_receiver import Event, Receiver, receiving
+from service.cli.demo_report import SCENE_HEADS, event_line, report, scene_line, summary
+from service.cli.demo_truth import Befallen, ToldAlert, faults_of, told_alerts
 from service.errors import RejectedInput, Unavailable
+from service.webhooks.events import EventName
 
-WAIT_SECONDS: Final = 120.0
-POLL_SECONDS: Final = 0.2
+SCENE_SECONDS: Final = 50
+DELIVERY_SECONDS: Final = 20.0
+POLL_SECONDS: Final = 0.1
 EXIT_WAITED: Final = 6
-EXIT_WRONG_FIGURES: Final = 70
+EXIT_WRONG: Final = 70
 SCOPES: Final = "read,ingest,triage,manage"
-# A demo needs a few megabytes and must run on a disk that is too full for a deployment.
-SETTINGS: Final = {"FURROWLIGHT_DISK_RESERVE_BYTES": str(32 * 1024**2)}
-CAUTION: Final = (
-    "Caution: screening figures, here of an invented scene. With real scenes too, check on\n"
-    "the ground before acting."
+EVENTS: Final = (
+    EventName.ALERT_OPENED,
+    EventName.ALERT_CHANGED,
+    EventName.ALERT_CLOSED,
+    EventName.SCENE_DONE,
+    EventName.SCENE_FAILED,
 )
+SETTINGS: Final = {
+    # A demo needs a few megabytes and must run on a disk that is too full for a deployment.
+    "FURROWLIGHT_DISK_RESERVE_BYTES": str(32 * 1024**2),
+    "FURROWLIGHT_QUEUE_POLLING_SECONDS": "0.05",
+    "FURROWLIGHT_WEBHOOK_NETWORKS": "127.0.0.0/8",
+}
+_CSV: Final = {"Content-Type": "text/csv"}
+_JSON: Final = {"Content-Type": "application/json"}
+_GEOJSON: Final = {"Content-Type": "application/geo+json"}
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Telling:
+    """How the demo speaks while it works: lines for good, and what it is at.
+
+    `begin` takes what begins, and the share of the work (0-1) that is done by then.
+    """
+
+    say: Callable[[str], None]
+    begin: Callable[[str, float], None]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Outcome:
+    """What came of the season: the alerts that were told, and in what they are wrong."""
+
+    befallen: Sequence[Befallen]
+    alerts: Sequence[ToldAlert]
+    faults: Sequence[str]
 
 
 def demo(
     *,
     keep: Annotated[bool, typer.Option("--keep", help="Go on serving until Ctrl-C.")] = False,
     data: Annotated[
-        Path | None, typer.Option("--data", help="Data folder; without it a temporary one.")
+        Path | None,
+        typer.Option("--data", help="New data folder to keep; without it a temporary one."),
     ] = None,
     seed: Annotated[
-        int | None, typer.Option("--seed", min=0, help="Other noise in the invented scene.")
+        int | None,
+        typer.Option("--seed", min=0, help="Another season: weather, clouds, what befalls whom."),
     ] = None,
 ) -> None:
-    """Serve, post one invented scene over HTTP and print the parcels' indices."""
+    """Run an invented season through the service: alerts, and the truth beside them."""
     # A polite end from outside must end the child too, as Ctrl-C does.
     signal.signal(signal.SIGTERM, signal.default_int_handler)
-    typer.echo("Furrowlight demo: an invented scene over the parcels of Quillmere Growers\n")
+    if data is not None and data.is_dir() and any(data.iterdir()):
+        raise RejectedInput("not-empty", "The data folder holds something; name a new one.")
+    typer.echo(
+        "Furrowlight demo: a season of Quillmere Growers, who are invented like their land\n"
+    )
     with ExitStack() as stack:
         scratch = Path(stack.enter_context(tempfile.TemporaryDirectory(prefix="furrowlight-")))
         sample, folder = scratch / "sample", data or scratch / "data"
-        make_sample(sample, seed=seed)
-        service = stack.enter_context(
-            running_service(folder, log=scratch / "service.log", settings=SETTINGS)
-        )
-        typer.echo(f"The service answers at {service.address}.")
-        key = make_key(folder)
-        client = stack.enter_context(connect(service.address, key=key))
-        send_parcels(client, sample)
-        scene = send_scene(client, sample)
-        scene = wait_for(client, scene["ref"])
-        say_report(scene)
-        rows = rows_of(client, scene, sample)
-        typer.echo(f"\n{table_of(rows)}\n\n{CAUTION}\n")
-        faults = faults_of(rows, json.loads((sample / "truth.json").read_text("utf-8"))["parcels"])
-        if faults:
-            typer.echo("\n".join(["The figures are wrong:", *faults]), err=True)
-            raise typer.Exit(EXIT_WRONG_FIGURES)
-        say_what_next(service.address, key, data=data, keep=keep)
-        if keep:
-            service.wait()
+        url, receiver = stack.enter_context(receiving())
+        with progress_shown() as telling:
+            telling.begin("inventing the season", 0.0)
+            make_sample(sample, seed=seed)
+            telling.begin("starting the service", 0.15)
+            service = stack.enter_context(
+                running_service(folder, log=scratch / "service.log", settings=SETTINGS)
+            )
+            telling.say(f"The service answers at {service.address}.")
+            key = make_key(folder)
+            client = stack.enter_context(connect(service.address, key=key))
+            outcome = run_season(client, sample, receiver, url, telling)
+        typer.echo("\n" + told(outcome, sample, receiver))
+        check(outcome)
+        say_what_next(outcome, service.address, key, keep_in=scratch if keep else None)
+        while keep and service.process.poll() is None:
+            say_events(receiver.news(seconds=1.0), typer.echo)
+
+
+@contextmanager
+def progress_shown() -> Iterator[Telling]:
+    """Yield how to tell: under the lines a bar on a terminal, elsewhere the lines alone."""
+    console = Console()
+    if not console.is_terminal:
+        yield Telling(say=typer.echo, begin=lambda _step, _share: None)
+        return
+    with Progress(console=console, transient=True) as progress:
+        task = progress.add_task("", total=1.0)
+
+        def begin(step: str, share: float) -> None:
+            progress.update(task, description=step, completed=share)
+
+        def say(line: str) -> None:
+            console.print(line, markup=False, highlight=False, soft_wrap=True)
+
+        yield Telling(say=say, begin=begin)
 
 
 def make_sample(folder: Path, *, seed: int | None) -> None:
-    """Write the invented scene, by its generator in the installed package or the checkout."""
+    """Write the invented season, by its generator in the installed package or the checkout."""
     here = Path(__file__).parent
     homes = (here / "sample_tiles", here.parents[1] / "sample_tiles")
-    scripts = [home / "generate.py" for home in homes if (home / "generate.py").is_file()]
+    scripts = [home / "season.py" for home in homes if (home / "season.py").is_file()]
     if not scripts:
-        raise Unavailable("no-sample", "This installation lacks the demo's scene; install it anew.")
+        raise Unavailable("no-sample", "This installation lacks the demo's land; install it anew.")
     seeding = [] if seed is None else ["--seed", str(seed)]
     output_of([str(scripts[0]), str(folder), *seeding], settings={})
 
@@ -93,137 +151,138 @@ def make_key(data: Path) -> str:
     return output_of([*creating, "--label", "demo", "--scopes", SCOPES], settings=SETTINGS).strip()
 
 
-def send_parcels(client: httpx.Client, sample: Path) -> None:
-    """Send the parcels and say what became of them."""
-    parcels = (sample / "parcels.geojson").read_bytes()
-    answer = call(
-        client,
-        "PUT",
-        "/v1/parcels",
-        content=parcels,
-        headers={"Content-Type": "application/geo+json"},
-    )
-    counts = (f"{answer[name]} {name}" for name in ("created", "updated", "unchanged"))
-    typer.echo(f"Parcels sent: {', '.join(counts)}.")
+def run_season(
+    client: httpx.Client, sample: Path, receiver: Receiver, url: str, telling: Telling
+) -> Outcome:
+    """Register, import, post scene by scene, and return what came of it."""
+    telling.begin("registering parcels and their crops", 0.3)
+    register(client, sample, telling)
+    telling.begin("importing the past seasons", 0.32)
+    history = (sample / "history.csv").read_bytes()
+    kept = call(client, "POST", "/v1/observations", content=history, headers=_CSV)
+    telling.say(f"{kept['created']:,} figures of past seasons imported.")
+    hook = call(client, "POST", "/v1/webhooks", json={"url": url, "events": EVENTS})
+    receiver.trust(hook["secret"])
+    telling.say(f"A receiver at {url} will be told of alerts and scenes.\n\n{SCENE_HEADS}")
+    folders = sorted((sample / "scenes").iterdir())
+    for number, folder in enumerate(folders, start=1):
+        telling.begin(
+            f"scene {number} of {len(folders)}", 0.45 + 0.53 * (number - 1) / len(folders)
+        )
+        scene = post_scene(client, folder)
+        telling.say(scene_line(scene))
+        if not receiver.waits_for(EventName.SCENE_DONE, scene["ref"], seconds=DELIVERY_SECONDS):
+            break
+        say_events(receiver.news(), telling.say)
+    telling.begin("waiting for the last messages", 0.98)
+    wait_for_deliveries(client, hook["id"])
+    say_events(receiver.news(), telling.say)
+    return outcome_of(client, sample, receiver)
 
 
-def send_scene(client: httpx.Client, sample: Path) -> dict[str, Any]:
-    """Send the scene, one file per band role, and return what the service says of it."""
+def register(client: httpx.Client, sample: Path, telling: Telling) -> None:
+    """Register the parcels with their holdings, and what grew on them season by season."""
+    outlines = (sample / "parcels.geojson").read_bytes()
+    parcels = call(client, "PUT", "/v1/parcels", content=outlines, headers=_GEOJSON)
+    crops = (sample / "seasons.json").read_bytes()
+    seasons = call(client, "POST", "/v1/seasons", content=crops, headers=_JSON)
+    telling.say(f"{parcels['created']} parcels and {seasons['created']} crop seasons registered.")
+
+
+def post_scene(client: httpx.Client, folder: Path) -> dict[str, Any]:
+    """Post a scene, one file per band role, and return it when it is measured and judged."""
     with ExitStack() as stack:
         files: list[tuple[str, Any]] = [
-            ("scene", (None, (sample / "scene.json").read_bytes(), "application/json"))
+            ("scene", (None, (folder / "scene.json").read_bytes(), "application/json"))
         ]
-        for path in sorted(sample.glob("*.tif")):
+        for path in sorted(folder.glob("*.tif")):
             file = stack.enter_context(path.open("rb"))
             files.append((path.stem, (path.name, file, "image/tiff")))
-        scene = call(client, "POST", "/v1/scenes", files=files)
-    typer.echo(f"Scene {scene['ref']} sent in {len(files)} parts.")
+        waiting = {"Prefer": f"wait={SCENE_SECONDS}"}
+        scene = call(client, "POST", "/v1/scenes", files=files, headers=waiting)
+    if scene["state"] in {"queued", "running"}:
+        typer.echo(f"A scene is not done after {SCENE_SECONDS} seconds.", err=True)
+        raise typer.Exit(EXIT_WAITED)
+    if scene["state"] != "done":
+        detail = (scene["failure"] or {}).get("detail", "no reason is given.")
+        raise RejectedInput("scene-failed", f"A scene is {scene['state']}: {detail}")
     return scene
 
 
-def wait_for(client: httpx.Client, ref: str) -> dict[str, Any]:
-    """Ask for the scene until it is done; show how far it is."""
-    end = time.monotonic() + WAIT_SECONDS
-    with progress_shown() as show:
-        while True:
-            scene = call(client, "GET", f"/v1/scenes/{quote(ref, safe='')}")
-            show(scene["state"], scene["progress"] or 0.0)
-            if scene["state"] == "done":
-                return scene
-            if scene["state"] not in {"queued", "running"}:
-                failure: Mapping[str, str] = scene["failure"] or {}
-                detail = failure.get("detail", "no reason is given.")
-                raise RejectedInput("scene-failed", f"The scene is {scene['state']}: {detail}")
-            if time.monotonic() > end:
-                typer.echo(f"The scene is not done after {WAIT_SECONDS:.0f} seconds.", err=True)
-                raise typer.Exit(EXIT_WAITED)
-            time.sleep(POLL_SECONDS)
+def say_events(events: Sequence[Event], say: Callable[[str], None]) -> None:
+    """Say what the receiver was told of alerts."""
+    for line in filter(None, map(event_line, events)):
+        say(line)
 
 
-@contextmanager
-def progress_shown() -> Iterator[Callable[[str, float], None]]:
-    """Yield what shows a state and a share: a bar on a terminal, a line per change elsewhere."""
-    console = Console(stderr=True)
-    if console.is_terminal:
-        with Progress(console=console, transient=True) as progress:
-            task = progress.add_task("queued", total=1.0)
-            yield lambda state, share: progress.update(task, description=state, completed=share)
+def wait_for_deliveries(client: httpx.Client, webhook: str) -> None:
+    """Wait until no message to the receiver is on its way, for a while at most.
+
+    What has not arrived by then is found missing when the alerts are compared.
+    """
+    end = time.monotonic() + DELIVERY_SECONDS
+    path, params = f"/v1/webhooks/{webhook}/deliveries", {"limit": 1000}
+    while time.monotonic() < end:
+        deliveries = call(client, "GET", path, params=params)["deliveries"]
+        if all(each["state"] != "waiting" for each in deliveries):
+            return
+        time.sleep(POLL_SECONDS)
+
+
+def outcome_of(client: httpx.Client, sample: Path, receiver: Receiver) -> Outcome:
+    """Hold what the receiver was told against the truth, and against the service's own list."""
+    truth = json.loads((sample / "truth.json").read_text("utf-8"))
+    befallen = [Befallen.from_truth(members) for members in truth["events"]]
+    alerts = told_alerts(befallen, receiver.events)
+    listed = call(client, "GET", "/v1/alerts", params={"limit": 1000})["alerts"]
+    faults = faults_of(befallen, alerts, listed=listed, forged=receiver.forged)
+    return Outcome(befallen=befallen, alerts=alerts, faults=faults)
+
+
+def told(outcome: Outcome, sample: Path, receiver: Receiver) -> str:
+    """Return the alerts beside the truth, and the outcome in one sentence."""
+    features = json.loads((sample / "parcels.geojson").read_text("utf-8"))["features"]
+    names = {each["properties"]["ref"]: each["properties"]["name"] for each in features}
+    alerts = report(outcome.alerts, outcome.befallen, names=names)
+    count = len(receiver.events)
+    return f"{alerts}\n\n{summary(outcome.alerts, outcome.befallen, received=count)}\n"
+
+
+def check(outcome: Outcome) -> None:
+    """Exit with what went wrong, if anything did."""
+    if outcome.faults:
+        typer.echo("\n".join(["Something went wrong:", *outcome.faults]), err=True)
+        raise typer.Exit(EXIT_WRONG)
+
+
+def say_what_next(outcome: Outcome, address: str, key: str, *, keep_in: Path | None) -> None:
+    """Say what a curious person can try now; `keep_in` is where to put the key if it serves on."""
+    program = sys.argv[0] if Path(sys.argv[0]).name == "furrowlight" else "furrowlight"
+    if keep_in is None:
+        typer.echo(f"To look around: {program} demo --keep goes on serving and says what to try.")
         return
-    said: set[str] = set()
-
-    def say(state: str, share: float) -> None:
-        line = f"  {state}, {share:.0%}"
-        if line not in said:
-            typer.echo(line, err=True)
-        said.add(line)
-
-    yield say
-
-
-def say_report(scene: Mapping[str, Any]) -> None:
-    """Say how many parcels were measured and why the others were not."""
-    unseen: Mapping[str, int] = scene["parcels_unseen"]
-    reasons = ", ".join(f"{count} by {reason}" for reason, count in unseen.items())
+    key_file = keep_in / "key"
+    with os.fdopen(os.open(key_file, os.O_WRONLY | os.O_CREAT, 0o600), "w") as file:
+        file.write(f"{key}\n")
+    alert = outcome.alerts[-1].opened
     typer.echo(
-        f"Scene done: {scene['parcels_in_footprint']} parcels in its footprint, "
-        f"{scene['parcels_measured']} measured, {sum(unseen.values())} unseen"
-        + (f" ({reasons})." if reasons else ".")
+        "\n".join(
+            [
+                "Serving until Ctrl-C, and telling here what the receiver is told. Try elsewhere:",
+                f"  export FURROWLIGHT_URL={address} FURROWLIGHT_KEY_FILE={key_file}",
+                f"  export KEY={key}",
+                f"  {program} alerts list",
+                f"  {program} alerts show {alert['id']}",
+                f"  {program} alerts close {alert['id']} --verdict confirmed",
+                *(
+                    f'  curl -H "Authorization: Bearer $KEY" "$FURROWLIGHT_URL{path}"'
+                    for path in (
+                        "/v1/overview?index=ndvi&at=2024-08-20&format=csv",
+                        f"/v1/parcels/{alert['parcel']}/series?index={alert['index']}"
+                        "&with=baseline,departure&from=2024-04-01",
+                        f"/v1/parcels/{alert['parcel']}/baseline?index={alert['index']}",
+                    )
+                ),
+            ]
+        )
     )
-
-
-def rows_of(client: httpx.Client, scene: Mapping[str, Any], sample: Path) -> list[Row]:
-    """Ask for every sent parcel's figures in the scene."""
-    path = f"/v1/scenes/{quote(scene['ref'], safe='')}/parcels"
-    looks = call(client, "GET", path, params={"limit": 1000})["parcels"]
-    shares: dict[str, Mapping[str, Any]] = {look["parcel"]: look for look in looks}
-    sent = json.loads((sample / "parcels.geojson").read_text("utf-8"))["features"]
-    properties = [feature["properties"] for feature in sent]
-    return [
-        row_of(client, scene["ref"], parcel, shares[parcel["ref"]])
-        for parcel in properties
-        if parcel["ref"] in shares
-    ]
-
-
-def row_of(
-    client: httpx.Client, scene: str, parcel: Mapping[str, Any], look: Mapping[str, Any]
-) -> Row:
-    """Ask for one parcel's series and pick what this scene gave."""
-    answer = call(
-        client,
-        "GET",
-        f"/v1/parcels/{quote(parcel['ref'], safe='')}/series",
-        params={"index": ",".join(SHOWN), "stat": "mean,pixels", "min_valid": 0},
-    )
-    columns: Mapping[str, Mapping[str, list[Any]]] = answer["indices"]
-
-    def figure(index: str, stat: str) -> float | None:
-        column = columns.get(index, {"scene": []})
-        at = [place for place, ref in enumerate(column["scene"]) if ref == scene]
-        return column[stat][at[-1]] if at else None
-
-    return Row(
-        ref=parcel["ref"],
-        crop=parcel.get("crop") or "-",
-        valid_share=look["valid_share"],
-        pixels=figure(SHOWN[0], "pixels") or 0.0,
-        lost={name: look[name] for name in LOSSES},
-        means={index: figure(index, "mean") for index in SHOWN},
-    )
-
-
-def say_what_next(address: str, key: str, *, data: Path | None, keep: bool) -> None:
-    """Say what a curious person can try now."""
-    if keep:
-        typer.echo(f"Serving until Ctrl-C. Try:\n  export URL={address} KEY={key}")
-    elif data is None:
-        typer.echo("To look around, run `furrowlight demo --keep`, which goes on serving. Then:")
-    else:
-        typer.echo(f"To look around, run `furrowlight serve --data {data}` with a key. Then:")
-    for path in (
-        "/v1/overview?index=ndvi",
-        "/v1/parcels/QM-05/series?index=ndvi,ndmi&stat=mean,p10,p90,valid_share",
-        "/v1/parcels/QM-05/series?index=ndwi&format=text/csv",
-        "/v1/indices/ndmi",
-    ):
-        typer.echo(f'  curl -H "Authorization: Bearer $KEY" "$URL{path}"')

@@ -21,9 +21,10 @@ from service.alerts.alert import Alert
 from service.alerts.rules import RULES
 from service.assess import BASELINE_MEASURES, State, Step, alerts_after, fold, in_order
 from service.clock import now
+from service.errors import Unavailable
 from service.jobs.announce import announce_alert
-from service.jobs.deliver import Promise, fresh_promises
 from service.jobs.deliver import enqueue as enqueue_deliveries
+from service.jobs.deliver import fresh_promises
 from service.jobs.resources import Resources, resources
 from service.seasons.baseline import Baselines, fit_baselines
 from service.seasons.history import History
@@ -81,9 +82,14 @@ class _Reading:
     crops: Mapping[int, Sequence[CropSeason]] = field(default_factory=dict)
 
 
-def judge_wanted(work: Resources) -> list[Promise]:
-    """Judge all seasons that are promised; return the deliveries that this promises."""
-    promises: list[Promise] = []
+def judge_wanted(work: Resources) -> None:
+    """Judge all seasons that are promised.
+
+    Raises
+    ------
+    Unavailable
+        What is to be judged kept changing while it was being judged.
+    """
     with _ONE_AT_A_TIME:
         for _ in range(_TRIES):
             with work.sessions.reading() as session:
@@ -92,13 +98,13 @@ def judge_wanted(work: Resources) -> list[Promise]:
                     axis for axis in axes(session, work.settings.season_starts) if axis.id in wanted
                 ]
             if not known:
-                break
+                return
             for axis in known:
-                promises += _judge_axis(work, axis)
-    return promises
+                _judge_axis(work, axis)
+    raise Unavailable("still-changing", "What is to be judged keeps changing.")
 
 
-def _judge_axis(work: Resources, axis: Axis) -> list[Promise]:
+def _judge_axis(work: Resources, axis: Axis) -> None:
     """Judge the promised seasons of an axis in order of time, and record all of it at once."""
     with work.sessions.reading() as session:
         wanted = {row.season: row.wanted for row in wanted_folds(session) if row.axis == axis.id}
@@ -108,7 +114,7 @@ def _judge_axis(work: Resources, axis: Axis) -> list[Promise]:
             before = judged[-1].state if judged else _state_before(session, axis, season)
             judged.append(_judge_season(reading, season, wanted[season], before))
     with work.sessions.writing() as session:
-        return _record(session, work, axis, judged, at=now())
+        _record(session, work, axis, judged, at=now())
 
 
 def _state_before(session: Session, axis: Axis, season: int) -> State:
@@ -274,14 +280,14 @@ def _reason(judged: Judgements, at: int) -> str | None:
 
 def _record(
     session: Session, work: Resources, axis: Axis, judged: Sequence[_Season], *, at: datetime
-) -> list[Promise]:
+) -> None:
     """Record what judging found, unless something changed while it was being worked out."""
     rows = {
         each.season: session.get_one(SeasonFold, (axis.id, each.season), with_for_update=True)
         for each in judged
     }
     if any(rows[each.season].wanted != each.wanted for each in judged):
-        return []
+        return
     baseline_ids = {each.season: _baseline_id(session, axis, each, at=at) for each in judged}
     for each in judged:
         put_judgements(
@@ -301,11 +307,8 @@ def _record(
         session, axis.id, seasons, alerts, parcels, [each.season for each in judged], at=at
     )
     _log.info("seasons judged", axis=axis.id, seasons=sorted(rows), changes=len(happened))
-    return [
-        promise
-        for one in happened
-        for promise in announce_alert(session, work.settings, one, at=at)
-    ]
+    for one in happened:
+        announce_alert(session, work.settings, one, at=at)
 
 
 def _baseline_id(session: Session, axis: Axis, judged: _Season, *, at: datetime) -> int:
@@ -342,9 +345,9 @@ def assess(_wanted: str) -> str:
 
 
 @DBOS.step(name="judge", retries_allowed=True, max_attempts=5)
-def judge() -> int:
-    """Judge whatever is promised; return how many deliveries that promises."""
-    return len(judge_wanted(resources()))
+def judge() -> None:
+    """Judge whatever is promised; the deliveries that this promises stand in the database."""
+    judge_wanted(resources())
 
 
 def enqueue_fresh_deliveries() -> None:

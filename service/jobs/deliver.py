@@ -21,6 +21,8 @@ from service.store.webhooks import (
     DeliveryState,
     WebhookState,
     active_secrets,
+    find_delivery,
+    lock_delivery,
     waiting_deliveries,
 )
 from service.webhooks.delivery import LIMITS, Outcome, Verdict, deliver
@@ -32,9 +34,13 @@ _log = structlog.get_logger()
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Promise:
-    """A promised attempt: of which delivery, which one, to whom, and in how many seconds."""
+    """A promised attempt: of which delivery, which one, to whom, and in how many seconds.
+
+    The queue knows a delivery by `public_id`: numbers of deleted rows are given out again.
+    """
 
     delivery_id: int
+    public_id: str
     generation: int
     number: int
     webhook_id: int
@@ -43,13 +49,14 @@ class Promise:
     @property
     def workflow_id(self) -> str:
         """The id that makes promising the same attempt twice one piece of work."""
-        return f"deliver:{self.delivery_id}:{self.generation}:{self.number}"
+        return f"deliver:{self.public_id}:{self.generation}:{self.number}"
 
 
 def promise_of(row: Delivery, *, at: datetime) -> Promise:
     """Return the attempt that a waiting delivery is due."""
     return Promise(
         delivery_id=row.id,
+        public_id=row.public_id,
         generation=row.generation,
         number=row.attempts + 1,
         webhook_id=row.webhook_id,
@@ -77,24 +84,24 @@ def enqueue(promises: Sequence[Promise]) -> None:
             ),
         ):
             DBOS.enqueue_workflow(
-                QUEUE, deliver_event, promise.delivery_id, promise.generation, promise.number
+                QUEUE, deliver_event, promise.public_id, promise.generation, promise.number
             )
 
 
 @DBOS.workflow(name="deliver", max_recovery_attempts=10)
-def deliver_event(delivery_id: int, generation: int, number: int) -> str:
+def deliver_event(public_id: str, generation: int, number: int) -> str:
     """Make one attempt, and promise the next one if it failed."""
-    state = attempt(delivery_id, generation, number)
+    state = attempt(public_id, generation, number)
     if state == DeliveryState.WAITING:
         with resources().sessions.reading() as session:
-            row = session.get(Delivery, delivery_id)
+            row = find_delivery(session, public_id)
             due = [promise_of(row, at=now())] if row is not None else []
         enqueue(due)
     return state
 
 
 @DBOS.step(name="attempt")
-def attempt(delivery_id: int, generation: int, number: int) -> str:
+def attempt(public_id: str, generation: int, number: int) -> str:
     """POST once and record what came of it; return the delivery's state, or ``left``.
 
     Repeated after a crash between POST and record it POSTs again under the same event id,
@@ -103,11 +110,14 @@ def attempt(delivery_id: int, generation: int, number: int) -> str:
     work = resources()
     started_at = now()
     with work.sessions.reading() as session:
-        row = session.get(Delivery, delivery_id)
+        row = find_delivery(session, public_id)
         if row is None or not _is_due(row, generation, number):
             return "left"
+        is_disabled = row.webhook.state == WebhookState.DISABLED
         url, event_id, body = row.webhook.url, row.event_id, row.event.body
         signing = active_secrets(row.webhook, at=started_at)
+    if is_disabled:
+        return _leave_off(work, (public_id, generation, number))
     # No session is open while the other side takes its time.
     outcome = deliver(
         transport_for(work.settings.webhook_networks),
@@ -118,7 +128,29 @@ def attempt(delivery_id: int, generation: int, number: int) -> str:
         sent_at=started_at,
     )
     with work.sessions.writing() as session:
-        return _record(session, work, (delivery_id, generation, number), outcome, at=started_at)
+        return _record(session, work, (public_id, generation, number), outcome, at=started_at)
+
+
+def _leave_off(work: Resources, promised: tuple[str, int, int]) -> str:
+    """End a delivery to a receiver that was disabled meanwhile; it may be sent again later."""
+    public_id, generation, number = promised
+    with work.sessions.writing() as session:
+        row = lock_delivery(session, public_id)
+        if row is None or not _is_due(row, generation, number):
+            return "left"
+        row.state = DeliveryState.EXHAUSTED
+        return row.state
+
+
+def promise_anew(work: Resources, promise: Promise) -> list[Promise]:
+    """Promise an attempt whose workflow ended without making it, unless things moved on."""
+    with work.sessions.writing() as session:
+        row = lock_delivery(session, promise.public_id)
+        if row is None or not _is_due(row, promise.generation, promise.number):
+            return []
+        # A workflow that ended never runs again; another generation is another workflow.
+        row.generation += 1
+        return [promise_of(row, at=now())]
 
 
 def _is_due(row: Delivery, generation: int, number: int) -> bool:
@@ -139,19 +171,19 @@ def transport_for(networks: tuple[str, ...]) -> GuardedTransport:
 def _record(
     session: Session,
     work: Resources,
-    promised: tuple[int, int, int],
+    promised: tuple[str, int, int],
     outcome: Outcome,
     *,
     at: datetime,
 ) -> str:
-    delivery_id, generation, number = promised
-    row = session.get(Delivery, delivery_id, with_for_update={"of": Delivery})
+    public_id, generation, number = promised
+    row = lock_delivery(session, public_id)
     if row is None or not _is_due(row, generation, number):
         return "left"
     row.attempts = number
     session.add(
         Attempt(
-            delivery_id=delivery_id,
+            delivery_id=row.id,
             number=number,
             started_at=at,
             seconds=round(outcome.seconds, 3),
@@ -170,8 +202,10 @@ def _record(
         row.next_at = now() + wait
     else:
         row.state = DeliveryState.EXHAUSTED
-        is_gone = outcome.verdict is Verdict.GONE
-        row.webhook.state = WebhookState.DISABLED if is_gone else WebhookState.FAILING
+        if outcome.verdict is Verdict.GONE:
+            row.webhook.state = WebhookState.DISABLED
+        elif row.webhook.state == WebhookState.ACTIVE:
+            row.webhook.state = WebhookState.FAILING
         _log.warning("delivery exhausted", webhook=row.webhook.public_id, error=outcome.error)
     return row.state
 

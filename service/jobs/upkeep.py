@@ -15,12 +15,14 @@ from service.store.answers import forget_old_answers
 from service.store.batches import in_batches
 from service.store.scenes import SceneState, kept_digests, put_back, unfinished_scenes
 from service.store.tables import Scene
-from service.store.webhooks import waiting_deliveries
+from service.store.webhooks import forget_old_deliveries, waiting_deliveries
 
 SWEEP_SECONDS: Final = 60.0
 ORPHAN_SECONDS: Final = 24 * 3600.0
 """A file without a row is left alone this long: its upload may be about to commit."""
 WORKFLOWS_KEPT_FOR: Final = timedelta(days=30)
+DELIVERIES_KEPT_FOR: Final = timedelta(days=30)
+"""Settled ones, from when they were last begun, with their attempts and their event."""
 _PURGE_BATCH: Final = 500
 _UNKNOWN: Final = "unknown"
 _CRASHED: Final = "MAX_RECOVERY_ATTEMPTS_EXCEEDED"
@@ -70,7 +72,7 @@ def sweep(work: Resources) -> None:
     _sweep_deliveries(work)
     with work.sessions.reading() as session:
         scenes = unfinished_scenes(session)
-    states = _workflow_states(scenes)
+    states = _workflow_states([ingest.workflow_id(scene.id, scene.generation) for scene in scenes])
     for scene in scenes:
         state = states.get(ingest.workflow_id(scene.id, scene.generation), _UNKNOWN)
         if state == _UNKNOWN and scene.state == SceneState.QUEUED:
@@ -84,22 +86,22 @@ def sweep(work: Resources) -> None:
 
 
 def _sweep_deliveries(work: Resources) -> None:
-    """Enqueue promised attempts that the queue does not know."""
+    """Enqueue promised attempts that the queue does not know, or that it gave up."""
     at = now()
     with work.sessions.reading() as session:
         promises = [deliver.promise_of(row, at=at) for row in waiting_deliveries(session)]
     for some in in_batches(promises):
-        ids = [promise.workflow_id for promise in some]
-        found = DBOS.list_workflows(workflow_ids=ids, load_input=False, load_output=False)
-        known = {workflow.workflow_id for workflow in found}
-        deliver.enqueue([promise for promise in some if promise.workflow_id not in known])
+        states = _workflow_states([promise.workflow_id for promise in some])
+        deliver.enqueue([promise for promise in some if promise.workflow_id not in states])
+        for promise in some:
+            if states.get(promise.workflow_id) in (*_ENDED, _CRASHED):
+                deliver.enqueue(deliver.promise_anew(work, promise))
 
 
-def _workflow_states(scenes: Sequence[Scene]) -> dict[str, str]:
-    ids = [ingest.workflow_id(scene.id, scene.generation) for scene in scenes]
+def _workflow_states(ids: Sequence[str]) -> dict[str, str]:
     if not ids:
         return {}
-    found = DBOS.list_workflows(workflow_ids=ids, load_input=False, load_output=False)
+    found = DBOS.list_workflows(workflow_ids=list(ids), load_input=False, load_output=False)
     return {workflow.workflow_id: workflow.status for workflow in found}
 
 
@@ -114,9 +116,10 @@ def _promise_anew(work: Resources, scene: Scene) -> None:
 
 
 def tidy(work: Resources) -> None:
-    """Remove what nothing needs: orphaned files, old answers, old finished workflows."""
+    """Remove what nothing needs: orphaned files, old answers, deliveries and workflows."""
     with work.sessions.writing() as session:
         forget_old_answers(session, at=now())
+        forget_old_deliveries(session, before=now() - DELIVERIES_KEPT_FOR)
     with work.sessions.reading() as session:
         wanted = kept_digests(session)
     removed = work.archive.remove_orphans(wanted, older_than_seconds=ORPHAN_SECONDS)

@@ -5,7 +5,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import ARRAY, REAL, BigInteger, DateTime, Dialect, Float, LargeBinary
+from sqlalchemy import ARRAY, REAL, BigInteger, DateTime, Dialect, LargeBinary
 from sqlalchemy.types import TypeDecorator, TypeEngine
 
 _EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
@@ -92,7 +92,7 @@ class Figure(TypeDecorator[float]):
     SQLite keeps it as a float64, whose own decimals would be those of the conversion.
     """
 
-    impl = Float(24)
+    impl = REAL
     cache_ok = True
 
     def process_result_value(self, value: float | None, _dialect: Dialect) -> float | None:

@@ -131,6 +131,12 @@ def wanted_folds(session: Session) -> Sequence[SeasonFold]:
     return session.scalars(query.order_by(SeasonFold.season, SeasonFold.axis)).all()
 
 
+def is_judging_wanted(session: Session) -> bool:
+    """Whether any judging is promised."""
+    query = select(SeasonFold.season).where(SeasonFold.wanted > SeasonFold.done)
+    return session.scalar(query.limit(1)) is not None
+
+
 def axes_of_scene(session: Session, scene: Scene, known: Sequence[Axis]) -> list[Axis]:
     """Return the axes of the parcels that a scene was ever measured for."""
     query = (
@@ -174,10 +180,23 @@ def looks_of(
             by_scene.setdefault(row.scene_id, []).append(row)
         looks = [
             (look, _figures(by_scene[look.scene_id], measures))
-            for look in one_per_pass(known)
+            for look in one_per_pass(_telling(rows) for rows in by_scene.values())
             if (since is None or look.acquired_at >= since) and look.acquired_at < until
         ]
         yield parcel_id, looks
+
+
+def _telling(rows: Sequence[Observed]) -> Observed:
+    """Return the observation that tells of a parcel in a scene.
+
+    Of those whose figures count the one with the least valid share: measures may have been
+    sent with different shares, and which came last must not matter.
+    """
+    if len(rows) == 1:
+        return rows[0]
+    in_order = sorted(rows, key=lambda row: row.write_id)
+    counting = {measure: row for row in in_order for measure in row.places.measures}
+    return min(counting.values(), key=lambda row: row.of_look("valid_share"), default=in_order[-1])
 
 
 def _figures(rows: Sequence[Observed], measures: Sequence[str]) -> dict[str, float]:

@@ -197,8 +197,9 @@ def one_per_pass(rows: Iterable[Observed]) -> list[Observed]:
     """Choose among one parcel's observations, in order of acquisition.
 
     Of each scene the newest write; of each pass (scenes of one platform within 10 minutes of
-    the first) the one with the larger valid share, then the newer processing. The others are
-    duplicates, which step in when the chosen one is withdrawn.
+    the first) the one with the larger valid share, then the newer processing, then, whichever
+    came first, by ref. The others are duplicates, which step in when the chosen one is
+    withdrawn.
     """
     of_scene: dict[int, Observed] = {}
     for row in rows:
@@ -222,8 +223,8 @@ def _passes(rows: Iterable[Observed]) -> list[list[Observed]]:
     return passes
 
 
-def _worth(row: Observed) -> tuple[float, str, int]:
-    return row.of_look("valid_share"), row.processing_baseline, row.write_id
+def _worth(row: Observed) -> tuple[float, str, str]:
+    return row.of_look("valid_share"), row.processing_baseline, row.scene_ref
 
 
 def newest_looks(

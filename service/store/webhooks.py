@@ -8,8 +8,8 @@ from datetime import datetime
 from enum import StrEnum
 from typing import Any, Final
 
-from sqlalchemy import select
-from sqlalchemy.orm import Session
+from sqlalchemy import delete, select
+from sqlalchemy.orm import Session, lazyload
 
 from service.errors import Conflict, NotFound
 from service.store.tables import Attempt, Delivery, Event, Webhook
@@ -125,6 +125,21 @@ def _wants(row: Webhook, told: Announcement) -> bool:
     return SEVERITIES.index(told.severity) >= SEVERITIES.index(row.min_severity)
 
 
+def check_enabled(webhook: Webhook) -> None:
+    """Refuse to send to a disabled receiver.
+
+    Raises
+    ------
+    Conflict
+        It is disabled.
+    """
+    if webhook.state == WebhookState.DISABLED:
+        raise Conflict(
+            "webhook-disabled",
+            "This webhook is disabled, and nothing is sent to it. Set its state to active first.",
+        )
+
+
 def announce_to(
     session: Session, webhook: Webhook, told: Announcement, *, at: datetime
 ) -> Delivery:
@@ -154,6 +169,17 @@ def _promised(session: Session, webhook: Webhook, event: Event, *, at: datetime)
     return row
 
 
+def find_delivery(session: Session, public_id: str) -> Delivery | None:
+    """Return a delivery, None if there is none any more."""
+    return session.scalar(select(Delivery).where(Delivery.public_id == public_id))
+
+
+def lock_delivery(session: Session, public_id: str) -> Delivery | None:
+    """Return a delivery that nobody else changes until this transaction ends."""
+    query = select(Delivery).where(Delivery.public_id == public_id)
+    return session.scalar(query.with_for_update(of=Delivery))
+
+
 def get_delivery(session: Session, public_id: str, *, holdings: Collection[str] | None) -> Delivery:
     """Return a delivery to a receiver within the key's holdings.
 
@@ -162,7 +188,7 @@ def get_delivery(session: Session, public_id: str, *, holdings: Collection[str] 
     NotFound
         There is none.
     """
-    row = session.scalar(select(Delivery).where(Delivery.public_id == public_id))
+    row = find_delivery(session, public_id)
     if row is None or not _is_within(row.webhook, holdings):
         raise NotFound("delivery-not-found", "There is no delivery with this id.")
     return row
@@ -174,8 +200,9 @@ def send_again(session: Session, row: Delivery, *, at: datetime) -> None:
     Raises
     ------
     Conflict
-        Attempts are still being made.
+        Attempts are still being made, or the receiver is disabled.
     """
+    check_enabled(row.webhook)
     if row.state == DeliveryState.WAITING:
         raise Conflict("still-trying", "This delivery is still being tried; wait for its end.")
     row.state = DeliveryState.WAITING
@@ -206,5 +233,24 @@ def list_deliveries(
 
 def waiting_deliveries(session: Session) -> list[Delivery]:
     """Return the deliveries that are promised an attempt."""
-    query = select(Delivery).where(Delivery.state == DeliveryState.WAITING)
+    # Without what they hang on to: bodies of events by the thousand.
+    alone = (lazyload(Delivery.event), lazyload(Delivery.webhook))
+    query = select(Delivery).where(Delivery.state == DeliveryState.WAITING).options(*alone)
     return list(session.scalars(query.order_by(Delivery.id)))
+
+
+def forget_old_deliveries(session: Session, *, before: datetime) -> None:
+    """Drop settled deliveries of old events, and old events that have no delivery left.
+
+    One that was sent again since stays, and so does one that still waits.
+    """
+    old = select(Event.id).where(Event.recorded_at < before)
+    session.execute(
+        delete(Delivery).where(
+            Delivery.event_id.in_(old),
+            Delivery.begun_at < before,
+            Delivery.state != DeliveryState.WAITING,
+        )
+    )
+    has_delivery = select(Delivery.id).where(Delivery.event_id == Event.id).exists()
+    session.execute(delete(Event).where(Event.recorded_at < before, ~has_delivery))

@@ -41,7 +41,8 @@ class Script:
 
     def call(self, method: str, path: str, **request: Any) -> httpx.Response:
         answer = self.service.call(method, path, **request)
-        self.keep(f"{method} {path} {request.get('params', '')}", answer)
+        whose = " by another key" if "key" in request else ""
+        self.keep(f"{method} {path} {request.get('params', '')}{whose}", answer)
         return answer
 
     def post_scene(self, scene: Mapping[str, Any], files: Mapping[str, Path]) -> None:

@@ -4,6 +4,7 @@ import base64
 import hashlib
 import json
 import re
+import time
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
@@ -13,6 +14,7 @@ import pytest
 from sqlalchemy import text
 
 from service.settings import Settings
+from service.store.judging import is_judging_wanted
 from tests.serving import SCENE, Service, serving, square, uniform_scene
 
 CANOPY = {"red": 0.04, "nir": 0.42}
@@ -251,8 +253,20 @@ def test_a_service_that_cannot_work_says_so_and_when_to_ask_again(settings: Sett
         assert service.client.get("/readyz").json() == {"status": "ready"}
 
 
+def judged(service: Service) -> None:
+    """Wait until what was sent is judged: that goes on after the answer, and changes series."""
+    deadline = time.monotonic() + 30
+    while True:
+        with service.sessions.reading() as session:
+            if not is_judging_wanted(session):
+                return
+        assert time.monotonic() < deadline
+        service.client.get("/healthz")
+
+
 def tagged(service: Service, path: str) -> str:
     """Return the tag of an answer, having seen that it alone gives 304 with nothing in it."""
+    judged(service)
     answer = service.call("GET", path)
     assert answer.status_code == 200
     tag = answer.headers["ETag"]

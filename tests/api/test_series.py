@@ -202,7 +202,7 @@ REFUSED: list[tuple[str, dict[str, Any], str]] = [
     # Not built, so unknown: never accepted and ignored.
     ("series", {"every": "P10D"}, "every"),
     ("series", {"smooth": "whittaker"}, "smooth"),
-    ("series", {"with": "baseline"}, "with"),
+    ("series", {"with": "forecast"}, "with"),
     ("overview", {"index": "ndvy"}, "index"),
     ("overview", {"index": "ndvi,ndmi"}, "index"),
     ("overview", {"at": "2024-06-03 noon"}, "at"),
@@ -408,3 +408,14 @@ def test_the_overview_is_narrowed_by_holding_crop_and_key(service: Service, tmp_
     service.call("DELETE", "/v1/parcels/A")
     assert parcels() == ["B", "C"]
     assert service.series("A")["scene"] == ["s1", "s2", "g4"]
+
+
+def test_a_parcel_that_was_never_seen_has_no_look_now_or_then(
+    service: Service, tmp_path: Path
+) -> None:
+    service.put_parcels(square("A", col=5, row=5))
+    report = service.post_scene(SCENE, uniform_scene(tmp_path / "s1", CANOPY, scl=9)).json()
+    assert report["parcels_unseen"] == {"cloud": 1}
+    for params in ({}, {"at": "2024-06-04"}, {"at": "2030-01-01"}):
+        (entry,) = service.get("/v1/overview", params=params)["parcels"]
+        assert (entry["scene"], entry["value"], entry["valid_share"]) == (None, None, None)

@@ -8,7 +8,6 @@ import sys
 from collections.abc import Mapping
 from pathlib import Path
 
-import fasteners
 import pytest
 import typer.main
 from typer.testing import CliRunner
@@ -124,13 +123,13 @@ def test_the_first_key_makes_the_data_folder_that_it_needs(tmp_path: Path) -> No
 
 
 def test_each_kind_of_error_exits_with_the_code_that_scripts_rely_on() -> None:
-    assert EXIT_CODES == {
+    assert {
         RejectedInput: 3,
         NotFound: 3,
         Conflict: 3,
         Unavailable: 4,
         NotAllowed: 5,
-    }
+    } == EXIT_CODES
     assert set(EXIT_CODES) == set(FurrowlightError.__subclasses__())
     assert EXIT_BUG == 70
 
@@ -186,41 +185,6 @@ def test_a_setting_that_is_not_valid_is_named_and_exits_with_3(tmp_path: Path) -
         "furrowlight: Not valid: FURROWLIGHT_DRAIN_SECONDS, FURROWLIGHT_LOG_LEVEL."
     )
     assert "loud" not in done.stderr
-
-
-def test_the_demo_does_the_whole_job_and_leaves_nothing_running(tmp_path: Path) -> None:
-    """Whatever deployment the operator's settings name: the demo has its own."""
-    data = tmp_path / "data"
-    done = furrowlight(
-        "demo",
-        *("--data", str(data)),
-        settings={"FURROWLIGHT_DATABASE_URL": "postgresql+psycopg://127.0.0.1:1/none"},
-    )
-    assert done.returncode == 0, done.stderr
-    lines = done.stdout.splitlines()
-    (heads,) = [line for line in lines if line.startswith("parcel ")]
-    assert heads.split()[:3] == ["parcel", "crop", "valid"]
-    assert {"ndvi", "ndmi", "ndwi", "nbr"} <= set(heads.split())
-    rows = [line for line in lines if re.match(r"QM-\d\d ", line)]
-    assert len(rows) > 5
-    assert any(re.search(r"\d\d?\d?%  +-?[01]\.\d\d", row) for row in rows)
-    assert "check on" in done.stdout
-    freed = fasteners.InterProcessLock(data / "worker.lock")
-    assert freed.acquire(blocking=False)
-    freed.release()
-
-
-def test_a_demo_whose_service_can_t_start_exits_with_4_and_shows_why(tmp_path: Path) -> None:
-    data = tmp_path / "data"
-    data.mkdir()
-    held = fasteners.InterProcessLock(data / "worker.lock")
-    assert held.acquire(blocking=False)
-    done = furrowlight("demo", "--data", str(data))
-    held.release()
-    assert done.returncode == 4
-    assert "Another process is already serving this data folder." in done.stderr
-    assert last_line(done).startswith("furrowlight: The service did not start")
-    assert "parcel " not in done.stdout
 
 
 @pytest.mark.parametrize("command", commands())

@@ -19,6 +19,8 @@ from dbos import DBOS
 
 import service.api.scenes
 import service.cli
+import service.jobs.assess
+import service.jobs.deliver
 import service.jobs.ingest
 import service.jobs.measuring
 import service.jobs.upkeep
@@ -83,6 +85,15 @@ POINTS: Final[Mapping[str, Callable[[], None]]] = {
     "step-not-noted": partial(after, service.jobs.ingest, "measure_scene"),
     "before-finish": partial(before, service.jobs.ingest, "finish"),
     "done-not-committed": partial(before, service.jobs.ingest, "now"),
+    # Judging: the looks are there and nothing is judged; alerts are worked out and not
+    # committed; they are committed with their deliveries, of which the queue knows nothing.
+    "before-judging": partial(before, service.jobs.assess, "judge_wanted"),
+    "alert-not-committed": partial(before, service.jobs.assess, "announce_alert", times=2),
+    "alert-not-told": partial(before, service.jobs.assess, "enqueue_deliveries"),
+    # Delivering: the receiver has the event and its answer is not recorded; its refusal is
+    # recorded, and the queue knows nothing of the next attempt.
+    "posted-not-recorded": partial(before, service.jobs.deliver, "_record"),
+    "next-not-promised": partial(before, service.jobs.deliver, "enqueue"),
     # Starting: among the first tables, before the queue's engine, with the engine running.
     "migrating": partial(before, alembic.op, "create_table", times=5),
     "before-engine": partial(before, DBOS, "launch"),

@@ -184,7 +184,8 @@ def answers(service: Service) -> dict[str, Any]:
     report = {name: scene[name] for name in scene if name.startswith("parcels_")}
     series = {
         f"{feature['properties']['ref']} {kind}": service.get(
-            f"/v1/parcels/{feature['properties']['ref']}/series", params={**question, "min_valid": 0}
+            f"/v1/parcels/{feature['properties']['ref']}/series",
+            params={**question, "min_valid": 0},
         )
         for feature in PARCELS
         for kind, question in QUESTIONS.items()

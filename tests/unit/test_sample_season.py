@@ -215,7 +215,7 @@ def test_the_output_is_small(sample: Path) -> None:
 
 
 def test_nothing_of_the_service_is_imported() -> None:
-    scripts = [HOME / "season.py", HOME / "generate.py", *(HOME / "quillmere").glob("*.py")]
+    scripts = [HOME / "season.py", *(HOME / "quillmere").glob("*.py")]
     assert len(scripts) > 5
     roots = set()
     for script in scripts:

@@ -1,0 +1,624 @@
+"""From figures and scenes to alerts, and what people do with them.
+
+The land is that of `quiet_seasons`; each kind of database is filled once and then copied.
+"""
+
+import shutil
+from collections.abc import Callable, Iterable, Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+import httpx
+import numpy as np
+import pytest
+from sqlalchemy import make_url
+
+from service.clock import now
+from service.settings import Settings
+from tests.conftest import _new_database, fresh_settings
+from tests.quiet_seasons import (
+    EVENTS,
+    FLOODED,
+    PARCELS,
+    PASSES,
+    RUNNING,
+    Event,
+    at_pass,
+    history,
+    images,
+    lines,
+    running,
+    send,
+    settle,
+    spectra,
+    stamp,
+)
+from tests.serving import Service, serving, write_band
+
+Alert = dict[str, Any]
+FLOOD, AGAIN = stamp(at_pass(6)), stamp(at_pass(11))
+
+
+@dataclass(frozen=True, kw_only=True)
+class Filled:
+    """A deployment at rest, to be copied: of one kind of database, filled up to some stage."""
+
+    settings: Settings
+    alerts: list[Alert]
+
+    def copy(self, data: Path) -> Settings:
+        """Return the settings of a copy."""
+        shutil.copytree(self.settings.data, data)
+        url = self.settings.database_url
+        if url:
+            url = _new_database(url, template=make_url(url).database)
+        return self.settings.model_copy(update={"data": data, "database_url": url})
+
+
+def _fill(settings: Settings, *works: Callable[[Service], object]) -> Filled:
+    with serving(settings) as service:
+        for work in works:
+            work(service)
+        return Filled(settings=settings, alerts=alerts_of(service))
+
+
+@pytest.fixture(scope="module")
+def stages(
+    request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory
+) -> Callable[[str, str], Filled]:
+    """Deployments by kind of database and stage: ``settled``, ``remembering``, ``judged``."""
+    made: dict[tuple[str, str], Filled] = {}
+
+    def stage(kind: str, name: str) -> Filled:
+        if (kind, name) not in made:
+            data = tmp_path_factory.mktemp("stages") / f"{kind}-{name}"
+            if name == "settled":
+                made[kind, name] = _fill(fresh_settings(request, kind, data), settle)
+            elif name == "remembering":
+                settings = stage(kind, "settled").copy(data)
+                made[kind, name] = _fill(settings, lambda s: send(s, history(), assess=False))
+            else:
+                settings = stage(kind, "remembering").copy(data)
+                made[kind, name] = _fill(settings, lambda s: send(s, running()))
+        return made[kind, name]
+
+    return stage
+
+
+@dataclass(frozen=True, kw_only=True)
+class Land:
+    """Services on copies of the land, on one kind of database."""
+
+    kind: str
+    folder: Path
+    stages: Callable[[str, str], Filled]
+
+    @contextmanager
+    def at(self, stage: str, copy: str = "data") -> Iterator[Service]:
+        """Serve a copy of the land at a stage."""
+        with serving(self.stages(self.kind, stage).copy(self.folder / copy)) as service:
+            yield service
+
+    @property
+    def alerts(self) -> list[Alert]:
+        """The alerts that the whole story ends in, sent in order."""
+        return self.stages(self.kind, "judged").alerts
+
+
+@pytest.fixture(params=["sqlite", "postgresql"])
+def land(
+    request: pytest.FixtureRequest, tmp_path: Path, stages: Callable[[str, str], Filled]
+) -> Land:
+    """The land on each kind of database."""
+    return Land(kind=request.param, folder=tmp_path, stages=stages)
+
+
+@pytest.fixture
+def judged(land: Land) -> Iterator[Service]:
+    """A service that has judged the whole story."""
+    with land.at("judged") as service:
+        yield service
+
+
+def alerts_of(service: Service, **params: Any) -> list[Alert]:
+    alerts: list[Alert] = service.get("/v1/alerts", params=params)["alerts"]
+    return alerts
+
+
+def of_parcel(service: Service, parcel: str, **params: Any) -> list[Alert]:
+    """Return the alerts of a parcel, the first opened first."""
+    return alerts_of(service, parcel=parcel, **params)[::-1]
+
+
+def told(alerts: Iterable[Alert]) -> list[tuple[Any, ...]]:
+    """Return what must not depend on how figures arrived."""
+    names = ("id", "parcel", "state", "opened_at", "closed_at", "score", "severity", "looks")
+    return sorted(
+        (*(alert[name] for name in names), alert["cause"]["kind"], alert["cause"]["because"])
+        for alert in alerts
+        if alert["state"] != "retracted"
+    )
+
+
+def act(
+    service: Service, alert: str, verb: str, *, match: str | None = "", **request: Any
+) -> httpx.Response:
+    """Act on an alert; `match` is the If-Match sent, by default that of the alert as it is."""
+    address = f"/v1/alerts/{alert}"
+    if match == "":
+        match = service.call("GET", address).headers["ETag"]
+    headers = {"If-Match": match} if match else {}
+    headers |= request.pop("headers", {})
+    return service.call("POST", f"{address}/{verb}", headers=headers, **request)
+
+
+def close(service: Service, alert: str, verdict: str, **request: Any) -> Alert:
+    """Close an alert and wait until judging has taken it up."""
+    answer = act(service, alert, "close", json={"verdict": verdict}, **request)
+    assert answer.status_code == 200, answer.text
+    judge_all(service)
+    closed: Alert = answer.json()
+    return closed
+
+
+def judge_all(service: Service) -> None:
+    """Wait until nothing is left to judge."""
+    assert send(service, [])["created"] == 0
+
+
+def problem(answer: httpx.Response, status: int, code: str) -> dict[str, Any]:
+    """Return a problem document after checking its status and type."""
+    assert (answer.status_code, answer.json()["type"]) == (status, f"/problems/{code}"), answer.text
+    assert answer.headers["Content-Type"] == "application/problem+json"
+    document: dict[str, Any] = answer.json()
+    return document
+
+
+def test_each_event_opens_an_alert_of_its_cause_and_nothing_else_does(judged: Service) -> None:
+    found = [
+        (alert["parcel"], alert["opened_at"], alert["closed_at"], alert["cause"]["kind"])
+        for alert in alerts_of(judged)
+    ]
+    # The last opened first. Two looks that have returned close: what was ploughed in is like
+    # its harvested neighbours by then.
+    assert found == [
+        (FLOODED, AGAIN, None, "flood"),
+        ("maize-8", stamp(at_pass(10)), None, "moisture_stress"),
+        ("maize-4", stamp(at_pass(9)), None, "removal"),
+        (FLOODED, FLOOD, stamp(at_pass(10)), "flood"),
+        ("barley-7", FLOOD, stamp(at_pass(9)), "burn"),
+    ]
+    alert = of_parcel(judged, FLOODED)[0]
+    assert (alert["state"], alert["closed_by"], alert["verdict"]) == ("closed", "return", None)
+    assert (alert["first_departure_at"], alert["looks"]) == (FLOOD, 3)
+    assert alert["last_observed_at"] == stamp(at_pass(10))
+    assert (alert["index"], alert["direction"], alert["severity"]) == ("ndwi", "above", "high")
+    assert alert["shortfall"] == pytest.approx(alert["observed"] - alert["expected"], abs=2e-4)
+    assert alert["shortfall"] > 0.3
+    assert alert["score"] == alert["departure"] == max(alert["departures"].values())
+    assert set(alert["departures"]) == {"ndvi", "ndmi", "nbr", "ndwi"}
+    assert (alert["basis"], alert["crop"], alert["holding"]) == ("own", "beet", "south")
+    assert "Check on the ground" in alert["caution"]
+    assert "NDWI" in alert["cause"]["because"]
+    scenes = {scene["ref"]: scene for scene in judged.get("/v1/scenes")["scenes"]}
+    assert [scenes[ref]["acquired_at"] for ref in alert["scenes"]] == [
+        stamp(at_pass(number)) for number in (6, 7, 8)
+    ]
+    history = judged.get(f"/v1/alerts/{alert['id']}")["history"]
+    assert [(change["kind"], change["who"]) for change in history] == [
+        ("opened", None),
+        ("closed", None),
+    ]
+
+
+def test_baseline_and_departure_stand_beside_the_figures(land: Land) -> None:
+    with land.at("remembering", "before") as service:
+        answer = service.call("GET", "/v1/parcels/beet-3/baseline")
+        problem(answer, 404, "no-baseline")
+        columns = service.series(FLOODED, **{"with": "baseline,departure"})
+        assert set(columns["departure"]) == {None}
+    with land.at("judged") as service:
+        year = {"from": f"{RUNNING}-01-01", "to": f"{RUNNING + 1}-01-01"}
+        columns = service.series(FLOODED, "ndwi", **{"with": "baseline,departure"}, **year)
+        mean, mid = np.array(columns["mean"]), np.array(columns["baseline"]["mid"])
+        low, high = np.array(columns["baseline"]["low"]), np.array(columns["baseline"]["high"])
+        assert len(mean) == len(columns["departure"]) == PASSES
+        assert np.all(low < mid) and np.all(mid < high)
+        assert np.array(columns["shortfall"]) == pytest.approx(mean - mid, abs=1e-5)
+        flooded = [number in (6, 7, 8, 11, 12) for number in range(PASSES)]
+        assert [z > 9 for z in columns["departure"]] == flooded
+        assert [not a <= x <= b for a, x, b in zip(low, mean, high, strict=True)] == flooded
+        # Looks of the past were not judged; only what is asked for is told.
+        past = service.series(FLOODED, **{"with": "departure", "to": f"{RUNNING}-01-01"})
+        assert set(past["departure"]) == {None}
+        assert "baseline" not in past
+        answer = service.call(
+            "GET", f"/v1/parcels/{FLOODED}/series", params={"with": "baseline,prophecy"}
+        )
+        assert problem(answer, 422, "invalid-parameter")["errors"][0]["parameter"] == "with"
+
+        told = service.get(f"/v1/parcels/{FLOODED}/baseline", params={"index": "ndwi"})
+        assert (told["parcel"], told["crop"], told["index"]) == (FLOODED, "beet", "ndwi")
+        assert (told["seasons"], told["crop_seasons"]) == ([2021, 2022, 2023], [2021, 2022, 2023])
+        assert (told["season"], told["days"][0]) == (RUNNING, f"{RUNNING - 1}-10-01")
+        day = told["days"].index(at_pass(5).date().isoformat())
+        assert told["low"][day] < told["mid"][day] < told["high"][day]
+        assert told["mid"][day] == pytest.approx(columns["baseline"]["mid"][5], abs=0.03)
+        # Nothing is known of the winter, and it is not made up.
+        winter = told["days"].index(f"{RUNNING}-01-15")
+        assert told["mid"][winter] is None
+        assert told["basis"][day] == "own"
+        assert told["basis"][winter] == "cohort"
+        for params, parameter in [({"index": "ndvy"}, "index"), ({"index": "ndvi,nbr"}, "index")]:
+            answer = service.call("GET", f"/v1/parcels/{FLOODED}/baseline", params=params)
+            assert problem(answer, 422, "invalid-parameter")["errors"][0]["parameter"] == parameter
+        other = service.get(f"/v1/parcels/{FLOODED}/baseline", params={"crop": "rice"})
+        assert set(other["mid"]) == {None}
+        limited = service.key("read", holdings=["north"])
+        answer = service.call("GET", f"/v1/parcels/{FLOODED}/baseline", key=limited)
+        problem(answer, 404, "parcel-not-found")
+
+
+def test_what_was_thought_before_judging_anew_is_not_kept(judged: Service) -> None:
+    then = stamp(now())
+    asked = {"as_of": then, "with": "departure", "from": f"{RUNNING}-01-01"}
+    before = judged.series("beet-5", **asked)
+    assert None not in before["departure"]
+    at = stamp(at_pass(3))
+    counts = send(judged, [f"beet-5,ndvi,{at},0.11111,archive-sensor,archive\n"])
+    assert (counts["created"], counts["updated"]) == (0, 1)
+    answer = judged.call("GET", "/v1/parcels/beet-5/series", params={"index": "ndvi", **asked})
+    document = problem(answer, 422, "not-kept")
+    assert document["errors"][0]["parameter"] == "as_of"
+    # The figures of that time are kept.
+    del asked["with"]
+    assert judged.series("beet-5", **asked)["mean"] == before["mean"]
+    after = judged.series("beet-5", **{"with": "departure", "from": f"{RUNNING}-01-01"})
+    assert after["mean"][3] == 0.11111
+    assert after["departure"][3] != before["departure"][3]
+
+
+def test_alerts_are_found_by_what_they_are(judged: Service) -> None:
+    everything = alerts_of(judged)
+    assert len(everything) == 5
+    some: list[tuple[dict[str, str], Callable[[Alert], bool]]] = [
+        ({"state": "closed"}, lambda alert: alert["state"] == "closed"),
+        ({"state": "open,closed"}, lambda _: True),
+        ({"state": "retracted"}, lambda _: False),
+        ({"severity": "high"}, lambda alert: alert["severity"] == "high"),
+        ({"severity": "low"}, lambda alert: alert["severity"] == "low"),
+        ({"holding": "north"}, lambda alert: alert["parcel"] == "barley-7"),
+        ({"parcel": FLOODED}, lambda alert: alert["parcel"] == FLOODED),
+        ({"parcel": "nobody"}, lambda _: False),
+        ({"since": AGAIN}, lambda alert: alert["opened_at"] == AGAIN),
+        ({"since": f"{RUNNING}-07-01"}, lambda alert: alert["opened_at"] > f"{RUNNING}-07-01"),
+        ({"index": "ndwi"}, lambda alert: alert["index"] == "ndwi"),
+        ({"cause": "burn"}, lambda alert: alert["cause"]["kind"] == "burn"),
+        ({"cause": "flood", "state": "open"}, lambda alert: alert["opened_at"] == AGAIN),
+    ]
+    for params, fits in some:
+        assert alerts_of(judged, **params) == [a for a in everything if fits(a)], params
+    for params, parameter in [
+        ({"state": "opened"}, "state"),
+        ({"severity": "grave"}, "severity"),
+        ({"since": "yesterday"}, "since"),
+        ({"limit": "0"}, "limit"),
+        ({"cursor": "nonsense"}, "cursor"),
+        ({"sort": "score"}, "sort"),
+    ]:
+        answer = judged.call("GET", "/v1/alerts", params=params)
+        assert problem(answer, 422, "invalid-parameter")["errors"][0]["parameter"] == parameter
+    pages, answer = [], judged.call("GET", "/v1/alerts", params={"limit": "2", "cause": "flood"})
+    pages = answer.json()["alerts"]
+    assert "next" not in answer.links
+    assert len(pages) == 2
+    pages, address = [], "/v1/alerts?limit=1&holding=south"
+    while address:
+        answer = judged.call("GET", address)
+        pages += answer.json()["alerts"]
+        assert len(answer.json()["alerts"]) == 1
+        address = answer.links.get("next", {}).get("url", "")
+    assert pages == [alert for alert in everything if alert["holding"] == "south"]
+
+
+def test_a_key_of_holdings_knows_only_their_alerts(judged: Service) -> None:
+    limited = judged.key("read", "triage", holdings=["north"])
+    (own,) = judged.get("/v1/alerts", key=limited)["alerts"]
+    assert own["parcel"] == "barley-7"
+    assert judged.get(f"/v1/alerts/{own['id']}", key=limited)["id"] == own["id"]
+    for params in ({"holding": "south"}, {"parcel": FLOODED}, {"cause": "flood"}):
+        assert judged.get("/v1/alerts", key=limited, params=params)["alerts"] == []
+    other = of_parcel(judged, FLOODED)[1]["id"]
+    tag = judged.call("GET", f"/v1/alerts/{other}").headers["ETag"]
+    refusals = [
+        judged.call("GET", f"/v1/alerts/{other}", key=limited),
+        judged.call("GET", "/v1/alerts/alr_none", key=limited),
+        act(judged, other, "acknowledge", match=tag, key=limited),
+        act(judged, other, "close", match=tag, key=limited, json={"verdict": "expected"}),
+        act(judged, other, "reopen", match=tag, key=limited),
+    ]
+    details = {problem(answer, 404, "alert-not-found")["detail"] for answer in refusals}
+    assert len(details) == 1
+    assert judged.call("GET", f"/v1/alerts/{other}").headers["ETag"] == tag
+    # Reading is not triage, nor is anything else.
+    for key in (judged.key("read"), judged.key("ingest", "manage", "admin")):
+        answer = act(judged, other, "acknowledge", match=tag, key=key)
+        problem(answer, 403, "scope-missing")
+    problem(judged.call("GET", "/v1/alerts", key=judged.key("triage")), 403, "scope-missing")
+
+
+def test_people_act_one_after_another_and_what_they_did_is_kept(judged: Service) -> None:
+    alert = of_parcel(judged, "maize-4")[0]["id"]
+    address = f"/v1/alerts/{alert}"
+    begun = judged.call("GET", address).headers["ETag"]
+    problem(act(judged, alert, "acknowledge", match=None), 428, "precondition-required")
+    for match in ('"other"', begun.strip('"'), f'"{alert}-99"'):
+        problem(act(judged, alert, "acknowledge", match=match), 412, "precondition-failed")
+    # No body at all is a body, and one that is not JSON is none.
+    answer = act(judged, alert, "acknowledge", content=b"note", headers={"Content-Type": "text/x"})
+    problem(answer, 415, "unsupported-media-type")
+    answer = act(judged, alert, "acknowledge", json={"notes": "?"})
+    assert problem(answer, 422, "invalid-input")["errors"][0]["pointer"] == "/notes"
+    answer = act(judged, alert, "acknowledge")
+    assert (answer.status_code, answer.json()["state"]) == (200, "acknowledged")
+    seen = answer.headers["ETag"]
+    assert seen != begun
+    problem(act(judged, alert, "acknowledge", match=begun), 412, "precondition-failed")
+    problem(act(judged, alert, "acknowledge"), 409, "alert-state")
+    problem(act(judged, alert, "reopen"), 409, "alert-state")
+
+    # It survives later looks, and judging the season anew from its start.
+    judge_all(judged)
+    kept = judged.get(address)
+    assert kept["state"] == "acknowledged"
+    send(judged, running_line("maize-4", PASSES))
+    send(judged, [f"beet-5,ndvi,{stamp(at_pass(2))},0.12345,archive-sensor,archive\n"])
+    assert of_parcel(judged, "maize-4", state="acknowledged")[0]["id"] == alert
+    assert judged.get(address)["last_observed_at"] == stamp(at_pass(PASSES))
+
+    for sent, pointer in [
+        ({"verdict": "maybe"}, "/verdict"),
+        ({}, "/verdict"),
+        ({"verdict": "expected", "note": ""}, "/note"),
+        ({"verdict": "expected", "note": "x" * 2001}, "/note"),
+    ]:
+        answer = act(judged, alert, "close", json=sent)
+        assert problem(answer, 422, "invalid-input")["errors"][0]["pointer"] == pointer
+    problem(act(judged, alert, "close"), 415, "unsupported-media-type")
+    answer = act(
+        judged,
+        alert,
+        "close",
+        json={"verdict": "expected", "note": "Cut for silage."},
+        headers={"Idempotency-Key": "closing"},
+    )
+    assert answer.status_code == 200, answer.text
+    closed = answer.json()
+    assert (closed["state"], closed["verdict"]) == ("closed", "expected")
+    assert (closed["closed_by"], closed["closed_at"]) == ("person", stamp(at_pass(PASSES)))
+    judge_all(judged)
+    # The same request again is answered again; another one comes too late.
+    again = act(
+        judged,
+        alert,
+        "close",
+        match=seen,
+        json={"verdict": "expected", "note": "Cut for silage."},
+        headers={"Idempotency-Key": "closing"},
+    )
+    assert again.json() == closed
+    problem(act(judged, alert, "close", json={"verdict": "confirmed"}), 409, "alert-state")
+    problem(act(judged, alert, "acknowledge"), 409, "alert-state")
+    reopened = act(judged, alert, "reopen", json={"note": "Wrong field."})
+    assert reopened.json()["state"] == "open"
+    assert (reopened.json()["verdict"], reopened.json()["closed_at"]) == (None, None)
+    judge_all(judged)
+
+    kept = judged.get(address)
+    assert (kept["state"], kept["closed_by"], kept["verdict"]) == ("open", None, None)
+    by_hand = [change for change in kept["history"] if change["who"] is not None]
+    assert [(c["kind"], c["who"], c["verdict"], c["note"]) for c in by_hand] == [
+        ("acknowledge", "test", None, None),
+        ("close", "test", "expected", "Cut for silage."),
+        ("reopen", "test", None, "Wrong field."),
+    ]
+    assert [c["look_at"] for c in by_hand] == [
+        stamp(at_pass(number)) for number in (PASSES - 1, PASSES, PASSES)
+    ]
+    times = [change["recorded_at"] for change in kept["history"]]
+    assert times == sorted(times)
+    assert kept["history"][0]["kind"] == "opened"
+
+
+def running_line(parcel: str, number: int) -> list[str]:
+    """Return the figures of one pass, with the removal of `EVENTS` going on."""
+    longer = [replace(e, passes=range(9, 20)) if e.parcel == parcel else e for e in EVENTS]
+    return list(lines(number, events=longer))
+
+
+def test_what_a_person_closed_stays_quiet_until_it_has_returned(land: Land) -> None:
+    with land.at("remembering") as service:
+        send(service, running(range(7)))
+        (alert,) = of_parcel(service, FLOODED)
+        assert (alert["state"], alert["opened_at"]) == ("open", FLOOD)
+        closed = close(service, alert["id"], "confirmed")
+        assert closed["closed_at"] == FLOOD
+        # The next looks depart as before.
+        send(service, running([7]))
+        send(service, running([8]))
+        departures = service.series(FLOODED, "ndwi", **{"with": "departure", "from": FLOOD})
+        assert min(departures["departure"]) > 9
+        assert len(departures["departure"]) == 3
+        (only,) = of_parcel(service, FLOODED)
+        assert only == closed
+        # One look is no return yet, two are.
+        send(service, running([9]))
+        send(service, running([10]))
+        assert of_parcel(service, FLOODED) == [only]
+        send(service, running([11]))
+        first, second = of_parcel(service, FLOODED)
+        assert first == only
+        assert (second["state"], second["opened_at"]) == ("open", AGAIN)
+        # All the same when it is judged anew from the start of the season.
+        send(service, [f"beet-5,ndvi,{stamp(at_pass(2))},0.12345,archive-sensor,archive\n"])
+        assert told(of_parcel(service, FLOODED)) == told([first, second])
+        assert of_parcel(service, FLOODED)[0] == only
+
+
+def test_another_order_and_other_cuts_of_calls_end_in_the_same_alerts(land: Land) -> None:
+    with land.at("settled", "backwards") as service:
+        # The running season first, newest pass first, cut within parcels; the past last.
+        newest_first = [line for number in reversed(range(PASSES)) for line in running([number])]
+        for chunk in cut(newest_first, 1_457):
+            send(service, chunk, wait=False)
+        # Without a past every crop is new: other alerts, if any.
+        judge_all(service)
+        assert told(alerts_of(service)) != told(land.alerts)
+        for chunk in cut(history()[::-1], 6_001):
+            send(service, chunk, assess=False, wait=False)
+        judge_all(service)
+        assert told(alerts_of(service)) == told(land.alerts)
+        states = {alert["state"] for alert in alerts_of(service)}
+        assert states <= {"open", "closed", "retracted"}
+    with land.at("settled", "mixed") as service:
+        random = np.random.default_rng(5)
+        by_measure = sorted(running(), key=lambda line: line.split(",")[1])
+        parcels = dict(zip(PARCELS, random.permutation(len(PARCELS)), strict=True))
+        past = sorted(history(), key=lambda line: int(parcels[line.split(",")[0]]))
+        for now_sent, then_sent in zip(cut(by_measure, 1_100), cut(past, 3_333), strict=True):
+            send(service, then_sent, assess=False, wait=False)
+            # Judged only when the same rows come again and are to be.
+            send(service, now_sent, assess=False, wait=False)
+            assert send(service, now_sent, wait=False)["unchanged"] == len(now_sent)
+        judge_all(service)
+        assert told(alerts_of(service)) == told(land.alerts)
+
+
+def cut(rows: Sequence[str], size: int) -> list[Sequence[str]]:
+    return [rows[at : at + size] for at in range(0, len(rows), size)]
+
+
+def post(
+    service: Service,
+    folder: Path,
+    number: int,
+    *,
+    events: Iterable[Event] = EVENTS,
+    **metadata: Any,
+) -> dict[str, Any]:
+    """Post the scene of a pass and wait until it is judged."""
+    made = folder / str(len(list(folder.iterdir())))
+    made.mkdir()
+    bands = images(spectra(number, events=events))
+    files = {role: write_band(made / f"{role}.tif", image) for role, image in bands.items()}
+    classes = np.full((24, 24), 4, dtype=np.uint8)
+    files["quality"] = write_band(made / "quality.tif", classes, cell_m=20)
+    scene = {
+        "ref": f"s{number}",
+        "sensor": "sentinel-2-l2a",
+        "acquired_at": stamp(at_pass(number)),
+        "processing_baseline": "05.10",
+        "platform": "sentinel-2b",
+        "tile": "t1",
+        **metadata,
+    }
+    report: dict[str, Any] = service.post_scene(scene, files).json()
+    assert report["state"] == "done", report
+    return report
+
+
+def test_late_replaced_and_withdrawn_scenes_end_as_if_sent_in_order(land: Land) -> None:
+    folder = land.folder / "scenes"
+    folder.mkdir()
+    with land.at("remembering", "in-order") as service:
+        reports = [post(service, folder, number) for number in range(4, 9)]
+        assert [report["alerts_opened"] for report in reports] == [0, 0, 2, 0, 0]
+        expected = alerts_of(service)
+        assert [(a["parcel"], a["cause"]["kind"], a["scenes"][0]) for a in expected] == [
+            ("barley-7", "burn", "s6"),
+            (FLOODED, "flood", "s6"),
+        ] or {a["parcel"] for a in expected} == {"barley-7", FLOODED}
+        # Scenes and imports of the same land tell the same story.
+        imported = {(a["parcel"], a["opened_at"]) for a in land.alerts}
+        assert {(a["parcel"], a["opened_at"]) for a in expected} <= imported
+    wrong = Event(kind="flood", parcel="beet-5", passes=range(7, 8))
+    extra = Event(kind="flood", parcel="maize-2", passes=range(6, 7))
+    with land.at("remembering", "otherwise") as service:
+        assert post(service, folder, 8)["alerts_opened"] == 1
+        late = of_parcel(service, FLOODED)[0]
+        assert late["opened_at"] == stamp(at_pass(8))
+        act(service, late["id"], "acknowledge")
+        assert post(service, folder, 7, events=[wrong])["alerts_opened"] == 1
+        post(service, folder, 5)
+        between = at_pass(6).replace(hour=14)
+        post(
+            service,
+            folder,
+            6,
+            events=[*EVENTS, extra],
+            ref="extra",
+            acquired_at=stamp(between),
+        )
+        assert {a["parcel"] for a in alerts_of(service, state="open,acknowledged")} >= {
+            "beet-5",
+            "maize-2",
+        }
+        post(service, folder, 7, replace=True)
+        assert service.call("DELETE", "/v1/scenes/extra").json()["state"] == "withdrawn"
+        post(service, folder, 4)
+        assert post(service, folder, 6)["alerts_opened"] == 2
+        judge_all(service)
+        # What a person said of the parcel holds, whichever look opens the alert now.
+        assert told(alerts_of(service)) == told(
+            {**alert, "state": "acknowledged"} if alert["parcel"] == FLOODED else alert
+            for alert in expected
+        )
+        gone = {alert["parcel"]: alert for alert in alerts_of(service, state="retracted")}
+        assert {"beet-5", "maize-2", FLOODED} <= set(gone)
+        change = service.get(f"/v1/alerts/{gone['maize-2']['id']}")["history"][-1]
+        assert (change["kind"], change["who"]) == ("retracted", None)
+        assert "withdrawn" in change["what"]["reason"]
+        answer = act(service, gone["maize-2"]["id"], "close", json={"verdict": "bad_data"})
+        problem(answer, 409, "alert-state")
+        # The withdrawn scene comes again, and so does its alert, under its old name.
+        post(
+            service,
+            folder,
+            6,
+            events=[*EVENTS, extra],
+            ref="extra",
+            acquired_at=stamp(between),
+        )
+        (back,) = of_parcel(service, "maize-2")
+        assert back["id"] == gone["maize-2"]["id"]
+        assert back["state"] in ("open", "closed")
+
+
+def test_verdicts_say_whether_looks_shape_the_next_season(judged: Service) -> None:
+    cut_down = of_parcel(judged, "maize-4")[0]["id"]
+
+    def baseline() -> tuple[str, float]:
+        told = judged.get("/v1/parcels/maize-4/baseline", params={"index": "ndvi"})
+        assert told["season"] == RUNNING + 1
+        assert told["seasons"] == [2021, 2022, 2023, RUNNING]
+        day = at_pass(11).replace(year=RUNNING + 1).date().isoformat()
+        return told["version"], told["mid"][told["days"].index(day)]
+
+    send(judged, list(lines(1, RUNNING + 1)))
+    undecided = baseline()
+    # It is still open, carried over from the season before.
+    assert judged.get(f"/v1/alerts/{cut_down}")["state"] == "open"
+    close(judged, cut_down, "confirmed")
+    assert baseline() == undecided
+    act(judged, cut_down, "reopen")
+    close(judged, cut_down, "expected")
+    version, mid = baseline()
+    # It was cut down, and may be so again.
+    assert version != undecided[0]
+    assert mid < undecided[1] - 0.005
+    for verdict, stays in [("false_alarm", True), ("bad_data", False)]:
+        act(judged, cut_down, "reopen")
+        close(judged, cut_down, verdict)
+        assert baseline() == ((version, mid) if stays else undecided)
