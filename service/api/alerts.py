@@ -19,6 +19,7 @@ from service.jobs.announce import announce_alert
 from service.store.alert_tables import AlertChange, AlertRow
 from service.store.alerts import act_on, document_of, get_alert, history_of, list_alerts
 from service.store.judging import want_judging_of
+from service.store.sessions import serialise
 
 router = contract_router("/alerts", "alerts")
 States = ("open", "acknowledged", "closed", "retracted")
@@ -259,6 +260,7 @@ def _act(
     with context.sessions.writing() as session:
         if (first := once.replay(session, caller, fingerprint)) is not None:
             return first
+        serialise(session, "judging")
         row = get_alert(session, alert_id, holdings=caller.holdings)
         session.refresh(row, with_for_update={"of": AlertRow})
         _check_match(row, if_match)

@@ -2,6 +2,7 @@
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from datetime import datetime
 from typing import Annotated, Final, Protocol
 
 from fastapi import Depends, Request, Security
@@ -95,6 +96,7 @@ class Caller:
     label: str
     scopes: frozenset[str]
     holdings: frozenset[str] | None
+    expires_at: datetime | None
 
     def must_see_all(self, what: str) -> None:
         """Refuse a key that is limited to holdings.
@@ -135,6 +137,7 @@ def _caller(
         label=row.label,
         scopes=frozenset(row.scopes),
         holdings=None if row.holdings is None else frozenset(row.holdings),
+        expires_at=row.expires_at,
     )
 
 

@@ -99,6 +99,13 @@ def _check_width(sent: KeySent, caller: Caller) -> None:
         raise NotAllowed(
             "key-too-wide", f"Your own key lacks {', '.join(wider)}, so it can't give it."
         )
+    if caller.expires_at is not None and (
+        sent.expires_at is None or sent.expires_at > caller.expires_at
+    ):
+        raise NotAllowed(
+            "key-too-wide",
+            "Your own key expires; give `expires_at`, no later than your own.",
+        )
     if caller.holdings is not None and not set(sent.holdings or ["*"]) <= caller.holdings:
         raise NotAllowed(
             "key-too-wide",

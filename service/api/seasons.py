@@ -131,6 +131,7 @@ def post_seasons(caller: Steward, body: Bulk, context: Ctx, once: OnceOnly) -> R
         serialise(session, "parcels")
         if (first := once.replay(session, caller, body.digest)) is not None:
             return first
+        serialise(session, "judging")
         for item, season, seasons in _resolved(session, sent, caller, context, faults):
             pointer, _ = sent[item]
             held = overlapping(season, seasons)

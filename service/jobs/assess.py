@@ -50,6 +50,7 @@ from service.store.judging import (
 )
 from service.store.looks import LOOK_SHARE, PASS_GAP, Observed
 from service.store.seasons import seasons_of
+from service.store.sessions import serialise
 from service.store.tables import CropSeason
 
 QUEUE: Final = "assess"
@@ -282,6 +283,7 @@ def _record(
     session: Session, work: Resources, axis: Axis, judged: Sequence[_Season], *, at: datetime
 ) -> None:
     """Record what judging found, unless something changed while it was being worked out."""
+    serialise(session, "judging")
     rows = {
         each.season: session.get_one(SeasonFold, (axis.id, each.season), with_for_update=True)
         for each in judged

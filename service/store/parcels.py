@@ -11,6 +11,7 @@ from sqlalchemy.orm import Session
 
 from service.errors import NotFound
 from service.store.batches import in_batches
+from service.store.sessions import serialise
 from service.store.tables import Boundary, Holding, Observation, Parcel, ParcelTag
 from service.zonal.boundary import Outline
 
@@ -305,6 +306,8 @@ def visible(
 
 def bump_revisions(session: Session, write_ids: Sequence[int]) -> None:
     """Mark the parcels with observations in these writes as changed."""
+    # Judging writes parcels while it holds its folds, and here it is the other way round.
+    serialise(session, "judging")
     touched = select(Observation.parcel_id).where(Observation.write_id.in_(write_ids))
     session.execute(
         update(Parcel)

@@ -81,8 +81,9 @@ POINTS: Final[Mapping[str, Callable[[], None]]] = {
     "rows-inserted": partial(before, service.store.observations, "bump_revisions"),
     "rows-not-committed": partial(after, service.jobs.measuring, "record"),
     # The observations are there and the scene is not done: the queue knows nothing of the
-    # step's end, or it does, or the end is not committed.
+    # step's end, or it does, or the scene's end is not committed.
     "step-not-noted": partial(after, service.jobs.ingest, "measure_scene"),
+    "before-judging": partial(before, service.jobs.ingest, "judge"),
     "before-finish": partial(before, service.jobs.ingest, "finish"),
     "done-not-committed": partial(before, service.jobs.ingest, "now"),
     # Judging: the looks are there and nothing is judged; alerts are worked out and not

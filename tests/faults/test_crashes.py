@@ -10,7 +10,7 @@ import subprocess
 import sys
 import threading
 from collections.abc import Iterator, Mapping
-from contextlib import contextmanager, suppress
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -235,7 +235,10 @@ def deployment(request: pytest.FixtureRequest, tmp_path: Path) -> Iterator[Deplo
     made.sessions.engine.dispose()
 
 
-both = pytest.mark.parametrize("deployment", ["sqlite", "postgresql"], indirect=True)
+def killed_at(*points: str, also_on_postgresql: str) -> pytest.MarkDecorator:
+    """Run a test for each point on SQLite, and for one of them on PostgreSQL too."""
+    cases = [("sqlite", point) for point in points] + [("postgresql", also_on_postgresql)]
+    return pytest.mark.parametrize(("deployment", "point"), cases, indirect=["deployment"])
 
 
 def holds_what_an_undisturbed_run_gave(
@@ -295,8 +298,7 @@ def test_a_file_kept_without_a_row_is_swept_once_it_is_old_and_may_be_sent_again
         holds_what_an_undisturbed_run_gave(deployment, service, undisturbed)
 
 
-@both
-@pytest.mark.parametrize("point", ["before-job", "after-job"])
+@killed_at("before-job", "after-job", also_on_postgresql="before-job")
 def test_killed_between_the_row_and_the_answer_it_keeps_the_promise(
     deployment: Deployment, undisturbed: Undisturbed, point: str
 ) -> None:
@@ -308,8 +310,9 @@ def test_killed_between_the_row_and_the_answer_it_keeps_the_promise(
     finishes_by_itself(deployment, undisturbed)
 
 
-@both
-@pytest.mark.parametrize("point", ["before-pixels", "rows-inserted", "rows-not-committed"])
+@killed_at(
+    "before-pixels", "rows-inserted", "rows-not-committed", also_on_postgresql="rows-inserted"
+)
 def test_killed_in_mid_measure_it_measures_anew(
     deployment: Deployment, undisturbed: Undisturbed, point: str
 ) -> None:
@@ -320,8 +323,13 @@ def test_killed_in_mid_measure_it_measures_anew(
     finishes_by_itself(deployment, undisturbed)
 
 
-@both
-@pytest.mark.parametrize("point", ["step-not-noted", "before-finish", "done-not-committed"])
+@killed_at(
+    "step-not-noted",
+    "before-judging",
+    "before-finish",
+    "done-not-committed",
+    also_on_postgresql="step-not-noted",
+)
 def test_killed_with_observations_written_and_the_scene_not_done_it_finishes_the_scene(
     deployment: Deployment, undisturbed: Undisturbed, point: str
 ) -> None:
@@ -428,8 +436,7 @@ def test_a_second_service_on_the_same_folder_is_refused_in_one_line(
 
 
 def test_a_scene_that_was_done_meanwhile_is_not_failed_by_a_late_sweep(service: Service) -> None:
-    with suppress(FileNotFoundError):
-        files = scene_files(service.settings.data / "sent")
+    files = scene_files(service.settings.data / "sent")
     service.put_parcels(*PARCELS)
     assert service.post_scene(SCENE, files).json()["state"] == "done"
     with service.sessions.reading() as session:

@@ -27,7 +27,6 @@ from tests.departing import BREAK, EVERY, FALL, FIRST, HOLDINGS, USUAL, depart, 
 from tests.faults.test_crashes import Deployment
 from tests.hooks import (
     PUBLIC_URL,
-    Decide,
     Hook,
     comes_true,
     deliveries,
@@ -36,7 +35,7 @@ from tests.hooks import (
     open_to_loopback,
     register,
 )
-from tests.receiving import LOOPBACK, Behaviour, Request, answering
+from tests.receiving import LOOPBACK, Request, answering
 from tests.serving import Service, serving, write_band
 
 FALLS = {"P2": FALL, "P5": FALL}
@@ -163,7 +162,6 @@ def repeats(requests: list[Request]) -> list[int]:
 @pytest.mark.parametrize(
     ("deployment", "point", "is_queue_lost", "before"),
     [
-        ("sqlite", "before-judging", False, (0, 0, 0)),
         ("postgresql", "before-judging", False, (0, 0, 0)),
         ("sqlite", "alert-not-committed", True, (0, 0, 0)),
         ("sqlite", "alert-not-told", True, (2, 2, 2)),
@@ -209,18 +207,13 @@ def test_killed_between_post_and_record_it_posts_again_under_the_same_id(
         assert second.body == first.body
 
 
-@pytest.mark.parametrize("is_queue_lost", [False, True])
 def test_killed_between_a_refusal_and_the_next_promise_it_tries_again(
-    deployment: Deployment,
-    undisturbed: Told,
-    is_queue_lost: bool,  # noqa: FBT001 - both cases
+    deployment: Deployment, undisturbed: Told
 ) -> None:
-    once: Decide = in_turn(answering("503 Busy"), answering("204 No Content"))
-    with hooked(once) as hook:
+    with hooked(in_turn(answering("503 Busy"), answering("204 No Content"))) as hook:
         webhook = crash_on_a_departure(deployment, hook, "next-not-promised")
         refused = hook.next()
-        if is_queue_lost:
-            forget_the_queue(deployment)
+        forget_the_queue(deployment)
         again = arrived_at(deployment, hook, webhook, events=len(FALLS))
         assert told_by(again) == undisturbed
         assert repeats([refused, *again]) == [1, 2]

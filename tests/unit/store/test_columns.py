@@ -85,7 +85,8 @@ def test_a_stored_instant_comes_back_exactly_and_in_utc(
 def test_a_naive_instant_is_refused_and_none_stays_none(writing: Session) -> None:
     writing.add(key(RECORDED, 1))
     writing.flush()
-    assert writing.execute(select(ApiKey.expires_at)).all() == [(None,)]
+    expiry = select(ApiKey.expires_at).where(ApiKey.public_id == "key_1")
+    assert writing.execute(expiry).all() == [(None,)]
     naive = RECORDED.replace(tzinfo=None)
     with pytest.raises(StatementError, match="an instant without offset cannot be stored"):
         writing.scalar(select(ApiKey.id).where(ApiKey.created_at < naive))
