@@ -1,18 +1,18 @@
 """Alerts at a terminal: what the duty analyst lists, reads and closes."""
 
 import json
-from typing import Annotated, Any, Final
+from typing import Annotated, Any
 
 import typer
+from rich.box import SIMPLE
 from rich.console import Console
+from rich.markup import escape
 from rich.table import Column, Table
-from rich.text import Text
 
 from service.cli.client import call, connect_from_environment
 
 app = typer.Typer(no_args_is_help=True, help="List, read and close alerts of a running service.")
 _Json = Annotated[bool, typer.Option("--json", help="One JSON object a line on stdout.")]
-_COLUMNS: Final = ("id", "parcel", "crop", "opened", "severity", "cause", "measure", "state")
 
 
 @app.command("list")
@@ -39,11 +39,27 @@ def list_all(
         for alert in alerts:
             typer.echo("\t".join(_row(alert)))
         return
+    console.print(_table_of(alerts) if alerts else "No alerts.")
+
+
+def _table_of(alerts: list[dict[str, Any]]) -> Table:
+    """Return the same for people: two lines a cell, so that it fits a narrow terminal."""
     # An id is needed whole, to show or close its alert.
-    table = Table(Column(_COLUMNS[0], no_wrap=True), *_COLUMNS[1:])
+    table = Table(
+        Column("id", no_wrap=True),
+        Column("parcel, crop", overflow="fold"),
+        Column("severity, cause", no_wrap=True),
+        box=SIMPLE,
+        pad_edge=False,
+    )
     for alert in alerts:
-        table.add_row(*(Text(cell, overflow="fold") for cell in _row(alert)))
-    console.print(table if alerts else "No alerts.")
+        alert_id, parcel, crop, opened, severity, cause, figures, state = map(escape, _row(alert))
+        table.add_row(
+            f"{alert_id}\n{opened}, {state}",
+            f"{parcel}\n{crop}",
+            f"{severity}, {cause}\n{figures}",
+        )
+    return table
 
 
 def _row(alert: dict[str, Any]) -> list[str]:

@@ -12,7 +12,7 @@ import tempfile
 import time
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Annotated, Any, Final
 
@@ -113,6 +113,8 @@ def demo(
         say_what_next(outcome, service.address, key, keep_in=scratch if keep else None)
         while keep and service.process.poll() is None:
             say_events(receiver.news(seconds=1.0), typer.echo)
+        if keep:
+            service.wait()
 
 
 @contextmanager
@@ -164,6 +166,7 @@ def run_season(
     hook = call(client, "POST", "/v1/webhooks", json={"url": url, "events": EVENTS})
     receiver.trust(hook["secret"])
     telling.say(f"A receiver at {url} will be told of alerts and scenes.\n\n{SCENE_HEADS}")
+    untold: list[str] = []
     folders = sorted((sample / "scenes").iterdir())
     for number, folder in enumerate(folders, start=1):
         telling.begin(
@@ -172,12 +175,14 @@ def run_season(
         scene = post_scene(client, folder)
         telling.say(scene_line(scene))
         if not receiver.waits_for(EventName.SCENE_DONE, scene["ref"], seconds=DELIVERY_SECONDS):
+            untold = [f"{scene['ref']}: the receiver was not told that it is done."]
             break
         say_events(receiver.news(), telling.say)
     telling.begin("waiting for the last messages", 0.98)
     wait_for_deliveries(client, hook["id"])
     say_events(receiver.news(), telling.say)
-    return outcome_of(client, sample, receiver)
+    outcome = outcome_of(client, sample, receiver)
+    return replace(outcome, faults=[*untold, *outcome.faults])
 
 
 def register(client: httpx.Client, sample: Path, telling: Telling) -> None:

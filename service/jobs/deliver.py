@@ -36,14 +36,14 @@ _log = structlog.get_logger()
 class Promise:
     """A promised attempt: of which delivery, which one, to whom, and in how many seconds.
 
-    The queue knows a delivery by `public_id`: numbers of deleted rows are given out again.
+    The queue knows both by their public ids: numbers of deleted rows are given out again.
     """
 
     delivery_id: int
     public_id: str
     generation: int
     number: int
-    webhook_id: int
+    webhook_id: str
     delay_seconds: float
 
     @property
@@ -59,7 +59,7 @@ def promise_of(row: Delivery, *, at: datetime) -> Promise:
         public_id=row.public_id,
         generation=row.generation,
         number=row.attempts + 1,
-        webhook_id=row.webhook_id,
+        webhook_id=row.webhook.public_id,
         delay_seconds=max(0.0, (row.next_at - at).total_seconds()),
     )
 
@@ -75,11 +75,10 @@ def fresh_promises(work: Resources) -> list[Promise]:
 def enqueue(promises: Sequence[Promise]) -> None:
     """Hand promised attempts to the queue; a slow receiver holds up only itself."""
     for promise in promises:
-        partition = str(promise.webhook_id)
         with (
             SetWorkflowID(promise.workflow_id),
             SetEnqueueOptions(
-                queue_partition_key=partition,
+                queue_partition_key=promise.webhook_id,
                 delay_seconds=promise.delay_seconds if promise.delay_seconds > 0 else None,
             ),
         ):

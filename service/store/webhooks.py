@@ -233,9 +233,9 @@ def list_deliveries(
 
 def waiting_deliveries(session: Session) -> list[Delivery]:
     """Return the deliveries that are promised an attempt."""
-    # Without what they hang on to: bodies of events by the thousand.
-    alone = (lazyload(Delivery.event), lazyload(Delivery.webhook))
-    query = select(Delivery).where(Delivery.state == DeliveryState.WAITING).options(*alone)
+    # Without their events: bodies by the thousand.
+    query = select(Delivery).options(lazyload(Delivery.event))
+    query = query.where(Delivery.state == DeliveryState.WAITING)
     return list(session.scalars(query.order_by(Delivery.id)))
 
 

@@ -103,6 +103,17 @@ def test_instant_sensor_and_source_make_a_scene_and_any_label_will_do(service: S
     # One look a pass and sensor: of the kite's two the one that saw more.
     assert service.series("A")["mean"] == [0.61, 0.62]
     assert service.series("A", sensor="kite, 2 bands")["mean"] == [0.62]
+    # Of two that saw as much it does not matter which came first.
+    service.put_parcels(*(square(ref, col=20 + 20 * at, row=0) for at, ref in enumerate("BC")))
+    for parcel, sources in [("B", ("club", "school")), ("C", ("school", "club"))]:
+        for source in sources:
+            mean = {"club": 0.41, "school": 0.42}[source]
+            post(service, [row(parcel, sensor="kite, 2 bands", source=source, mean=mean)])
+    chosen = service.series("B")["mean"]
+    assert len(chosen) == 1
+    assert service.series("C")["mean"] == chosen
+    shown = {entry["parcel"]: entry for entry in service.get("/v1/overview")["parcels"]}
+    assert [shown["B"]["value"], shown["C"]["value"]] == chosen * 2
 
 
 BAD: list[tuple[Row, str]] = [

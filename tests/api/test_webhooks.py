@@ -117,8 +117,8 @@ def test_a_receiver_is_registered_changed_and_forgotten_and_its_secret_shown_onc
         ("POST", f"{address}/ping"),
         ("GET", f"{address}/deliveries"),
     ):
-        body = {"json": {}} if method == "PATCH" else {}
-        assert problem(service.call(method, path, **body)) == (404, "webhook-not-found")
+        body: dict[str, Any] | None = {} if method == "PATCH" else None
+        assert problem(service.call(method, path, json=body)) == (404, "webhook-not-found")
     none = service.call("POST", "/v1/deliveries/dlv_0/resend")
     assert problem(none) == (404, "delivery-not-found")
 
@@ -182,7 +182,13 @@ def test_a_ping_is_verified_and_read_by_the_reference_libraries_and_its_attempt_
         assert attempt["answer"] == body[:1024].decode()
         assert done["next_attempt_at"] is None
         assert webhook["secret"] not in json.dumps(done)
-        # The next one is another event; and one asked for twice is one.
+
+
+def test_each_ping_is_an_event_of_its_own_and_one_asked_for_twice_is_one(service: Service) -> None:
+    with hooked() as hook:
+        webhook = register(service, hook.url)
+        promised = ping(service, webhook)
+        assert hook.next().headers["webhook-id"] == promised["event_id"]
         once = {"Idempotency-Key": "one ping"}
         first, second = (
             service.call("POST", f"/v1/webhooks/{webhook['id']}/ping", headers=once).json()
@@ -191,11 +197,11 @@ def test_a_ping_is_verified_and_read_by_the_reference_libraries_and_its_attempt_
         assert first == second
         assert first["event_id"] != promised["event_id"]
         assert hook.next().headers["webhook-id"] == first["event_id"]
-        assert [row["id"] for row in deliveries(service, webhook)] == [first["id"], done["id"]]
+        assert [row["id"] for row in deliveries(service, webhook)] == [first["id"], promised["id"]]
         page = service.call("GET", f"/v1/webhooks/{webhook['id']}/deliveries?limit=1")
         assert [row["id"] for row in page.json()["deliveries"]] == [first["id"]]
         rest = service.get(page.links["next"]["url"])["deliveries"]
-        assert [row["id"] for row in rest] == [done["id"]]
+        assert [row["id"] for row in rest] == [promised["id"]]
 
 
 def test_after_a_rotation_both_secrets_verify_for_a_day(service: Service) -> None:
@@ -252,7 +258,6 @@ def test_a_410_disables_the_receiver_until_a_person_enables_it(service: Service)
         resend = f"/v1/deliveries/{gone['id']}/resend"
         for path in (f"/v1/webhooks/{webhook['id']}/ping", resend):
             assert problem(service.call("POST", path)) == (409, "webhook-disabled")
-        service.put_parcels(square("A", col=5, row=5))
         assert hook.waiting() == []
         enabled = service.call(
             "PATCH", f"/v1/webhooks/{webhook['id']}", json={"state": "active"}
@@ -263,51 +268,66 @@ def test_a_410_disables_the_receiver_until_a_person_enables_it(service: Service)
         in_state(service, webhook, "delivered", attempts=2)
 
 
-def test_a_receiver_disabled_or_deleted_meanwhile_is_left_alone(settings: Settings) -> None:
-    """Also when a POST is under way: its end neither enables the receiver nor is recorded."""
-    entered, release = threading.Event(), threading.Event()
-
-    def held(connection: Connection) -> None:
-        entered.set()
-        release.wait(15)
-        answering("500 No")(connection)
-
-    failing = in_turn(answering("500 No"))
-    # A wait of at most 6 ms: whatever is promised comes due while the test runs.
+def test_a_receiver_that_is_disabled_gets_nothing_that_still_waits(settings: Settings) -> None:
+    answers = in_turn(answering("500 No"), answering("204 No Content"))
+    # A wait of at most 6 ms: what is promised comes due while the test runs.
     with (
         serving(open_to_loopback(settings, wait_scale=0.001)) as service,
-        hooked(in_turn(answering("500 No"), answering("204 No Content"))) as disabled_hook,
-        hooked(in_turn(held)) as deleted_hook,
-        hooked(failing) as waiting_hook,
+        hooked(answers) as hook,
+    ):
+        webhook = register(service, hook.url)
+        promised = ping(service, webhook)
+        hook.next()
+        in_state(service, webhook, "waiting", attempts=1)
+        address = f"/v1/webhooks/{webhook['id']}"
+        service.call("PATCH", address, json={"state": "disabled"})
+        in_state(service, webhook, "exhausted", attempts=1)
+        assert state_of(service, webhook) == "disabled"
+        assert hook.waiting() == []
+        service.call("PATCH", address, json={"state": "active"})
+        assert service.call("POST", f"/v1/deliveries/{promised['id']}/resend").status_code == 202
+        assert hook.next().headers["webhook-id"] == promised["event_id"]
+
+
+def test_the_end_of_a_post_neither_enables_a_receiver_nor_brings_back_a_deleted_one(
+    settings: Settings,
+) -> None:
+    entered = {"disabled": threading.Event(), "deleted": threading.Event()}
+    release = threading.Event()
+
+    def held(entered: threading.Event) -> Behaviour:
+        def behave(connection: Connection) -> None:
+            entered.set()
+            release.wait(15)
+            answering("500 No")(connection)
+
+        return behave
+
+    # Nothing is tried after a fifth of a second: the POSTs under way are the last.
+    with (
+        serving(open_to_loopback(settings, wait_scale=1e-6)) as service,
+        hooked(in_turn(held(entered["disabled"]))) as disabled_hook,
+        hooked(in_turn(held(entered["deleted"]))) as deleted_hook,
         hooked() as healthy_hook,
     ):
         disabled = register(service, disabled_hook.url)
+        deleted = register(service, deleted_hook.url)
         ping(service, disabled)
-        disabled_hook.next()
-        in_state(service, disabled, "waiting", attempts=1)
-        address = f"/v1/webhooks/{disabled['id']}"
-        service.call("PATCH", address, json={"state": "disabled"})
-        in_state(service, disabled, "exhausted", attempts=1)
-        assert state_of(service, disabled) == "disabled"
-        assert disabled_hook.waiting() == []
-
-        deleted, waiting = register(service, deleted_hook.url), register(service, waiting_hook.url)
-        ping(service, waiting)
-        in_state(service, waiting, "waiting", attempts=1)
         for _ in range(2):
             ping(service, deleted)
-        assert entered.wait(15)
-        for webhook in (deleted, waiting):
-            path = f"/v1/webhooks/{webhook['id']}"
-            assert service.call("DELETE", path).status_code == 200
-        release.set()
+        assert all(event.wait(15) for event in entered.values())
+        assert service.call("DELETE", f"/v1/webhooks/{deleted['id']}").status_code == 200
+        address = f"/v1/webhooks/{disabled['id']}"
+        assert service.call("PATCH", address, json={"state": "disabled"}).status_code == 200
         healthy = register(service, healthy_hook.url)
         ping(service, healthy)
         in_state(service, healthy, "delivered", attempts=1)
+        release.set()
+        assert comes_true(lambda: deliveries(service, disabled)[0]["state"] == "exhausted")
+        assert state_of(service, disabled) == "disabled"
         upkeep.sweep(resources())
         assert counted(service, Delivery) == 2
         assert len(deleted_hook.waiting()) == 1
-        assert service.client.get("/readyz").status_code == 200
 
 
 def test_failures_are_tried_again_after_growing_waits_and_not_before_retry_after(
@@ -535,14 +555,8 @@ def test_alerts_are_told_by_holding_severity_and_event_and_never_with_data_of_ot
             assert told[ref].get_subject() == row["id"]
         bodies = {"north": [hook_north.next().body], "south": [hook_south.next().body]}
 
-        remark = {"verdict": "confirmed", "note": "Seen from the lane."}
         for ref in ("P2", "P5"):
-            address = f"/v1/alerts/{alerts[ref]['id']}"
-            tag = service.call("GET", address).headers["ETag"]
-            closed = service.call(
-                "POST", f"{address}/close", json=remark, headers={"If-Match": tag}
-            )
-            assert closed.status_code == 200, closed.text
+            close(service, alerts[ref]["id"])
         bodies["north"].append(hook_north.next().body)
         closed_ids = [hook_few.event()["subject"], hook_few.event()["subject"]]
         assert sorted(closed_ids) == sorted(alerts[ref]["id"] for ref in ("P2", "P5"))
@@ -550,12 +564,25 @@ def test_alerts_are_told_by_holding_severity_and_event_and_never_with_data_of_ot
             found = deliveries(service, webhook)
             assert len(found) == count, found
         for holding, sent in bodies.items():
-            foreign = {name for ref, name in HOLDINGS.items() if name != holding}
-            foreign |= {ref for ref, name in HOLDINGS.items() if name != holding}
-            foreign |= {row["id"] for row in alerts.values() if row["holding"] != holding}
-            for body in sent:
-                assert [word for word in foreign if f'"{word}"'.encode() in body] == []
-                assert f'"{holding}"'.encode() in body
+            holds_nothing_foreign(holding, sent, alerts)
+
+
+def close(service: Service, alert_id: str) -> None:
+    address = f"/v1/alerts/{alert_id}"
+    tag = service.call("GET", address).headers["ETag"]
+    remark = {"verdict": "confirmed", "note": "Seen from the lane."}
+    closed = service.call("POST", f"{address}/close", json=remark, headers={"If-Match": tag})
+    assert closed.status_code == 200, closed.text
+
+
+def holds_nothing_foreign(
+    holding: str, bodies: list[bytes], alerts: dict[str, dict[str, Any]]
+) -> None:
+    foreign = {word for pair in HOLDINGS.items() if pair[1] != holding for word in pair}
+    foreign |= {row["id"] for row in alerts.values() if row["holding"] != holding}
+    for body in bodies:
+        assert f'"{holding}"'.encode() in body
+        assert [word for word in foreign if f'"{word}"'.encode() in body] == []
 
 
 def test_an_attempt_whose_work_was_lost_is_promised_anew_by_the_sweep(settings: Settings) -> None:

@@ -88,7 +88,7 @@ POINTS: Final[Mapping[str, Callable[[], None]]] = {
     "done-not-committed": partial(before, service.jobs.ingest, "now"),
     # Judging: the looks are there and nothing is judged; alerts are worked out and not
     # committed; they are committed with their deliveries, of which the queue knows nothing.
-    "before-judging": partial(before, service.jobs.assess, "judge_wanted"),
+    "looks-not-judged": partial(before, service.jobs.assess, "judge_wanted"),
     "alert-not-committed": partial(before, service.jobs.assess, "announce_alert", times=2),
     "alert-not-told": partial(before, service.jobs.assess, "enqueue_deliveries"),
     # Delivering: the receiver has the event and its answer is not recorded; its refusal is

@@ -162,7 +162,7 @@ def repeats(requests: list[Request]) -> list[int]:
 @pytest.mark.parametrize(
     ("deployment", "point", "is_queue_lost", "before"),
     [
-        ("postgresql", "before-judging", False, (0, 0, 0)),
+        ("postgresql", "looks-not-judged", False, (0, 0, 0)),
         ("sqlite", "alert-not-committed", True, (0, 0, 0)),
         ("sqlite", "alert-not-told", True, (2, 2, 2)),
     ],
@@ -244,7 +244,7 @@ def scene_of_the_break(folder: Path) -> tuple[dict[str, Any], dict[str, Path]]:
     return scene, files
 
 
-@pytest.mark.parametrize("point", ["before-judging", "alert-not-told"])
+@pytest.mark.parametrize("point", ["looks-not-judged", "alert-not-told"])
 def test_killed_with_a_scene_half_told_it_finishes_the_scene_and_tells_all_of_it(
     deployment: Deployment, tmp_path: Path, point: str
 ) -> None:
