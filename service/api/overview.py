@@ -2,7 +2,7 @@
 
 import csv
 import io
-from collections.abc import Collection, Iterator
+from collections.abc import Collection, Iterator, Mapping
 from dataclasses import asdict, dataclass
 from datetime import datetime
 from typing import Annotated, Any, Final
@@ -19,6 +19,8 @@ from service.api.routes import contract_router
 from service.api.wire import QueryInstant, Ref, Text, written
 from service.clock import now
 from service.errors import RejectedInput
+from service.store.alerts import open_alerts
+from service.store.judgements import departures_at
 from service.store.looks import newest_looks
 from service.store.parcels import boundaries_at, visible
 from service.store.seasons import crop_on, seasons_of
@@ -30,7 +32,10 @@ _FORMATS: Final = {"application/json": "json", GEOJSON: "geojson", "text/csv": "
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Newest:
-    """A parcel's newest look; a parcel without one has nulls."""
+    """A parcel's newest look and its open alerts; a parcel without a look has nulls.
+
+    `departure` is in spreads, null where the look was not judged.
+    """
 
     parcel: str
     name: str | None
@@ -40,7 +45,9 @@ class Newest:
     observed_at: str | None
     scene: str | None
     value: float | None
+    departure: float | None
     valid_share: float | None
+    alerts: list[str]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -62,7 +69,7 @@ def get_overview(
     crop: Annotated[Text | None, Query(description="Crop on that day.")] = None,
     format: Annotated[str | None, Query(description="json, geojson or csv.")] = None,  # noqa: A002 - the contract's name
 ) -> Response:
-    """Answer the newest look at every parcel: its value, valid share and scene."""
+    """Answer the newest look at every parcel: its value, departure and open alerts."""
     measures = measures_in([index])
     if len(measures) != 1:
         raise RejectedInput.parameter("index", "An overview is of one index; name one.")
@@ -70,8 +77,9 @@ def get_overview(
     with context.sessions.reading() as session:
         parcels = _parcels(session, caller.holdings, holding)
         looks = _looks(session, parcels, measures[0], at)
+        beside = _beside(session, measures[0], looks, at or now())
         newest = {
-            row.id: _newest(row, measures[0], grown, looks.get(row.id))
+            row.id: _newest(row, measures[0], grown, looks.get(row.id), beside)
             for row, grown in _with_crops(session, parcels, (at or now()), crop)
         }
         if media_type == GEOJSON:
@@ -132,7 +140,24 @@ def _looks(
     }
 
 
-def _newest(row: Parcel, measure: str, crop: str | None, look: _Look | None) -> Newest:
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Beside:
+    """What judging says, by parcel."""
+
+    departures: Mapping[int, float | None]
+    alerts: Mapping[int, list[str]]
+
+
+def _beside(session: Session, measure: str, looks: Mapping[int, _Look], at: datetime) -> _Beside:
+    instants = {parcel_id: look.observed_at for parcel_id, look in looks.items()}
+    return _Beside(
+        departures=departures_at(session, measure, instants), alerts=open_alerts(session, at)
+    )
+
+
+def _newest(
+    row: Parcel, measure: str, crop: str | None, look: _Look | None, beside: _Beside
+) -> Newest:
     return Newest(
         parcel=row.ref,
         name=row.name,
@@ -142,7 +167,9 @@ def _newest(row: Parcel, measure: str, crop: str | None, look: _Look | None) -> 
         observed_at=written(look.observed_at) if look else None,
         scene=look.scene if look else None,
         value=look.value if look else None,
+        departure=beside.departures.get(row.id) if look else None,
         valid_share=look.valid_share if look else None,
+        alerts=beside.alerts.get(row.id, []),
     )
 
 
@@ -164,5 +191,5 @@ def _csv(newest: list[Newest]) -> Response:
     text = io.StringIO()
     writer = csv.DictWriter(text, fieldnames=[*Newest.__dataclass_fields__])
     writer.writeheader()
-    writer.writerows(asdict(entry) for entry in newest)
+    writer.writerows({**asdict(entry), "alerts": " ".join(entry.alerts)} for entry in newest)
     return Response(text.getvalue(), media_type="text/csv")

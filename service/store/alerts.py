@@ -124,6 +124,19 @@ def list_alerts(
     ).all()
 
 
+def open_alerts(session: Session, at: datetime) -> dict[int, list[str]]:
+    """Return by parcel the alerts that were open at an instant, by acquisition, newest first."""
+    query = select(AlertRow.parcel_id, AlertRow.id).where(
+        AlertRow.state != RETRACTED,
+        AlertRow.opened_at <= at,
+        or_(AlertRow.closed_at.is_(None), AlertRow.closed_at > at),
+    )
+    found: dict[int, list[str]] = {}
+    for parcel_id, alert_id in session.execute(query.order_by(AlertRow.opened_at.desc())):
+        found.setdefault(parcel_id, []).append(alert_id)
+    return found
+
+
 def _held_by(holdings: Collection[str]) -> ColumnElement[bool]:
     return Parcel.holding_id.in_(select(Holding.id).where(Holding.ref.in_(list(holdings))))
 

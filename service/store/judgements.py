@@ -152,6 +152,23 @@ def judgements_of(
     return found
 
 
+def departures_at(
+    session: Session, measure: str, looks: Mapping[int, datetime]
+) -> dict[int, float | None]:
+    """Return by parcel how far a measure departed at one look each, None where unknown."""
+    query = select(Judgement, BaselineRow.measures).join(
+        BaselineRow, BaselineRow.id == Judgement.baseline_id
+    )
+    found: dict[int, float | None] = {}
+    for instants in in_batches(sorted(set(looks.values()))):
+        for row, measures in session.execute(query.where(Judgement.acquired_at.in_(instants))):
+            if looks.get(row.parcel_id) == row.acquired_at and measure in measures:
+                table = row.figures.reshape(len(measures), len(JUDGED))
+                value = table[measures.index(measure), JUDGED.index("departure")]
+                found[row.parcel_id] = None if np.isnan(value) else float(str(value))
+    return found
+
+
 def put_alerts(
     session: Session,
     axis: str,

@@ -638,3 +638,19 @@ def test_verdicts_say_whether_looks_shape_the_next_season(judged: Service) -> No
         act(judged, cut_down, "reopen")
         close(judged, cut_down, verdict)
         assert baseline() == ((version, mid) if stays else undecided)
+
+
+def test_the_overview_shows_departures_and_the_alerts_open_on_a_day(judged: Service) -> None:
+    def shown(**params: str) -> dict[str, dict[str, Any]]:
+        rows = judged.get("/v1/overview", params={"index": "ndwi", **params})["parcels"]
+        return {row["parcel"]: row for row in rows}
+
+    first, again = of_parcel(judged, FLOODED)
+    then = shown(at=FLOOD)[FLOODED]
+    assert then["alerts"] == [first["id"]]
+    assert then["departure"] == pytest.approx(first["departures"]["ndwi"], abs=5e-2)
+    assert shown(at=stamp(at_pass(5)))[FLOODED]["alerts"] == []
+    now = shown()
+    assert now[FLOODED]["alerts"] == [again["id"]]
+    assert now["maize-8"]["alerts"]
+    assert now["maize-1"]["alerts"] == []

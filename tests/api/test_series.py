@@ -328,7 +328,10 @@ def test_the_overview_has_every_parcel_s_newest_look(service: Service, tmp_path:
         "observed_at": TIMES["g4"],
         "scene": "g4",
         "value": pytest.approx(CANOPY_NDVI, abs=1e-6),
+        # Nothing says what grew there, so nothing was expected.
+        "departure": None,
         "valid_share": pytest.approx(1, abs=1e-4),
+        "alerts": [],
     }
     assert (b["parcel"], b["name"], b["scene"]) == ("B", "Long strip", "g4")
     # A parcel without a look is there, without figures.
@@ -377,11 +380,11 @@ def test_the_overview_is_json_csv_and_geojson_alike(service: Service, tmp_path: 
         assert [f["geometry"] for f in features] == [p["geometry"] for p in parcels]
         text = service.call("GET", "/v1/overview", params={**params, "format": "csv"}).text
         rows = list(csv.DictReader(io.StringIO(text, newline="")))
-        numbers = ("value", "valid_share")
+        numbers = ("value", "departure", "valid_share")
         assert [
             {k: float(v) if k in numbers and v else v or None for k, v in row.items()}
             for row in rows
-        ] == told
+        ] == [{**entry, "alerts": " ".join(entry["alerts"]) or None} for entry in told]
 
 
 def test_the_overview_is_narrowed_by_holding_crop_and_key(service: Service, tmp_path: Path) -> None:
