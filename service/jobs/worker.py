@@ -13,6 +13,7 @@ from service.errors import Unavailable
 from service.jobs import assess, deliver, ingest
 from service.jobs.resources import Resources, lend
 from service.jobs.upkeep import Upkeep
+from service.store.sessions import hold_database
 
 _log = structlog.get_logger()
 _APPLICATION_VERSION: Final = "1"
@@ -23,13 +24,14 @@ _EXECUTOR: Final = "embedded"
 
 
 class Worker:
-    """The queue's engine, embedded in this process; one to a data folder, held by a lock."""
+    """The queue's engine, embedded in this process; one to a data folder and database."""
 
     def __init__(self, work: Resources) -> None:
         self._work = work
         self._lock = fasteners.InterProcessLock(work.settings.data / "worker.lock")
         self._upkeep: Upkeep | None = None
         self._engine: Engine | None = None
+        self._claim: Callable[[], None] | None = None
 
     def claim(self) -> None:
         """Take the data folder for this process, unless it has it already.
@@ -39,10 +41,16 @@ class Worker:
         Unavailable
             Another process works on this data folder.
         """
-        if not self._lock.acquired and not self._lock.acquire(blocking=False):
+        if self._lock.acquired:
+            return
+        if not self._lock.acquire(blocking=False):
             raise Unavailable(
                 "worker-running", "Another process is already serving this data folder."
             )
+        self._claim = hold_database(self._work.sessions.engine, "worker")
+        if self._claim is None:
+            self._lock.release()
+            raise Unavailable("worker-running", "Another process is already serving this database.")
 
     def start(self) -> None:
         """Claim the folder, launch the engine, resume what was interrupted, begin the upkeep."""
@@ -116,7 +124,15 @@ class Worker:
         if self._engine is not None:
             self._engine.dispose()
         lend(None)
-        self._lock.release()
+        self.release()
+
+    def release(self) -> None:
+        """Let go of data folder and database."""
+        if self._claim is not None:
+            self._claim()
+            self._claim = None
+        if self._lock.acquired:
+            self._lock.release()
 
 
 def _engine(url: str, data: Path) -> Engine:

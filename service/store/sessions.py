@@ -1,7 +1,7 @@
 """The database: engine, sessions, migrations."""
 
 import hashlib
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -79,6 +79,27 @@ def serialise(session: Session, what: str) -> None:
 
 def _lock_key(what: str) -> int:
     return int.from_bytes(hashlib.sha256(what.encode()).digest()[:8], "big", signed=True)
+
+
+def hold_database(engine: Engine, what: str) -> Callable[[], None] | None:
+    """Hold a database for one purpose while this process lives; return what lets go of it.
+
+    Returns None if another process holds it. On SQLite the data folder's lock does this.
+    """
+    if engine.dialect.name != "postgresql":
+        return lambda: None
+    connection = engine.connect().execution_options(isolation_level="AUTOCOMMIT")
+
+    def release() -> None:
+        # Closing alone would give the connection, and with it the lock, back to the pool.
+        connection.invalidate()
+        connection.close()
+
+    held = text("SELECT pg_try_advisory_lock(:key)")
+    if connection.scalar(held, {"key": _lock_key(f"hold {what}")}):
+        return release
+    release()
+    return None
 
 
 def migrations_folder() -> Path:
