@@ -10,7 +10,7 @@ from service.spectral.roles import BandRole
 
 STATS: Final = ("mean", "sd", "min", "p10", "p50", "p90", "max", "valid_share", "pixels")
 BAND_STATS: Final = ("mean", "sd", "valid_share", "pixels")
-_WATCHED_IDS: Final = tuple(index.id for index in WATCHED)
+WATCHED_IDS: Final = tuple(index.id for index in WATCHED)
 
 
 def split(values: Sequence[str]) -> list[str]:
@@ -27,10 +27,10 @@ def measures_in(values: Sequence[str] | None) -> list[str]:
         One of them is neither a watched index nor a band role.
     """
     if values is None:
-        return list(_WATCHED_IDS)
+        return list(WATCHED_IDS)
     names = split(values)
     for name in names:
-        if name in _WATCHED_IDS or name in set(BandRole):
+        if name in WATCHED_IDS or name in set(BandRole):
             continue
         reason = (
             "This index is not watched, so it is not measured."
@@ -38,7 +38,7 @@ def measures_in(values: Sequence[str] | None) -> list[str]:
             else "There is no such index."
         )
         raise RejectedInput.parameter(
-            "index", f"{reason} There are {', '.join(_WATCHED_IDS)}, and the band roles."
+            "index", f"{reason} There are {', '.join(WATCHED_IDS)}, and the band roles."
         )
     return names
 

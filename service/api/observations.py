@@ -19,6 +19,7 @@ from service.api.bodies import (
     unsupported_media_type,
 )
 from service.api.context import Caller, Context, Ctx, Ingester
+from service.api.measures import WATCHED_IDS
 from service.api.once import Once, OnceOnly, json_answer
 from service.api.preferences import Wait, is_judged
 from service.api.routes import contract_router, takes
@@ -97,8 +98,9 @@ def _check_possible(figure: FigureIn, pointer: str) -> None:
 def _range_of(measure: str, pointer: str) -> tuple[float, float]:
     if measure in set(BandRole):
         return _RANGES["band"]
-    if measure not in INDICES:
-        detail = f"There is no such index. There are {joined(INDICES)}, and the band roles."
+    if measure not in WATCHED_IDS:
+        what = "This index is not watched" if measure in INDICES else "There is no such index"
+        detail = f"{what}. There are {joined(WATCHED_IDS)}, and the band roles."
         raise RejectedInput.at(pointer, detail)
     return _RANGES["normalised" if INDICES[measure].normalised else "other"]
 

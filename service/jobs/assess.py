@@ -365,6 +365,7 @@ def enqueue_wanted(work: Resources) -> None:
         return
     told = ",".join(f"{row.axis}/{row.season}/{row.wanted}" for row in wanted)
     digest = hashlib.sha256(told.encode()).hexdigest()[:32]
-    # By the hour, so that judging which failed is tried again.
-    with SetWorkflowID(f"assess:{digest}:{now():%Y%m%d%H}"):
+    # By ten minutes, so that judging which failed is tried again.
+    ten_minutes = f"{now():%Y%m%d%H%M}"[:-1]
+    with SetWorkflowID(f"assess:{digest}:{ten_minutes}"):
         DBOS.enqueue_workflow(QUEUE, assess, told)

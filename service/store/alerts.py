@@ -53,7 +53,7 @@ def document_of(row: AlertRow) -> dict[str, Any]:
         # As told; judging keeps them whole.
         **{name: round(details[name], 4) for name in _FIGURES},
         **{name: round(details[name], 2) for name in _SCORES},
-        "departures": {name: round(z, 2) for name, z in details["departures"].items()},
+        "departures": {name: round(z, 2) + 0.0 for name, z in details["departures"].items()},
         "revision": row.revision,
         "caution": CAUTION,
     }

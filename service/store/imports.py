@@ -146,6 +146,8 @@ def _fresh(
 
 
 def _is_same(figure: Figure, held: Observed) -> bool:
+    if held.places.harmonised != figure.harmonised:
+        return False
     share = np.float32(1.0 if figure.valid_share is None else figure.valid_share)
     return np.float32(held.of_look("valid_share")) == share and all(
         _as_stored(held.figure(f"{figure.measure}.{stat}")) == _as_stored(figure.stats.get(stat))

@@ -37,6 +37,7 @@ class Places:
 
     by_column: Mapping[str, int]
     rule: str
+    harmonised: bool
 
     def has(self, measure: str) -> bool:
         """Whether observations of this layout hold a measure."""
@@ -190,6 +191,7 @@ def _places(layout: Layout) -> Places:
     return Places(
         by_column={column: place for place, column in enumerate(layout.columns)},
         rule=layout.recipe["rule"],
+        harmonised=bool(layout.recipe.get("harmonised")),
     )
 
 

@@ -98,6 +98,9 @@ def test_instant_sensor_and_source_make_a_scene_and_any_label_will_do(service: S
         row(sensor="kite, 2 bands", source="school", mean=0.63, valid_share=0.9),
     ]
     assert counts(post(service, rows)) == (3, 0, 0, 0)
+    # Whether it was harmonised is part of a figure: a correction of that alone is one.
+    assert counts(post(service, [{**rows[1], "harmonised": False}])) == (0, 1, 0, 0)
+    assert counts(post(service, [rows[1]])) == (0, 1, 0, 0)
     scenes = service.get("/v1/scenes")["scenes"]
     assert len({scene["ref"] for scene in scenes}) == 3
     # One look a pass and sensor: of the kite's two the one that saw more.
@@ -132,7 +135,8 @@ BAD: list[tuple[Row, str]] = [
     (row(mean=7000), "mean"),
     (row(mean=1.2), "mean"),
     (row(index="red", mean=-0.9), "mean"),
-    (row(index="evi", mean=1e30), "mean"),
+    (row(index="evi"), "index"),
+    (row(index="savi", mean=1e30), "mean"),
     (row(max=1.7), "max"),
     (row(min=0.8, max=0.7), "min"),
     (row(sd=-0.1), "sd"),

@@ -24,7 +24,7 @@ from tests.unit.store.histories import (
 )
 
 START = datetime(2024, 6, 3, 10, tzinfo=UTC)
-PLACES = Places(by_column={"clear.valid_share": 0}, rule="clear")
+PLACES = Places(by_column={"clear.valid_share": 0}, rule="clear", harmonised=False)
 
 
 def observed(
