@@ -311,6 +311,8 @@ def test_an_unchanged_series_is_304_until_a_scene_changes_it(
     service.put_parcels(square("far", col=301, row=300))
     assert asked(tag) == (304, tag)
     service.call("DELETE", "/v1/scenes/s1")
+    # What rests on the scene is judged anew, which may change an answer once more.
+    service.call("POST", "/v1/observations", json=[], headers={"Prefer": "wait=30"})
     status, withdrawn = asked(tag)
     assert (status, withdrawn != tag) == (200, True)
     assert asked(withdrawn)[0] == 304
