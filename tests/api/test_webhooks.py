@@ -269,8 +269,10 @@ def test_a_410_disables_the_receiver_until_a_person_enables_it(service: Service)
 
 
 def test_a_receiver_that_is_disabled_gets_nothing_that_still_waits(settings: Settings) -> None:
-    answers = in_turn(answering("500 No"), answering("204 No Content"))
-    # A wait of at most 6 ms: what is promised comes due while the test runs.
+    # It asks for 4,000 s, of which a thousandth is waited: time enough to be disabled in, and
+    # what is promised still comes due while the test runs.
+    first = answering("500 No", fields=("Retry-After: 4000",))
+    answers = in_turn(first, answering("204 No Content"))
     with (
         serving(open_to_loopback(settings, wait_scale=0.001)) as service,
         hooked(answers) as hook,
