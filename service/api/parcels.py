@@ -115,6 +115,8 @@ def put_parcels(
     at = now()
     with context.sessions.writing() as session:
         serialise(session, "parcels")
+        # Before any parcel's row: judging locks folds and parcels in this order too.
+        serialise(session, "judging")
         rows = parcels_by_ref(session, (change.ref for change in changes.values()))
         for item, change in changes.items():
             _check_holding(item, change, rows.get(change.ref), caller, faults)
