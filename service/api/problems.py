@@ -159,7 +159,7 @@ KINDS: Final[Mapping[str, Kind]] = {
     ),
     "wrong-quality-layer": Kind(
         title="Wrong quality layer",
-        page="The quality layer is not the one that the sensor's profile reads.",
+        page="The quality or saturation layer is not the one that the sensor's profile reads.",
     ),
     "no-index": Kind(
         title="No index can be measured",
