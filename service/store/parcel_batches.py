@@ -157,6 +157,8 @@ def keep_parcels(
     """
     batch.faults.refuse(unless_lenient=is_lenient)
     serialise(session, "parcels")
+    # Before any parcel's row: judging locks folds and parcels in this order too.
+    serialise(session, "judging")
     _check_holdings(session, batch, holdings)
     batch.faults.refuse(unless_lenient=is_lenient)
     kept = batch.kept()
