@@ -13,8 +13,18 @@ No HTTP status lives here: `api.problems` and `cli` map the kinds in one table e
 An exception that is none of these is our own bug.
 """
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field, replace
+from typing import Final, TypeVar
+
+MAX_ERRORS: Final = 100
+"""As many faults are listed; the rest are counted."""
+Item = TypeVar("Item")
+
+
+def pointer_of(location: Sequence[str | int]) -> str:
+    """Return a location in a body as JSON pointer (RFC 6901)."""
+    return "".join("/" + str(step).replace("~", "~0").replace("/", "~1") for step in location)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -91,3 +101,57 @@ class Unavailable(FurrowlightError):
     def __init__(self, code: str, detail: str, *, retry_after_seconds: int = 30) -> None:
         super().__init__(code, detail)
         self.retry_after_seconds = retry_after_seconds
+
+
+@dataclass(slots=True)
+class Faults:
+    """The faults of a batch, by item; `names` are what an item is called where it stands.
+
+    A batch is all or nothing, or, if preferred, the good items with a list of the rest.
+    """
+
+    faults: list[Fault] = field(default_factory=list)
+    rejected: set[int] = field(default_factory=set)
+    codes: set[str] = field(default_factory=set)
+    names: dict[int, str] = field(default_factory=dict)
+
+    def add(self, item: int, fault: Fault, code: str = "invalid-input") -> None:
+        """Note a fault of an item, by its place in the batch."""
+        if item in self.names:
+            fault = replace(fault, detail=f"{self.names[item]}: {fault.detail}")
+        self.faults.append(fault)
+        self.rejected.add(item)
+        self.codes.add(code)
+
+    def collect(self, item: int, check: Callable[[], Item]) -> Item | None:
+        """Return what a check gives, or note what it rejects and return None."""
+        try:
+            return check()
+        except RejectedInput as error:
+            for fault in error.faults:
+                self.add(item, fault, error.code)
+        return None
+
+    def refuse(self, *, unless_lenient: bool) -> None:
+        """Refuse the whole batch for its faults, unless good items may land alone.
+
+        Raises
+        ------
+        RejectedInput, Conflict
+            Conflict if every fault is one with what is there already.
+        """
+        if not self.faults or unless_lenient:
+            return
+        count = len(self.faults)
+        detail = (
+            f"{self.faults[0].detail} Nothing was kept."
+            if count == 1
+            else f"{count} things are wrong; see `errors`. Nothing was kept."
+        )
+        code = next(iter(self.codes)) if len(self.codes) == 1 else "invalid-input"
+        is_conflict = code in ("ref-taken", "season-overlaps")
+        raise (Conflict if is_conflict else RejectedInput)(code, detail, self.faults)
+
+    def listed(self) -> list[dict[str, str]]:
+        """Return the faults for an answer, at most as many as a problem document lists."""
+        return [fault.as_dict() for fault in self.faults[:MAX_ERRORS]]

@@ -6,21 +6,22 @@ the zone was seen (its look), the statistics of each index, mean and spread of e
 
 A cell counts where it is usable: the quality layer's rule says so, if there is a layer, and
 at least one band has a number there. Where a single band has none, only what is made from
-that band is unknown.
+that band is unknown. An index may name a rule of its own; the scene then has a look by that
+rule beside the one by its own.
 """
 
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any, Final
+from typing import Final
 
 import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
+from service.spectral.gathered import NUMBER, SATURATED, Gathered
 from service.spectral.indices import Index
 from service.spectral.quality import Loss, QualityLayer
 from service.spectral.roles import BandRole
-from service.spectral.scaling import Scaling
 from service.zonal.coverage import Zones
 from service.zonal.statistics import mean_and_sd, narrowed, summarise, sums
 
@@ -40,11 +41,6 @@ BAND_STATS: Final = ("mean", "sd")
 # About what the arrays of one batch need to stay in a processor's cache and below 50 MB.
 _CELLS_AT_ONCE: Final = 200_000
 
-# What a band has in a cell.
-_NOTHING: Final = 0
-_NUMBER: Final = 1
-_SATURATED: Final = 2
-
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Observed:
@@ -61,17 +57,29 @@ class Observed:
         Ids of the indices that were measured.
     skipped
         Index id → why it was not measured, in words.
+    rules
+        Index id → quality rule, for the measured indices that were read by one of their own.
     """
 
     columns: tuple[str, ...]
     figures: NDArray[np.float32]
     measured: tuple[str, ...]
     skipped: Mapping[str, str]
+    rules: Mapping[str, str]
 
 
-def columns_for(roles: Sequence[BandRole], indices: Sequence[Index], rule: str) -> tuple[str, ...]:
-    """Name the columns that `observe` fills for these bands, indices and quality rule."""
-    look = (f"{rule}.{figure}" for figure in LOOK_FIGURES)
+def columns_for(
+    roles: Sequence[BandRole],
+    indices: Sequence[Index],
+    rule: str,
+    own_rules: Mapping[str, str] | None = None,
+) -> tuple[str, ...]:
+    """Name the columns that `observe` fills for these bands, indices and quality rules.
+
+    `own_rules` are those of indices that are not read by `rule`, as `Observed.rules`.
+    """
+    rules = _all_rules(rule, own_rules or {})
+    look = (f"{each}.{figure}" for each in rules for figure in LOOK_FIGURES)
     by_index = (f"{index.id}.{stat}" for index in _fed(indices, roles) for stat in INDEX_STATS)
     by_band = (f"{role.value}.{stat}" for role in roles for stat in BAND_STATS)
     return (*look, *by_index, *by_band)
@@ -94,7 +102,10 @@ def observe(
         Parts of the measuring grid with dimensions (y, x), in any order and of any size, with
         attributes ``row0``, ``col0`` and ``grid_cols``. Variables are band roles with the
         stored numbers and attributes ``scale``, ``offset``, ``nodata``, ``saturated``, and
-        ``quality`` with attribute ``nodata``. A cell that no block holds has no data.
+        ``quality`` with attribute ``nodata``. Optional variables: ``saturation``, whose bit
+        ``saturation_bit`` (an attribute of a band) says that the band is saturated there, and
+        ``near_cloud``, true where cells of clear surfaces are to count as cloud. A cell that
+        no block holds has no data.
     zones
         The parcels on the measuring grid.
     roles
@@ -104,7 +115,8 @@ def observe(
     quality
         How to read the quality layer, or None for a scene without one.
     rule
-        Id of the layer's quality rule, ``none`` without a layer.
+        Id of the layer's quality rule, ``none`` without a layer. Bands are read by it, and
+        every index that names no rule of its own which the layer has.
 
     Returns
     -------
@@ -122,28 +134,47 @@ def observe(
     other zones.
     """
     fed = _fed(indices, roles)
-    columns = columns_for(roles, indices, rule)
-    scene = _Gathered(zones.distinct_cells(), roles, with_classes=quality is not None)
+    own_rules = _own_rules(fed, quality, rule)
+    columns = columns_for(roles, indices, rule, own_rules)
+    rules = _all_rules(rule, own_rules)
+    scene = Gathered(zones.distinct_cells(), roles, with_classes=quality is not None)
     for block in blocks:
         scene.take(block)
     figures = np.full((len(zones), len(columns)), np.nan, dtype=np.float32)
     for batch in _batches(zones, scene):
-        judged = _judge(batch, scene, quality, rule)
-        parts = [
-            *_look_figures(batch, judged),
-            *_measure_figures(batch.narrowed_to(judged.usable), scene, roles=roles, indices=fed),
-        ]
+        judged = {each: _judge(batch, scene, quality, each) for each in rules}
+        usable = _narrowed(batch, judged, scene)
+        parts = [figure for each in rules for figure in _look_figures(batch, judged[each])]
+        for index in fed:
+            parts += _index_figures(index, usable[own_rules.get(index.id, rule)])
+        parts += _band_figures(roles, usable[rule])
         figures[batch.first : batch.last] = np.stack(parts, axis=1)
     return Observed(
         columns=columns,
         figures=figures,
         measured=tuple(index.id for index in fed),
         skipped=_skipped(indices, roles),
+        rules=own_rules,
     )
 
 
 def _fed(indices: Sequence[Index], roles: Sequence[BandRole]) -> tuple[Index, ...]:
     return tuple(index for index in indices if set(index.roles) <= set(roles))
+
+
+def _own_rules(indices: Sequence[Index], quality: QualityLayer | None, rule: str) -> dict[str, str]:
+    """Return by id the rules of the indices that the layer reads otherwise than by `rule`."""
+    return {
+        index.id: index.quality_rule
+        for index in indices
+        if quality is not None
+        and index.quality_rule in quality.rules
+        and index.quality_rule not in (None, rule)
+    }
+
+
+def _all_rules(rule: str, own_rules: Mapping[str, str]) -> tuple[str, ...]:
+    return (rule, *sorted(set(own_rules.values()) - {rule}))
 
 
 def _skipped(indices: Sequence[Index], roles: Sequence[BandRole]) -> dict[str, str]:
@@ -154,105 +185,6 @@ def _skipped(indices: Sequence[Index], roles: Sequence[BandRole]) -> dict[str, s
             bands = "bands" if len(missing) > 1 else "band"
             reasons[index.id] = f"It needs the {bands} {' and '.join(missing)}."
     return reasons
-
-
-class _Gathered:
-    """The scene's numbers in the cells of the zones, each cell once, as they are stored.
-
-    Stored integers take 2 bytes a cell and band; they become reflectance batch by batch.
-    """
-
-    def __init__(
-        self, cells: NDArray[np.int64], roles: Sequence[BandRole], *, with_classes: bool
-    ) -> None:
-        self.cells = cells
-        self.roles = tuple(roles)
-        self.numbers: dict[BandRole, NDArray[Any]] = {}
-        self.scalings: dict[BandRole, Scaling] = {}
-        self.states = np.full((len(self.roles), len(cells)), _NOTHING, dtype=np.uint8)
-        self.classes: NDArray[Any] | None = None
-        self.classed = np.zeros(len(cells), dtype=bool)
-        self._with_classes = with_classes
-
-    def take(self, block: xr.Dataset) -> None:
-        """Take over what a block has for the cells."""
-        here, inside = self._inside(block)
-        if not len(here):
-            return
-        for place, role in enumerate(self.roles):
-            if role.value not in block:
-                continue
-            band = block[role.value]
-            numbers = _flat(band)[inside]
-            self.numbers[role] = _put(self.numbers.get(role), len(self.cells), here, numbers)
-            self.scalings[role] = Scaling(
-                scale=float(band.attrs["scale"]), offset=float(band.attrs["offset"])
-            )
-            self.states[place, here] = _states(
-                numbers, nodata=band.attrs["nodata"], saturated=band.attrs["saturated"]
-            )
-        if self._with_classes and "quality" in block:
-            layer = block["quality"]
-            classes = _flat(layer)[inside]
-            self.classes = _put(self.classes, len(self.cells), here, classes)
-            self.classed[here] = ~_equal(classes, layer.attrs["nodata"])
-
-    def _inside(self, block: xr.Dataset) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-        """Return which of the cells a block holds, and where in the block they are."""
-        row0, col0 = int(block.attrs["row0"]), int(block.attrs["col0"])
-        grid_cols = int(block.attrs["grid_cols"])
-        rows, cols = block.sizes["y"], block.sizes["x"]
-        ends = np.array([row0 * grid_cols, (row0 + rows) * grid_cols], dtype=np.int64)
-        start, stop = np.searchsorted(self.cells, ends)
-        row, col = np.divmod(self.cells[start:stop], grid_cols)
-        held = np.flatnonzero((col >= col0) & (col < col0 + cols))
-        inside = (row[held] - row0) * cols + (col[held] - col0)
-        return held + start, inside
-
-    def reflectance(self, role: BandRole, at: NDArray[np.intp]) -> NDArray[np.float64]:
-        """Return reflectance in some of the cells; NaN where the band has no number."""
-        if role not in self.numbers:
-            return np.full(len(at), np.nan)
-        reflectance = self.scalings[role].reflectance(self.numbers[role][at])
-        reflectance[self.states[self.roles.index(role), at] != _NUMBER] = np.nan
-        return reflectance
-
-
-def _flat(variable: xr.DataArray) -> NDArray[Any]:
-    flat: NDArray[Any] = variable.transpose("y", "x").to_numpy().reshape(-1)
-    return flat
-
-
-def _put(
-    held: NDArray[Any] | None, size: int, here: NDArray[np.int64], numbers: NDArray[Any]
-) -> NDArray[Any]:
-    """Put numbers among those held, in a type that can hold both."""
-    if held is None:
-        held = np.zeros(size, dtype=numbers.dtype)
-    elif held.dtype != numbers.dtype:
-        held = held.astype(np.result_type(held, numbers))
-    held[here] = numbers
-    return held
-
-
-def _equal(numbers: NDArray[Any], mark: float | None) -> NDArray[np.bool_]:
-    """Tell where the stored numbers are a mark such as nodata."""
-    if mark is None:
-        return np.zeros(len(numbers), dtype=bool)
-    if not np.issubdtype(numbers.dtype, np.floating):
-        return np.asarray(numbers == float(mark))
-    # A mark written as a longer number is stored rounded, or as infinity.
-    with np.errstate(over="ignore"):
-        return np.asarray(numbers == np.float64(mark).astype(numbers.dtype))
-
-
-def _states(
-    numbers: NDArray[Any], *, nodata: float | None, saturated: float | None
-) -> NDArray[np.uint8]:
-    states = np.where(np.isfinite(numbers), _NUMBER, _NOTHING).astype(np.uint8)
-    states[_equal(numbers, saturated)] = _SATURATED
-    states[_equal(numbers, nodata)] = _NOTHING
-    return states
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -278,7 +210,7 @@ class _Batch:
         )
 
 
-def _batches(zones: Zones, scene: _Gathered) -> Iterator[_Batch]:
+def _batches(zones: Zones, scene: Gathered) -> Iterator[_Batch]:
     """Cut the zones into batches of some cells; a zone is never cut."""
     first = 0
     while first < len(zones):
@@ -305,10 +237,10 @@ class _Cells:
     water: NDArray[np.bool_] | None
 
 
-def _judge(batch: _Batch, scene: _Gathered, quality: QualityLayer | None, rule: str) -> _Cells:
+def _judge(batch: _Batch, scene: Gathered, quality: QualityLayer | None, rule: str) -> _Cells:
     states = scene.states[:, batch.at]
-    seen = (states == _NUMBER).any(axis=0)
-    saturated = ~seen & (states == _SATURATED).any(axis=0)
+    seen = (states == NUMBER).any(axis=0)
+    saturated = ~seen & (states == SATURATED).any(axis=0)
     if quality is None:
         lost: dict[Loss, NDArray[np.bool_] | None] = dict.fromkeys(Loss)
         return _Cells(
@@ -322,12 +254,18 @@ def _judge(batch: _Batch, scene: _Gathered, quality: QualityLayer | None, rule: 
     else:
         judged_seen = seen & scene.classed[batch.at]
         classes = scene.classes[batch.at]
-    judged = quality.judge(classes, quality.rules[rule])
-    usable = judged_seen & judged.usable
+    judged = quality.judge(classes, rule)
+    lost_any = np.any(list(judged.lost.values()), axis=0)
+    beside = judged_seen & scene.near_cloud[batch.at] & ~lost_any
     reasons = {loss: judged_seen & judged.lost[loss] for loss in Loss}
+    reasons[Loss.CLOUD] |= beside
     reasons[Loss.SATURATION] |= saturated
     reasons[Loss.NODATA] |= ~judged_seen & ~saturated
-    return _Cells(usable=usable, lost=dict(reasons), water=judged_seen & judged.water)
+    return _Cells(
+        usable=judged_seen & judged.usable & ~beside,
+        lost=dict(reasons),
+        water=judged_seen & judged.water,
+    )
 
 
 def _look_figures(batch: _Batch, cells: _Cells) -> list[NDArray[np.float64]]:
@@ -357,15 +295,41 @@ def _look_figures(batch: _Batch, cells: _Cells) -> list[NDArray[np.float64]]:
     ]
 
 
-def _measure_figures(
-    batch: _Batch, scene: _Gathered, *, roles: Sequence[BandRole], indices: Sequence[Index]
-) -> Iterator[NDArray[np.float64]]:
-    """Yield the figures of `INDEX_STATS` by index, then of `BAND_STATS` by band."""
-    bands = {role: scene.reflectance(role, batch.at) for role in roles}
-    for index in indices:
-        values = index.compute(**{role.value: bands[role] for role in index.roles})
-        summary = summarise(values.astype(np.float32), batch.weights, batch.indptr)
-        yield from (summary.mean, summary.sd, summary.min, summary.p10, summary.p50, summary.p90)
-        yield from (summary.max, summary.weight)
+class _Usable:
+    """The cells of a batch that one rule keeps, with their reflectance as it is asked for."""
+
+    def __init__(self, batch: _Batch, usable: NDArray[np.bool_], scene: Gathered) -> None:
+        self.which = usable
+        self.batch = batch.narrowed_to(usable)
+        self._scene = scene
+        self._bands: dict[BandRole, NDArray[np.float64]] = {}
+
+    def reflectance(self, role: BandRole) -> NDArray[np.float64]:
+        """Return a band's reflectance in these cells; NaN where it has no number."""
+        if role not in self._bands:
+            self._bands[role] = self._scene.reflectance(role, self.batch.at)
+        return self._bands[role]
+
+
+def _narrowed(batch: _Batch, judged: Mapping[str, _Cells], scene: Gathered) -> dict[str, _Usable]:
+    """Return the usable cells by rule; rules that keep the same cells share them."""
+    found: dict[str, _Usable] = {}
+    for rule, cells in judged.items():
+        same = (own for own in found.values() if np.array_equal(own.which, cells.usable))
+        found[rule] = next(same, None) or _Usable(batch, cells.usable, scene)
+    return found
+
+
+def _index_figures(index: Index, cells: _Usable) -> list[NDArray[np.float64]]:
+    """Return the figures of `INDEX_STATS`, each of shape (zones of the batch,)."""
+    values = index.compute(**{role.value: cells.reflectance(role) for role in index.roles})
+    summary = summarise(values.astype(np.float32), cells.batch.weights, cells.batch.indptr)
+    quantiles = (summary.p10, summary.p50, summary.p90)
+    return [summary.mean, summary.sd, summary.min, *quantiles, summary.max, summary.weight]
+
+
+def _band_figures(roles: Sequence[BandRole], cells: _Usable) -> Iterator[NDArray[np.float64]]:
+    """Yield the figures of `BAND_STATS` band by band."""
     for role in roles:
-        yield from mean_and_sd(bands[role], batch.weights, batch.indptr)
+        batch = cells.batch
+        yield from mean_and_sd(cells.reflectance(role), batch.weights, batch.indptr)

@@ -49,6 +49,13 @@ class Settings(BaseSettings):
     parcel_area_limit_ha: float = Field(
         default=100_000.0, gt=0, description="Largest area of one parcel, in hectares."
     )
+    cloud_buffer_cells: int = Field(
+        default=0,
+        ge=0,
+        le=20,
+        description="Cells of the quality layer around clouds that count as cloud too. Holds for "
+        "scenes measured from then on.",
+    )
     season_start_north: str = Field(
         default="10-01",
         pattern=r"^(0[1-9]|1[0-2])-(0[1-9]|1\d|2[0-8])$",

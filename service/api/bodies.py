@@ -1,4 +1,4 @@
-"""Reading bodies: streamed to disk under a cap while they are hashed, parsed item by item."""
+"""Reading bodies: streamed to disk under a cap while they are hashed; CSV row by row."""
 
 import base64
 import csv
@@ -9,18 +9,16 @@ from collections.abc import AsyncIterator, Callable, Iterator, Mapping
 from dataclasses import dataclass
 from typing import IO, Annotated, Any, Final
 
-import ijson
 from fastapi import Depends, Request
 from starlette.concurrency import run_in_threadpool
 
 from service.api.preferences import preferences_of
 from service.errors import RejectedInput
+from service.streams import BULK_LIMIT_ROWS, too_many
 
 MEBIBYTE: Final = 1024**2
 BULK_LIMIT_BYTES: Final = 64 * MEBIBYTE
 JSON_LIMIT_BYTES: Final = 2 * MEBIBYTE
-BULK_LIMIT_ROWS: Final = 100_000
-MAX_DEPTH: Final = 32
 _IN_MEMORY: Final = MEBIBYTE
 
 
@@ -106,79 +104,6 @@ def unsupported_media_type(*taken: str) -> RejectedInput:
     )
 
 
-def json_items(file: IO[bytes], prefix: str) -> Iterator[Any]:
-    """Yield the items of a JSON array, one in memory at a time.
-
-    Raises
-    ------
-    RejectedInput
-        The body is not JSON, or has more items than a call may bring.
-    """
-    for _ in _flat_events(file):
-        pass
-    file.seek(0)
-    try:
-        for number, item in enumerate(ijson.items(file, prefix, use_float=True)):
-            if number >= BULK_LIMIT_ROWS:
-                raise _too_many()
-            yield item
-    except (ijson.JSONError, UnicodeDecodeError, ValueError, OverflowError) as error:
-        raise RejectedInput("malformed-json", "The body is not valid JSON.") from error
-
-
-def json_array(file: IO[bytes]) -> Iterator[Any]:
-    """Yield the items of a body that must be a JSON array.
-
-    Raises
-    ------
-    RejectedInput
-        The body is not JSON, is no array, or has more items than a call may bring.
-    """
-    _, first, _ = next(_flat_events(file))
-    if first != "start_array":
-        raise RejectedInput.at("", "The body must be a JSON array of objects.")
-    file.seek(0)
-    yield from json_items(file, "item")
-
-
-def json_members(file: IO[bytes], *, but: str) -> dict[str, Any]:
-    """Return the plain members of a JSON object, without reading one member's array into memory.
-
-    Of that member only the kind of its value is told: ``start_array``, ``number`` …
-    """
-    found: dict[str, Any] = {}
-    name = None
-    for depth, kind, value in _flat_events(file):
-        if depth == 0 and kind not in ("start_map", "end_map"):
-            raise RejectedInput.at("", "The body must be a JSON object.")
-        if depth == 1 and kind == "map_key":
-            name = value
-            found[name] = None
-        elif depth == 1 and name is not None and not kind.startswith("end"):
-            found[name] = kind if name == but else value
-    file.seek(0)
-    return found
-
-
-def _flat_events(file: IO[bytes]) -> Iterator[tuple[int, str, Any]]:
-    """Yield a JSON body's events, each with the depth it stands at.
-
-    Paths to what is nested take time and memory by the square of the depth (a body of 100 kB
-    held a process up for minutes), so a body that is nested deeply is refused before they are
-    made.
-    """
-    depth = 0
-    try:
-        for kind, value in ijson.basic_parse(file, use_float=True):
-            depth -= kind in ("end_map", "end_array")
-            yield depth, kind, value
-            depth += kind in ("start_map", "start_array")
-            if depth > MAX_DEPTH:
-                raise RejectedInput.at("", f"JSON is taken up to {MAX_DEPTH} levels deep.")
-    except (ijson.JSONError, UnicodeDecodeError, ValueError, OverflowError) as error:
-        raise RejectedInput("malformed-json", "The body is not valid JSON.") from error
-
-
 def csv_rows(file: IO[bytes], columns: Mapping[str, bool]) -> Iterator[tuple[int, dict[str, Any]]]:
     """Yield the rows of a CSV body with the line each ends on; empty cells are left out.
 
@@ -200,7 +125,7 @@ def csv_rows(file: IO[bytes], columns: Mapping[str, bool]) -> Iterator[tuple[int
         _check_header(header, columns)
         for number, cells in enumerate(reader):
             if number >= BULK_LIMIT_ROWS:
-                raise _too_many()
+                raise too_many()
             if len(cells) != len(header):
                 raise RejectedInput.at(
                     f"/{number}",
@@ -225,9 +150,3 @@ def _check_header(header: list[str], columns: Mapping[str, bool]) -> None:
             f"{', '.join(name for name, needed in columns.items() if needed)}, and of "
             f"{', '.join(name for name, needed in columns.items() if not needed)} those you have.",
         )
-
-
-def _too_many() -> RejectedInput:
-    return RejectedInput.at(
-        "", f"A call takes up to {BULK_LIMIT_ROWS:,} items. Send them in several calls."
-    )

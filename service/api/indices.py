@@ -1,6 +1,6 @@
 """What is measured, and of which sensors."""
 
-from typing import Any
+from collections.abc import Iterable
 
 from pydantic import BaseModel
 
@@ -8,6 +8,7 @@ from service.api.context import Ctx, Reader
 from service.api.routes import contract_router
 from service.errors import NotFound
 from service.jobs.measuring import WATCHED
+from service.spectral.bands import Band
 from service.spectral.indices import INDICES, Index
 from service.spectral.sensors import SENSORS, Sensor
 
@@ -31,6 +32,7 @@ class IndexOut(BaseModel):
     note: str
     version: str
     watched: bool
+    quality_rule: str | None
 
 
 class IndicesOut(BaseModel):
@@ -39,16 +41,33 @@ class IndicesOut(BaseModel):
     indices: list[IndexOut]
 
 
+class BandOut(BaseModel):
+    """A band: `unit` is of what its numbers become; `valid_numbers` are the product's word."""
+
+    role: str
+    name: str
+    centre_um: float
+    width_um: float
+    gsd_m: float
+    unit: str
+    valid_numbers: tuple[int, int] | None
+    saturation_bit: int | None
+
+
 class SensorOut(BaseModel):
-    """A sensor profile."""
+    """A sensor profile; `platforms` has the bands of each, where platforms differ."""
 
     id: str
     title: str
-    bands: list[dict[str, Any]]
+    bands: list[BandOut]
+    platforms: dict[str, list[BandOut]]
+    needs_platform: bool
     nodata: float | None
     saturated: float | None
     quality_layer: str | None
     quality_rule: str | None
+    quality_rules: list[str]
+    saturation_layer: str | None
 
 
 class SensorsOut(BaseModel):
@@ -73,6 +92,7 @@ def _index_out(index: Index) -> IndexOut:
         note=index.note,
         version=index.version,
         watched=index in WATCHED,
+        quality_rule=index.quality_rule,
     )
 
 
@@ -100,18 +120,29 @@ def _sensor_out(sensor: Sensor) -> SensorOut:
     return SensorOut(
         id=sensor.id,
         title=sensor.title,
-        bands=[
-            {
-                "role": band.role.value,
-                "name": band.name,
-                "centre_um": band.centre_um,
-                "width_um": band.width_um,
-                "gsd_m": band.gsd_m,
-            }
-            for band in sensor.bands
-        ],
+        bands=_bands_out(sensor.bands),
+        platforms={name: _bands_out(bands) for name, bands in sensor.platforms.items()},
+        needs_platform=sensor.needs_platform,
         nodata=sensor.nodata,
         saturated=sensor.saturated,
         quality_layer=sensor.quality.id if sensor.quality else None,
         quality_rule=sensor.quality_rule if sensor.quality else None,
+        quality_rules=list(sensor.quality.rules) if sensor.quality else [],
+        saturation_layer=sensor.saturation.id if sensor.saturation else None,
     )
+
+
+def _bands_out(bands: Iterable[Band]) -> list[BandOut]:
+    return [
+        BandOut(
+            role=band.role.value,
+            name=band.name,
+            centre_um=band.centre_um,
+            width_um=band.width_um,
+            gsd_m=band.gsd_m,
+            unit=band.unit,
+            valid_numbers=band.valid_numbers,
+            saturation_bit=band.saturation_bit,
+        )
+        for band in bands
+    ]

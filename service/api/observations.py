@@ -10,12 +10,11 @@ from pydantic import BaseModel, BeforeValidator, Field, FiniteFloat
 from sqlalchemy.orm import Session
 from starlette.concurrency import run_in_threadpool
 
-from service.api.batches import Faults, model_of
+from service.api.batches import model_of
 from service.api.bodies import (
     Bulk,
     BulkBody,
     csv_rows,
-    json_array,
     unsupported_media_type,
 )
 from service.api.context import Caller, Context, Ctx, Ingester
@@ -26,13 +25,14 @@ from service.api.routes import contract_router, takes
 from service.api.scene_checks import check_acquired
 from service.api.wire import Instant, Ref, Sent, Text, joined
 from service.clock import now
-from service.errors import Fault, RejectedInput
+from service.errors import Fault, Faults, RejectedInput
 from service.spectral.indices import INDICES
 from service.spectral.roles import BandRole
 from service.store.imports import STATS, Figure, import_figures
 from service.store.judging import want_judging_of_scenes
 from service.store.parcels import boundaries_at, is_within, parcels_by_ref
 from service.store.sessions import serialise
+from service.streams import json_array
 
 router = contract_router("/observations", "series")
 
@@ -175,7 +175,7 @@ def _items(body: BulkBody, faults: Faults) -> Iterator[Any]:
     """Yield each row; of a CSV body the faults learn on which line it ends."""
     if body.media_type == "text/csv":
         for item, (line, cells) in enumerate(csv_rows(body.file, _COLUMNS)):
-            faults.lines[item] = line
+            faults.names[item] = f"Line {line}"
             yield cells
     elif body.media_type == "application/json":
         yield from json_array(body.file)

@@ -129,7 +129,7 @@ def _looks(
                 observed_at=look[measure].acquired_at,
                 scene=look[measure].scene_ref,
                 value=look[measure].of_measure(measure, "mean"),
-                valid_share=look[measure].of_look("valid_share"),
+                valid_share=look[measure].share_of(measure),
             )
             for parcel_id, look in newest_looks(session, ids, until=at, measures=[measure])
         }

@@ -13,16 +13,17 @@ from fastapi.responses import HTMLResponse, JSONResponse, Response
 from starlette.exceptions import HTTPException
 
 from service.errors import (
+    MAX_ERRORS,
     Conflict,
     FurrowlightError,
     NotAllowed,
     NotFound,
     RejectedInput,
     Unavailable,
+    pointer_of,
 )
 
 MEDIA_TYPE: Final = "application/problem+json"
-MAX_ERRORS: Final = 100
 _log = structlog.get_logger()
 
 _STATUS_BY_KIND: Final[Mapping[type[FurrowlightError], int]] = {
@@ -158,7 +159,7 @@ KINDS: Final[Mapping[str, Kind]] = {
     ),
     "wrong-quality-layer": Kind(
         title="Wrong quality layer",
-        page="The quality layer is not the one that the sensor's profile reads.",
+        page="The quality or saturation layer is not the one that the sensor's profile reads.",
     ),
     "no-index": Kind(
         title="No index can be measured",
@@ -348,11 +349,6 @@ def _fault(entry: Mapping[str, Any]) -> dict[str, str]:
     if place in ("query", "header", "path"):
         return {"parameter": str(rest[0]), "detail": detail}
     return {"pointer": pointer_of(rest), "detail": detail}
-
-
-def pointer_of(location: Sequence[str | int]) -> str:
-    """Return a location in a body as JSON pointer (RFC 6901)."""
-    return "".join("/" + str(step).replace("~", "~0").replace("/", "~1") for step in location)
 
 
 _CODES_BY_STATUS: Final = {

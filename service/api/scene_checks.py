@@ -10,11 +10,12 @@ from typing import Annotated, Any, Final, Literal
 from pydantic import AfterValidator, Field, FiniteFloat, model_validator
 
 from service.api.batches import model_of
-from service.api.uploads import QUALITY, SCENE, STACK, SceneReceived
+from service.api.uploads import SCENE, STACK, SceneReceived
 from service.api.wire import Instant, Ref, Sent, Text, written
 from service.errors import RejectedInput
 from service.jobs.measuring import WATCHED
-from service.jobs.sources import bands_of, scalings_of, scene_source
+from service.jobs.sources import band_roles, bands_of, scalings_of, scene_source, sensor_of
+from service.spectral.gathered import QUALITY, SATURATION
 from service.spectral.roles import BandRole
 from service.spectral.sensors import SENSORS, Sensor
 from service.store.scenes import FileSent, SceneSent
@@ -34,10 +35,10 @@ class ScalingSent(Sent):
 
 
 def _stack_role(role: str | None) -> str | None:
-    if role in (None, QUALITY, *BandRole):
+    if role in (None, QUALITY, SATURATION, *BandRole):
         return role
     raise ValueError(
-        f"send a band role ({', '.join(BandRole)}), quality, or null for a band to skip"
+        f"send a band role ({', '.join(BandRole)}), quality, saturation, or null for a band to skip"
     )
 
 
@@ -96,23 +97,23 @@ def checked_scene(received: SceneReceived, *, at: datetime) -> tuple[SceneSent, 
         Metadata or headers break a rule; the pointer begins with the part's name.
     """
     scene = _scene_part(received.scene)
-    sensor = SENSORS.get(scene.sensor)
-    if sensor is None:
+    if scene.sensor not in SENSORS:
         raise RejectedInput.at(
             f"/{SCENE}/sensor",
             f"No sensor profile has this id; there are {', '.join(SENSORS)}.",
             code="unknown-sensor",
         )
+    sensor = sensor_of(scene.sensor, {"platform": scene.platform})
     check_acquired(scene.acquired_at, f"/{SCENE}/acquired_at", at=at)
     files = {part: file.path for part, file in received.files.items()}
-    details, files = _with_one_nir(_details(scene), files)
+    details, files = _with_one_nir(_details(scene), files, sensor)
     headers = {part: inspect(path, pointer=f"/{part}") for part, path in files.items()}
     _check_parts(details, headers, sensor)
     check_together({f"/{part}": header for part, header in headers.items()})
     bands = bands_of(details, files)
-    scalings_of(details, bands, sensor=sensor.id)
+    scalings_of(details, bands, sensor=sensor)
     _check_feeds(bands)
-    grid = measuring_grid(scene_source(sensor.id, details, files))
+    grid = measuring_grid(scene_source(sensor, details, files))
     sizes = {file.path: file for file in received.files.values()}
     sent = SceneSent(
         ref=scene.ref,
@@ -168,13 +169,12 @@ def _details(scene: SceneIn) -> dict[str, Any]:
 
 
 def _with_one_nir(
-    details: dict[str, Any], files: dict[str, Path]
+    details: dict[str, Any], files: dict[str, Path], sensor: Sensor
 ) -> tuple[dict[str, Any], dict[str, Path]]:
     """Call the only near-infrared band ``nir``, except where the sensor has two."""
     roles = {*files, *(details.get(STACK) or [])}
-    has_two = {role.value for role in SENSORS[details["sensor"]].roles} >= {"nir", "nir08"}
-    fixed = bool(SENSORS[details["sensor"]].bands)
-    if "nir08" not in roles or "nir" in roles or (has_two and fixed):
+    has_two = bool(sensor.bands) and {BandRole.NIR, BandRole.NIR08} <= set(sensor.roles)
+    if "nir08" not in roles or "nir" in roles or has_two:
         return details, files
     renamed = {"nir" if part == "nir08" else part: path for part, path in files.items()}
     if STACK in details:
@@ -196,10 +196,11 @@ def _check_parts(details: Mapping[str, Any], headers: Mapping[str, Header], sens
                 "A part named by band role holds one band; send a file of several as `stack`, with "
                 "the role of each band in the metadata.",
             )
-    for role, (part, _) in bands_of(details, headers).items():
-        if role != QUALITY and BandRole(role) not in sensor.roles:
-            raise RejectedInput.at(f"/{part}", f"{sensor.title} has no band {role}.")
+    bands = bands_of(details, headers)
+    for role in band_roles(bands):
+        sensor.check_role(role, f"/{bands[role.value][0]}")
     _check_quality(details, headers, sensor)
+    _check_saturation(bands.get(SATURATION), headers, sensor)
 
 
 def _check_stack(details: Mapping[str, Any], headers: Mapping[str, Header]) -> None:
@@ -255,7 +256,29 @@ def _check_quality(
         raise RejectedInput.at(
             f"/{part}",
             f"A quality layer of {sensor.id} holds whole numbers ({sensor.quality.dtypes[0]}); "
-            "this file holds others. Send the product's own classification.",
+            f"this file holds others. Send the product's own ({sensor.quality.id.upper()}).",
+            code="wrong-quality-layer",
+        )
+
+
+def _check_saturation(
+    place: tuple[str, int] | None, headers: Mapping[str, Header], sensor: Sensor
+) -> None:
+    if place is None:
+        return
+    part, band = place
+    if sensor.saturation is None:
+        raise RejectedInput.at(
+            f"/{part}",
+            f"The profile {sensor.id} has no saturation layer to read this by. Leave it out.",
+            code="wrong-quality-layer",
+        )
+    if headers[part].dtypes[band - 1] not in sensor.saturation.dtypes:
+        raise RejectedInput.at(
+            f"/{part}",
+            f"A saturation layer of {sensor.id} holds whole numbers "
+            f"({sensor.saturation.dtypes[0]}); this file holds others. Send the product's own "
+            f"({sensor.saturation.id.upper()}).",
             code="wrong-quality-layer",
         )
 

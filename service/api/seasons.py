@@ -9,12 +9,11 @@ from fastapi.responses import Response
 from pydantic import BaseModel, Field
 from sqlalchemy.orm import Session
 
-from service.api.batches import Faults, model_of
+from service.api.batches import model_of
 from service.api.bodies import (
     Bulk,
     BulkBody,
     csv_rows,
-    json_items,
     unsupported_media_type,
 )
 from service.api.context import Caller, Context, Ctx, Reader, Steward
@@ -22,14 +21,20 @@ from service.api.once import OnceOnly, json_answer
 from service.api.routes import contract_router, takes
 from service.api.wire import Day, Ref, Sent, Text
 from service.clock import now
-from service.errors import Fault, RejectedInput
-from service.seasons.axis import SeasonStart, season_ending_in, season_holding
-from service.settings import Settings
+from service.errors import Fault, Faults, RejectedInput
+from service.seasons.axis import SeasonStart, season_ending_in
 from service.store.judging import want_judging_of_crops
 from service.store.parcels import boundaries_at, get_parcel, is_within, parcels_by_ref
-from service.store.seasons import SeasonSent, overlapping, put_season, seasons_of
+from service.store.seasons import (
+    SeasonSent,
+    overlapping,
+    put_season,
+    season_start,
+    seasons_of,
+)
 from service.store.sessions import serialise
 from service.store.tables import CropSeason, Parcel
+from service.streams import json_items
 
 router: APIRouter = contract_router("", "parcels")
 
@@ -80,20 +85,6 @@ class SeasonsPosted(BaseModel):
     unchanged: int
     rejected: int
     errors: list[dict[str, str]]
-
-
-def season_start(latitude: float, settings: Settings) -> SeasonStart:
-    """Return when the crop year begins at a latitude."""
-    text = settings.season_start_north if latitude >= 0 else settings.season_start_south
-    return SeasonStart.parse(text)
-
-
-def season_of_day(
-    parcel: Parcel, crop: str, day: date, latitude: float, settings: Settings
-) -> SeasonSent:
-    """Return the crop year that holds a day, as a season of a crop."""
-    first, last = season_holding(day, season_start(latitude, settings))
-    return SeasonSent(parcel=parcel, crop=crop, from_on=first, until_on=last)
 
 
 @router.get("/parcels/{ref}/seasons")
@@ -168,7 +159,7 @@ def _items(body: BulkBody, faults: Faults) -> Iterator[tuple[str, Any]]:
     """Yield each item of a body with its pointer; a single object has the empty one."""
     if body.media_type == "text/csv":
         for item, (line, cells) in enumerate(csv_rows(body.file, _COLUMNS)):
-            faults.lines[item] = line
+            faults.names[item] = f"Line {line}"
             yield f"/{item}", cells
     elif body.media_type == "application/json":
         is_array = body.file.read(1024).lstrip()[:1] == b"["
@@ -199,7 +190,7 @@ def _resolved(
             faults.add(item, Fault(pointer=f"{pointer}/parcel", detail=detail))
             continue
         latitude = (outlines[row.id].south + outlines[row.id].north) / 2
-        start = season_start(latitude, context.settings)
+        start = season_start(latitude, context.settings.season_starts)
         resolved = faults.collect(item, lambda: _interval(season, row, start, pointer))  # noqa: B023
         if resolved is not None:
             yield item, resolved, by_parcel.setdefault(row.id, [])

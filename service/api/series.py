@@ -130,8 +130,8 @@ def _looks(
     since, until = interval
     return [
         look
-        for look in one_per_pass(row for row in rows if row.places.has(measure))
-        if look.of_look("valid_share") >= min_valid
+        for look in one_per_pass((row for row in rows if row.places.has(measure)), measure)
+        if look.share_of(measure) >= min_valid
         and (since is None or look.acquired_at >= since)
         and (until is None or look.acquired_at < until)
     ]

@@ -15,13 +15,13 @@ from service.api.bodies import JSON_LIMIT_BYTES, stream_to, unsupported_media_ty
 from service.api.context import Ctx
 from service.errors import RejectedInput, Unavailable
 from service.settings import Settings
+from service.spectral.gathered import QUALITY, SATURATION
 from service.spectral.roles import BandRole
 from service.tiles.archive import Archive
 
 SCENE: Final = "scene"
 STACK: Final = "stack"
-QUALITY: Final = "quality"
-_PARTS: Final = frozenset({SCENE, STACK, QUALITY, *(role.value for role in BandRole)})
+_PARTS: Final = frozenset({SCENE, STACK, QUALITY, SATURATION, *(role.value for role in BandRole)})
 _HEADER_LIMIT: Final = 8_192
 
 
@@ -119,7 +119,7 @@ class _Receiver:
             raise RejectedInput(
                 "invalid-input",
                 "A part has a name that means nothing here. Parts are `scene`, then files named "
-                f"by band role ({', '.join(BandRole)}), `quality`, or one `stack`.",
+                f"by band role ({', '.join(BandRole)}), `quality`, `saturation`, or one `stack`.",
             )
         self._part.name = name
         if name == SCENE:

@@ -1,13 +1,13 @@
 """Wire types that several resources share."""
 
 import re
-import unicodedata
 from collections.abc import Iterable
 from datetime import UTC, date, datetime, timedelta
 from typing import Annotated, Any, Final
 
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, PlainSerializer
 
+from service.store.names import MAX_NAME, MAX_REF, MAX_TEXT, checked_ref, checked_text
 from service.store.parcels import Box
 
 _DAY: Final = re.compile(r"\d{4}-\d\d-\d\d", re.ASCII)
@@ -17,7 +17,6 @@ _RFC3339: Final = re.compile(
 _FIRST_YEAR: Final = 1000
 _LAST_YEAR: Final = 9998
 """A year away from what instants can hold, so that sums with them never leave it."""
-_SPREADSHEET_FORMULA: Final = ("=", "+", "-", "@")
 
 
 class Sent(BaseModel):
@@ -88,31 +87,13 @@ InstantOut = Annotated[datetime, PlainSerializer(_written, return_type=str)]
 """An instant as answered."""
 
 
-def checked_ref(ref: str) -> str:
-    """Return a ref if it is safe in URLs, logs and spreadsheets, and in Unicode form NFC."""
-    text = _checked_text(ref)
-    if "/" in text or text in (".", ".."):
-        raise ValueError("a ref contains no / and is neither . nor ..")
-    return text
-
-
-def _checked_text(text: str) -> str:
-    if not text.isprintable() or text != text.strip() or not text:
-        raise ValueError("send printable characters without a blank at either end")
-    if not unicodedata.is_normalized("NFC", text):
-        raise ValueError("send Unicode in its composed form (NFC)")
-    if text.startswith(_SPREADSHEET_FORMULA):
-        raise ValueError("do not begin with = + - or @: a spreadsheet would take it for a formula")
-    return text
-
-
-Ref = Annotated[str, Field(min_length=1, max_length=100), AfterValidator(checked_ref)]
+Ref = Annotated[str, Field(min_length=1, max_length=MAX_REF), AfterValidator(checked_ref)]
 """A client's own reference."""
 
-Text = Annotated[str, Field(min_length=1, max_length=100), AfterValidator(_checked_text)]
+Text = Annotated[str, Field(min_length=1, max_length=MAX_TEXT), AfterValidator(checked_text)]
 """A short line of text, such as a crop or a label."""
 
-LongText = Annotated[str, Field(min_length=1, max_length=200), AfterValidator(_checked_text)]
+LongText = Annotated[str, Field(min_length=1, max_length=MAX_NAME), AfterValidator(checked_text)]
 """A line of text, such as a name."""
 
 

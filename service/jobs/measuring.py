@@ -15,12 +15,13 @@ from service import __version__
 from service.clock import now
 from service.errors import RejectedInput
 from service.jobs.resources import Resources
-from service.jobs.sources import QUALITY, scene_source
+from service.jobs.sources import scene_source, sensor_of
 from service.observe import Observed, observe
+from service.spectral.gathered import QUALITY, SATURATION
 from service.spectral.indices import INDICES, Index
 from service.spectral.quality import QualityLayer
+from service.spectral.quality_bits import SaturationLayer
 from service.spectral.roles import BandRole
-from service.spectral.sensors import SENSORS
 from service.store.judging import want_judging_of_scenes
 from service.store.looks import observations_of_scene
 from service.store.observations import Measured, has_write, parcels_to_measure, record
@@ -41,6 +42,7 @@ class _Task:
     source: SceneSource
     parcels: list[tuple[int, int, bytes]]
     quality: QualityLayer | None
+    saturation: SaturationLayer | None
     rule: str
     must_keep: frozenset[int]
 
@@ -108,7 +110,7 @@ def _begin(work: Resources, scene_id: int, generation: int) -> Scene | None:
 
 def _task(work: Resources, scene: Scene) -> _Task | None:
     """Return what is to be measured, or None if this generation has its observations."""
-    sensor = SENSORS[scene.sensor]
+    sensor = sensor_of(scene.sensor, scene.details)
     has_quality = scene.details.get(QUALITY) != "none" and sensor.quality is not None
     with work.sessions.reading() as session:
         if has_write(session, scene, scene.generation):
@@ -116,11 +118,13 @@ def _task(work: Resources, scene: Scene) -> _Task | None:
         parcels = parcels_to_measure(session, scene)
         kept = frozenset(row.parcel_id for row in observations_of_scene(session, scene.id))
     files = {file.part: work.archive.path_of(file.digest) for file in scene.files}
-    source = scene_source(scene.sensor, scene.details, files)
+    buffer = work.settings.cloud_buffer_cells if has_quality else 0
+    source = scene_source(sensor, scene.details, files, cloud_buffer_cells=buffer)
     return _Task(
         source=source,
         parcels=parcels,
         quality=sensor.quality if has_quality else None,
+        saturation=sensor.saturation if source.saturation is not None else None,
         rule=sensor.quality_rule if has_quality else "none",
         must_keep=kept,
     )
@@ -135,7 +139,7 @@ def _measured(task: _Task) -> tuple[Measured, Observed, dict[str, float]]:
     roles = tuple(BandRole(band.role) for band in task.source.bands)
     blocks = read_blocks(task.source, zones.distinct_cells())
     observed = observe(
-        _checked(blocks, task.quality),
+        _checked(blocks, task),
         zones,
         roles=roles,
         indices=WATCHED,
@@ -160,6 +164,7 @@ def _measured(task: _Task) -> tuple[Measured, Observed, dict[str, float]]:
 def _kept(task: _Task, observed: Observed, keep: NDArray[np.bool_], grid: Grid) -> Measured:
     kept = [parcel for parcel, wanted in zip(task.parcels, keep, strict=True) if wanted]
     measured = [index for index in WATCHED if index.id in observed.measured]
+    buffer = task.source.cloud_buffer
     return Measured(
         parcel_ids=[parcel_id for parcel_id, _, _ in kept],
         boundary_ids=[boundary_id for _, boundary_id, _ in kept],
@@ -167,7 +172,10 @@ def _kept(task: _Task, observed: Observed, keep: NDArray[np.bool_], grid: Grid) 
         figures=observed.figures[keep],
         recipe={
             "rule": task.rule,
+            "rules": dict(observed.rules),
             "quality": task.quality.id if task.quality else None,
+            "saturation": task.saturation.id if task.saturation else None,
+            "cloud_buffer_cells": buffer.cells if buffer else 0,
             "formulas": {index.id: index.version for index in measured},
             "min_coverage": MIN_COVERAGE,
             "coarser_bands": "nearest, at the centre of the finer cell",
@@ -187,16 +195,17 @@ def _on_grid(wkb: bytes, grid: Grid) -> Any:
     return project(shapely.from_wkb(wkb), grid.crs)
 
 
-def _checked(blocks: Iterable[xr.Dataset], quality: QualityLayer | None) -> Iterator[xr.Dataset]:
-    """Pass the blocks on, as long as the quality layer has no class that it can't have."""
+def _checked(blocks: Iterable[xr.Dataset], task: _Task) -> Iterator[xr.Dataset]:
+    """Pass the blocks on, as long as their layers have no number that they can't have."""
     for block in blocks:
-        if quality is not None and quality.unknown(block[QUALITY].to_numpy()):
-            raise RejectedInput.at(
-                f"/{QUALITY}",
-                f"The quality layer holds values that are no class of {quality.id.upper()}. Send "
-                "the product's own classification, not resampled or recoded.",
-                code="wrong-quality-layer",
-            )
+        for part, layer in ((QUALITY, task.quality), (SATURATION, task.saturation)):
+            if layer is not None and layer.unknown(block[part].to_numpy()):
+                raise RejectedInput.at(
+                    f"/{part}",
+                    f"The {part} layer holds values that {layer.id.upper()} can't have. Send the "
+                    "product's own layer, not resampled or recoded.",
+                    code="wrong-quality-layer",
+                )
         yield block
 
 

@@ -104,6 +104,10 @@ class Index:
         What to mind.
     watched
         Whether it is measured unless something else is said.
+    quality_rule
+        The quality rule by which its cells are chosen, where the rule of the scene would
+        take away just those that it is about; None for the rule of the scene. A quality layer
+        without this rule is read by the rule of the scene.
     """
 
     id: str
@@ -120,6 +124,7 @@ class Index:
     source: str
     note: str = ""
     watched: bool
+    quality_rule: str | None = None
 
     @property
     def normalised(self) -> bool:
@@ -333,8 +338,13 @@ _CATALOGUE: Final = (
         rise="snow or ice; water is high too, but dark in near-infrared (below 0.11)",
         fall="snow gone",
         source="Hall, Riggs and Salomonson 1995, Remote Sensing of Environment 54, 127",
-        note="The same numbers as MNDWI: no evidence of its own beside it.",
+        note="The formula of MNDWI, over snow cells too, which the rule `clear` leaves out: "
+        "where there is no snow the same numbers, no evidence of its own.",
         watched=True,
+        # Under `clear` every cell called snow is lost, so the index of snow would be known
+        # only where there is none. `snow` alone keeps nothing else: it would be unknown over
+        # bare fields, and could not tell that the snow has gone.
+        quality_rule="surface",
     ),
     Index(
         id="bsi",

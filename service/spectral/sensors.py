@@ -1,42 +1,29 @@
 """Sensor profiles: the bands of a product, how its numbers scale, how its quality reads.
 
-A new sensor is one more entry in `SENSORS`.
+A new sensor is one more entry in `SENSORS`; its bands are a table in `bands`.
 """
 
 import re
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from typing import Final
 
 from service.errors import RejectedInput
+from service.spectral.bands import (
+    ETM_PLUS,
+    OLI,
+    SENTINEL_2A,
+    SENTINEL_2B,
+    SENTINEL_2C,
+    TM,
+    Band,
+)
 from service.spectral.quality import SCL, QualityLayer
+from service.spectral.quality_bits import QA_PIXEL, QA_RADSAT, SaturationLayer
 from service.spectral.roles import BandRole
 from service.spectral.scaling import Scaling
 
 UNKNOWN_OFFSET: Final = "unknown-offset"
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Band:
-    """One band of a sensor.
-
-    Attributes
-    ----------
-    role
-        What it measures.
-    name
-        The product's own name of the band.
-    centre_um, width_um
-        Centre wavelength and full width at half maximum, micrometres.
-    gsd_m
-        Ground sample distance of the product's own grid, metres.
-    """
-
-    role: BandRole
-    name: str
-    centre_um: float
-    width_um: float
-    gsd_m: float
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -49,10 +36,16 @@ class Sensor:
         Its name in requests and for people.
     bands
         Its bands; empty if a scene may bring any band role.
+    platforms
+        By platform the bands that it carries, where platforms differ; see `on`.
+    needs_platform
+        Whether the bands are not known before the platform is.
     quality
         Its quality layer, None if it has none.
     quality_rule
         The rule by which that layer is read unless something else is said.
+    saturation
+        Its layer of saturation bits, None if it has none.
     nodata, saturated
         Stored numbers that mean "nothing here" and "too bright", None if not fixed.
     published
@@ -62,8 +55,11 @@ class Sensor:
     id: str
     title: str
     bands: tuple[Band, ...]
+    platforms: Mapping[str, tuple[Band, ...]] = field(default_factory=dict)
+    needs_platform: bool = False
     quality: QualityLayer | None
     quality_rule: str = "clear"
+    saturation: SaturationLayer | None = None
     nodata: float | None
     saturated: float | None
     published: Callable[[str | None], Scaling]
@@ -72,6 +68,47 @@ class Sensor:
     def roles(self) -> tuple[BandRole, ...]:
         """The band roles that a scene of this sensor may bring."""
         return tuple(band.role for band in self.bands) or tuple(BandRole)
+
+    def on(self, platform: str | None) -> "Sensor":
+        """Return the profile as it is on one platform.
+
+        A platform that is not listed, or none, gives the profile itself, unless the bands
+        depend on it.
+
+        Raises
+        ------
+        RejectedInput
+            The platform has to be named, and is not one of the listed.
+        """
+        own = self.platforms.get(platform or "")
+        if own is not None:
+            title = f"{self.title} of {platform}" if self.needs_platform else self.title
+            return replace(self, title=title, bands=own, platforms={}, needs_platform=False)
+        if self.needs_platform:
+            raise RejectedInput.at(
+                "/scene/platform",
+                f"Which bands a scene of {self.id} has depends on its platform. Send `platform`: "
+                f"one of {', '.join(self.platforms)}.",
+            )
+        return self
+
+    def band(self, role: BandRole) -> Band | None:
+        """Return the band of a role, None if the profile doesn't describe it."""
+        return next((band for band in self.bands if band.role == role), None)
+
+    def check_role(self, role: BandRole, pointer: str) -> None:
+        """Refuse a band that the sensor hasn't got.
+
+        Raises
+        ------
+        RejectedInput
+            At `pointer`, with the bands that there are.
+        """
+        if role not in self.roles:
+            raise RejectedInput.at(
+                pointer,
+                f"{self.title} has no band {role}; it has {', '.join(self.roles)}. Leave it out.",
+            )
 
     def scaling(self, role: BandRole, *, processing_baseline: str | None) -> Scaling:
         """Return the published scaling of a band.
@@ -83,10 +120,10 @@ class Sensor:
             (``unknown-offset``), or the sensor has no such band. A scaling is never
             guessed.
         """
-        if role not in self.roles:
-            raise RejectedInput.at(
-                f"/{role}", f"{self.title} has no band of this role. Leave the part out."
-            )
+        self.check_role(role, f"/{role}")
+        band = self.band(role)
+        if band is not None and band.scaling is not None:
+            return band.scaling
         return self.published(processing_baseline)
 
 
@@ -137,32 +174,52 @@ def _must_be_sent(_baseline: str | None) -> Scaling:
     )
 
 
-# Centres and widths: ESA table of spectral responses, unit 2A; the widths from memory and
-# checked to 1 nm against a second list. Units 2B and 2C differ by up to 17 nm in a centre.
-# 65535 as the saturated number is from memory of the product's metadata.
+def _collection_2(_baseline: str | None) -> Scaling:
+    """Return the scaling of Landsat Collection 2 Level-2 surface reflectance.
+
+    Source: USGS, Landsat Collection 2 Level-2 scale factors; the same for all platforms and
+    processing versions.
+    """
+    return Scaling(scale=2.75e-5, offset=-0.2)
+
+
+# 65535 as the saturated number is from memory of the product's metadata. A scene that does
+# not name its unit has the bands of unit 2A; the centres of the others differ by up to 17 nm.
 SENTINEL_2_L2A: Final = Sensor(
     id="sentinel-2-l2a",
     title="Sentinel-2 Level-2A",
-    bands=tuple(
-        Band(role=role, name=name, centre_um=centre_um, width_um=width_um, gsd_m=gsd_m)
-        for role, name, centre_um, width_um, gsd_m in (
-            (BandRole.COASTAL, "B01", 0.4427, 0.020, 60.0),
-            (BandRole.BLUE, "B02", 0.4927, 0.065, 10.0),
-            (BandRole.GREEN, "B03", 0.5598, 0.035, 10.0),
-            (BandRole.RED, "B04", 0.6646, 0.030, 10.0),
-            (BandRole.REDEDGE071, "B05", 0.7041, 0.014, 20.0),
-            (BandRole.REDEDGE075, "B06", 0.7405, 0.014, 20.0),
-            (BandRole.REDEDGE078, "B07", 0.7828, 0.019, 20.0),
-            (BandRole.NIR, "B08", 0.8328, 0.105, 10.0),
-            (BandRole.NIR08, "B8A", 0.8647, 0.021, 20.0),
-            (BandRole.SWIR16, "B11", 1.6137, 0.090, 20.0),
-            (BandRole.SWIR22, "B12", 2.2024, 0.174, 20.0),
-        )
-    ),
+    bands=SENTINEL_2A,
+    platforms={
+        "sentinel-2a": SENTINEL_2A,
+        "sentinel-2b": SENTINEL_2B,
+        "sentinel-2c": SENTINEL_2C,
+    },
     quality=SCL,
     nodata=0.0,
     saturated=65535.0,
     published=_by_baseline,
+)
+
+# The newest instrument's bands stand here for the list of sensors; a scene is never read by
+# them before its platform is known. A surface reflectance has no number of its own for
+# saturation, the product tells it by bits.
+LANDSAT_C2_L2: Final = Sensor(
+    id="landsat-c2-l2",
+    title="Landsat Collection 2 Level-2",
+    bands=OLI,
+    platforms={
+        "landsat-4": TM,
+        "landsat-5": TM,
+        "landsat-7": ETM_PLUS,
+        "landsat-8": OLI,
+        "landsat-9": OLI,
+    },
+    needs_platform=True,
+    quality=QA_PIXEL,
+    saturation=QA_RADSAT,
+    nodata=0.0,
+    saturated=None,
+    published=_collection_2,
 )
 
 GENERIC: Final = Sensor(
@@ -175,4 +232,6 @@ GENERIC: Final = Sensor(
     published=_must_be_sent,
 )
 
-SENSORS: Final[Mapping[str, Sensor]] = {sensor.id: sensor for sensor in (SENTINEL_2_L2A, GENERIC)}
+SENSORS: Final[Mapping[str, Sensor]] = {
+    sensor.id: sensor for sensor in (SENTINEL_2_L2A, LANDSAT_C2_L2, GENERIC)
+}

@@ -4,7 +4,7 @@ Here is the only place that unpacks an observation.
 """
 
 from collections.abc import Iterable, Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import UTC, datetime, timedelta
 from itertools import groupby
 from typing import Any, Final
@@ -33,11 +33,20 @@ def bucket_of(acquired_at: datetime) -> int:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Places:
-    """Where each figure stands in the observations of one layout."""
+    """Where each figure stands in the observations of one layout.
+
+    `rule` is the quality rule of the look, `own_rules` those of measures that are not read
+    by it.
+    """
 
     by_column: Mapping[str, int]
     rule: str
     harmonised: bool
+    own_rules: Mapping[str, str] = field(default_factory=dict)
+
+    def rule_of(self, measure: str) -> str:
+        """Return the quality rule that a measure was read by."""
+        return self.own_rules.get(measure, self.rule)
 
     def has(self, measure: str) -> bool:
         """Whether observations of this layout hold a measure."""
@@ -77,10 +86,16 @@ class Observed:
         """Return a figure of the look itself, such as its valid share."""
         return self.figure(f"{self.places.rule}.{figure}") or 0.0
 
+    def share_of(self, measure: str | None) -> float:
+        """Return the valid share by the rule of a measure, by that of the look without one."""
+        if measure is None:
+            return self.of_look("valid_share")
+        return self.figure(f"{self.places.rule_of(measure)}.valid_share") or 0.0
+
     def of_measure(self, measure: str, stat: str) -> float | None:
         """Return a statistic of a measure; a band's pixels are the look's."""
         if stat == "valid_share":
-            return self.of_look("valid_share")
+            return self.share_of(measure)
         if stat == "pixels" and f"{measure}.pixels" not in self.places.by_column:
             return self.figure(f"{self.places.rule}.pixels")
         return self.figure(f"{measure}.{stat}")
@@ -192,16 +207,17 @@ def _places(layout: Layout) -> Places:
         by_column={column: place for place, column in enumerate(layout.columns)},
         rule=layout.recipe["rule"],
         harmonised=bool(layout.recipe.get("harmonised")),
+        own_rules=layout.recipe.get("rules", {}),
     )
 
 
-def one_per_pass(rows: Iterable[Observed]) -> list[Observed]:
+def one_per_pass(rows: Iterable[Observed], measure: str | None = None) -> list[Observed]:
     """Choose among one parcel's observations, in order of acquisition.
 
     Of each scene the newest write; of each pass (scenes of one platform within 10 minutes of
-    the first) the one with the larger valid share, then the newer processing, then, whichever
-    came first, by ref. The others are duplicates, which step in when the chosen one is
-    withdrawn.
+    the first) the one with the larger valid share (by the rule of a measure, if one is
+    named), then the newer processing, then, whichever came first, by ref. The others are
+    duplicates, which step in when the chosen one is withdrawn.
     """
     of_scene: dict[int, Observed] = {}
     for row in rows:
@@ -211,7 +227,9 @@ def one_per_pass(rows: Iterable[Observed]) -> list[Observed]:
     chosen: list[Observed] = []
     by_platform = sorted(of_scene.values(), key=lambda row: (row.platform, row.acquired_at))
     for _, of_platform in groupby(by_platform, key=lambda row: row.platform):
-        chosen += [max(one_pass, key=_worth) for one_pass in _passes(of_platform)]
+        chosen += [
+            max(one_pass, key=lambda row: _worth(row, measure)) for one_pass in _passes(of_platform)
+        ]
     return sorted(chosen, key=lambda row: (row.acquired_at, row.write_id))
 
 
@@ -225,8 +243,8 @@ def _passes(rows: Iterable[Observed]) -> list[list[Observed]]:
     return passes
 
 
-def _worth(row: Observed) -> tuple[float, str, str]:
-    return row.of_look("valid_share"), row.processing_baseline, row.scene_ref
+def _worth(row: Observed, measure: str | None) -> tuple[float, str, str]:
+    return row.share_of(measure), row.processing_baseline, row.scene_ref
 
 
 def newest_looks(
@@ -308,12 +326,15 @@ def _newest(rows: Sequence[Observed], measures: Sequence[str] | None) -> dict[st
     """Return the newest look by measure among one parcel's observations."""
     layouts = {id(row.places): row.places for row in rows}
     found: dict[str, Observed] = {}
-    chosen: dict[frozenset[int], Observed | None] = {}
+    # Measures that the same layouts hold, read by the same rules, have the same look.
+    chosen: dict[frozenset[tuple[int, str]], Observed | None] = {}
     for measure in measures if measures is not None else _measures(layouts.values()):
-        fitting = frozenset(key for key, places in layouts.items() if places.has(measure))
+        fitting = frozenset(
+            (key, places.rule_of(measure)) for key, places in layouts.items() if places.has(measure)
+        )
         if fitting not in chosen:
-            looks = one_per_pass(row for row in rows if id(row.places) in fitting)
-            seen = [row for row in looks if row.of_look("valid_share") >= LOOK_SHARE]
+            looks = one_per_pass((row for row in rows if row.places.has(measure)), measure)
+            seen = [row for row in looks if row.share_of(measure) >= LOOK_SHARE]
             chosen[fitting] = seen[-1] if seen else None
         if (look := chosen[fitting]) is not None:
             found[measure] = look

@@ -216,17 +216,24 @@ def _advance_latest(
 ) -> None:
     """Put this write's looks where the newest ones stood, unless those are newer."""
     places = {column: place for place, column in enumerate(measured.columns)}
-    share_place = places[f"{measured.recipe['rule']}.valid_share"]
-    is_look = figures[:, share_place] >= np.float32(LOOK_SHARE)
-    advance_latest(
-        session,
-        acquired_at=scene.acquired_at,
-        write_id=write.id,
-        parcel_ids=parcel_ids[is_look],
-        figures=figures[is_look],
-        places={c.removesuffix(".mean"): p for c, p in places.items() if c.endswith(".mean")},
-        share_place=share_place,
-    )
+    rule, own_rules = measured.recipe["rule"], measured.recipe.get("rules", {})
+    by_rule: dict[str, dict[str, int]] = {}
+    for column, place in places.items():
+        measure, _, stat = column.partition(".")
+        if stat == "mean":
+            by_rule.setdefault(own_rules.get(measure, rule), {})[measure] = place
+    for each, means in by_rule.items():
+        share_place = places[f"{each}.valid_share"]
+        is_look = figures[:, share_place] >= np.float32(LOOK_SHARE)
+        advance_latest(
+            session,
+            acquired_at=scene.acquired_at,
+            write_id=write.id,
+            parcel_ids=parcel_ids[is_look],
+            figures=figures[is_look],
+            places=means,
+            share_place=share_place,
+        )
 
 
 def rebuild_latest(session: Session, parcel_ids: Sequence[int]) -> None:
@@ -246,7 +253,7 @@ def rebuild_latest(session: Session, parcel_ids: Sequence[int]) -> None:
                     look.acquired_at,
                     look.write_id,
                     look.of_measure(measure, "mean"),
-                    look.of_look("valid_share"),
+                    look.share_of(measure),
                 )
                 for parcel_id, looks in newest_looks(session, some)
                 for measure, look in looks.items()

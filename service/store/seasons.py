@@ -7,6 +7,7 @@ from datetime import date
 from sqlalchemy import select
 from sqlalchemy.orm import Session
 
+from service.seasons.axis import SeasonStart, season_holding
 from service.store.batches import in_batches
 from service.store.tables import CropSeason, Parcel
 
@@ -21,6 +22,20 @@ class SeasonSent:
     until_on: date
     sown_on: date | None = None
     harvested_on: date | None = None
+
+
+def season_start(latitude: float, starts: tuple[str, str]) -> SeasonStart:
+    """Return when the crop year begins at a latitude; `starts` are those north and south."""
+    north, south = starts
+    return SeasonStart.parse(north if latitude >= 0 else south)
+
+
+def season_of_day(
+    parcel: Parcel, crop: str, day: date, latitude: float, starts: tuple[str, str]
+) -> SeasonSent:
+    """Return the crop year that holds a day, as a season of a crop."""
+    first, last = season_holding(day, season_start(latitude, starts))
+    return SeasonSent(parcel=parcel, crop=crop, from_on=first, until_on=last)
 
 
 def seasons_of(session: Session, parcel_ids: Iterable[int]) -> dict[int, list[CropSeason]]:

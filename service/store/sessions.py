@@ -46,6 +46,12 @@ class Sessions:
         with self._write.begin() as session:
             yield session
 
+    @contextmanager
+    def trying(self) -> Iterator[Session]:
+        """Open a session that works as a writing one does, and is rolled back at the end."""
+        with self._write() as session:
+            yield session
+
 
 def open_engine(url: str) -> Engine:
     """Return an engine with this service's rules: on SQLite WAL, full sync, real transactions."""

@@ -3,6 +3,7 @@
 import math
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -82,6 +83,48 @@ def wanted_areas(grid: Grid, part: tuple[int, int], cells: NDArray[np.int64]) ->
                     col0=int((cells[first[held]] % cols).min()),
                     col1=int((cells[last[held] - 1] % cols).max()) + 1,
                 )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Places:
+    """Where the cells of an area are on another grid.
+
+    Attributes
+    ----------
+    inside
+        Index of the area's cells that have their centre on the other grid.
+    rows, cols
+        The other grid's rows and columns at their centres.
+    window
+        The smallest area of the other grid that has them all, None if there are none.
+    """
+
+    inside: tuple[NDArray[Any], ...]
+    rows: NDArray[np.int64]
+    cols: NDArray[np.int64]
+    window: Area | None
+
+    def nearest(self, within: Area) -> tuple[NDArray[Any], ...]:
+        """Return the index of the places in an array of an area of the other grid."""
+        return np.ix_(self.rows - within.row0, self.cols - within.col0)
+
+
+def places_on(theirs: Grid, grid: Grid, area: Area) -> Places:
+    """Return where the cells of an area of one grid are on another, by their centres."""
+    rows = theirs.rows_at(grid.centre_ys(area.row0, area.row1))
+    cols = theirs.cols_at(grid.centre_xs(area.col0, area.col1))
+    has_row = (rows >= 0) & (rows < theirs.shape[0])
+    has_col = (cols >= 0) & (cols < theirs.shape[1])
+    rows, cols = rows[has_row], cols[has_col]
+    window = None
+    if rows.size and cols.size:
+        window = Area(
+            row0=int(rows.min()),
+            row1=int(rows.max()) + 1,
+            col0=int(cols.min()),
+            col1=int(cols.max()) + 1,
+        )
+    return Places(inside=np.ix_(has_row, has_col), rows=rows, cols=cols, window=window)
 
 
 def _common_shape(shapes: Iterable[tuple[int, int]], grid: Grid) -> tuple[int, int]:

@@ -8,7 +8,7 @@ number leaves here that is not in a file. Scaling is left to the reader of the b
 import math
 from collections.abc import Iterable, Iterator
 from contextlib import ExitStack, contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 from pathlib import Path
 from typing import Any, Final, Literal
@@ -22,10 +22,12 @@ from rasterio.errors import RasterioError
 from rasterio.windows import Window
 
 from service.errors import RejectedInput
+from service.spectral.gathered import NEAR_CLOUD
 from service.spectral.roles import BandRole
 from service.spectral.scaling import Scaling
+from service.tiles.buffering import CloudBuffer
 from service.tiles.intake import Header, check_together, inspect, open_raster
-from service.tiles.parts import Area, part_shape, wanted_areas
+from service.tiles.parts import Area, part_shape, places_on, wanted_areas
 from service.zonal.grid import Grid
 
 BLOCK_BYTES: Final = 64 * 2**20
@@ -40,32 +42,35 @@ Numbers = NDArray[Any]
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class BandSource:
-    """Where the numbers of one band or of the quality layer are.
+    """Where the numbers of one band, of the quality or of the saturation layer are.
 
     Attributes
     ----------
     role
-        What the band measures, or ``quality``.
+        What the band measures, or ``quality`` or ``saturation``.
     path
         The file, in the archive.
     scaling
-        How numbers become reflectance; None for the quality layer only.
+        How numbers become reflectance; None for layers that are no band.
     band
         Its place in the file, from 1.
     nodata
         The number that stands for "no data".
     saturated
         The number that stands for "saturated".
+    saturation_bit
+        The band's bit in the scene's saturation layer.
     part
         JSON pointer of the part that the file came in; by default that of the role.
     """
 
-    role: BandRole | Literal["quality"]
+    role: BandRole | Literal["quality", "saturation"]
     path: Path
     scaling: Scaling | None
     band: int = 1
     nodata: float | None = None
     saturated: float | None = None
+    saturation_bit: int | None = None
     part: str | None = None
 
     @property
@@ -85,21 +90,32 @@ class SceneSource:
     quality
         The quality layer, if the scene has one; it has a nodata class, which stands for
         what lies outside the layer.
+    saturation
+        The layer of saturation bits, if the scene has one; it has a number that stands for
+        what lies outside it.
+    cloud_buffer
+        Which cells count as near cloud by the quality layer, None for no such thing.
     """
 
     bands: tuple[BandSource, ...]
     quality: BandSource | None = None
+    saturation: BandSource | None = None
+    cloud_buffer: CloudBuffer | None = None
 
     def __post_init__(self) -> None:
         if not self.bands or any(band.scaling is None for band in self.bands):
             raise ValueError("a scene needs bands, each with its scaling")
-        if self.quality is not None and self.quality.nodata is None:
-            raise ValueError("a quality layer needs a nodata class")
+        if any(layer.nodata is None for layer in self._beside_bands):
+            raise ValueError("a quality or saturation layer needs a nodata class")
 
     @property
     def layers(self) -> tuple[BandSource, ...]:
-        """Bands and quality layer, in this order."""
-        return self.bands if self.quality is None else (*self.bands, self.quality)
+        """Bands, quality layer and saturation layer, in this order."""
+        return (*self.bands, *self._beside_bands)
+
+    @property
+    def _beside_bands(self) -> tuple[BandSource, ...]:
+        return tuple(layer for layer in (self.quality, self.saturation) if layer is not None)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -121,6 +137,16 @@ class _Scene:
 
     files: tuple[_File, ...]
     grid: Grid
+    cloud_buffer: CloudBuffer | None
+
+    @property
+    def quality(self) -> _File | None:
+        """The quality layer's file, with that layer only."""
+        for file in self.files:
+            for layer in file.layers:
+                if layer.role == "quality":
+                    return replace(file, layers=(layer,))
+        return None
 
 
 def measuring_grid(source: SceneSource) -> Grid:
@@ -147,11 +173,13 @@ def read_blocks(
     xr.Dataset
         A rectangle of the measuring grid with dimensions (y, x), cell centres as
         coordinates in metres and attributes ``row0``, ``col0`` (its first row and column
-        on the grid) and ``grid_cols``. One variable for each band role, and ``quality``:
-        the file's numbers in its type, with attributes ``scale``, ``offset``, ``nodata``,
-        ``saturated``. Where a band has no cell stands its nodata number; a band without
-        one comes as float with NaN. Rectangles do not overlap, each takes at most about
-        `block_bytes`, and together they hold every wanted cell once.
+        on the grid) and ``grid_cols``. One variable for each band role, ``quality`` and
+        ``saturation``: the file's numbers in its type, with attributes ``scale``,
+        ``offset``, ``nodata``, ``saturated`` and, if there is one, ``saturation_bit``;
+        and, where a cloud buffer is asked for, the boolean ``near_cloud``. Where a band has
+        no cell stands its nodata number; a band without one comes as float with NaN.
+        Rectangles do not overlap, each takes at most about `block_bytes`, and together they
+        hold every wanted cell once.
 
     Raises
     ------
@@ -203,7 +231,7 @@ def _opened(source: SceneSource) -> Iterator[_Scene]:
             for path, header in headers.items()
         ]
         grid = _finest(headers[band.path].grid for band in source.bands)
-        yield _Scene(files=tuple(files), grid=grid)
+        yield _Scene(files=tuple(files), grid=grid, cloud_buffer=source.cloud_buffer)
 
 
 def _check_bands(source: SceneSource, headers: dict[Path, Header]) -> None:
@@ -218,6 +246,9 @@ def _check_bands(source: SceneSource, headers: dict[Path, Header]) -> None:
 
 def _read_area(scene: _Scene, area: Area) -> xr.Dataset:
     variables = {}
+    if scene.cloud_buffer is not None and scene.quality is not None:
+        near = _near_cloud(scene.cloud_buffer, scene.quality, scene.grid, area)
+        variables[NEAR_CLOUD] = xr.Variable(("y", "x"), near)
     for file in scene.files:
         numbers = _numbers(file, scene.grid, area)
         for layer in file.layers:
@@ -254,6 +285,8 @@ def _attributes(layer: BandSource) -> dict[str, float | None]:
     attributes: dict[str, float | None] = {"nodata": layer.nodata, "saturated": layer.saturated}
     if layer.scaling is not None:
         attributes |= {"scale": layer.scaling.scale, "offset": layer.scaling.offset}
+    if layer.saturation_bit is not None:
+        attributes["saturation_bit"] = layer.saturation_bit
     return attributes
 
 
@@ -261,24 +294,23 @@ def _numbers(file: _File, grid: Grid, area: Area) -> list[Numbers]:
     """Return the numbers of each layer of a file on the area's cells, shape (rows, cols)."""
     if file.header.grid == grid:
         return list(_read(file, area))
-    theirs = file.header.grid
-    rows = theirs.rows_at(grid.centre_ys(area.row0, area.row1))
-    cols = theirs.cols_at(grid.centre_xs(area.col0, area.col1))
-    has_row = (rows >= 0) & (rows < theirs.shape[0])
-    has_col = (cols >= 0) & (cols < theirs.shape[1])
-    taken = [_empty(file, layer, grid, (rows.size, cols.size)) for layer in file.layers]
-    if has_row.any() and has_col.any():
-        rows, cols = rows[has_row], cols[has_col]
-        window = Area(
-            row0=int(rows.min()),
-            row1=int(rows.max()) + 1,
-            col0=int(cols.min()),
-            col1=int(cols.max()) + 1,
-        )
-        nearest = np.ix_(rows - window.row0, cols - window.col0)
-        for into, found in zip(taken, _read(file, window), strict=True):
-            into[np.ix_(has_row, has_col)] = found[nearest]
+    at = places_on(file.header.grid, grid, area)
+    shape = (area.row1 - area.row0, area.col1 - area.col0)
+    taken = [_empty(file, layer, grid, shape) for layer in file.layers]
+    if at.window is not None:
+        for into, found in zip(taken, _read(file, at.window), strict=True):
+            into[at.inside] = found[at.nearest(at.window)]
     return taken
+
+
+def _near_cloud(buffer: CloudBuffer, quality: _File, grid: Grid, area: Area) -> NDArray[np.bool_]:
+    """Return which of the area's cells lie in a cell of the quality layer that is near cloud."""
+    at = places_on(quality.header.grid, grid, area)
+    near = np.zeros((area.row1 - area.row0, area.col1 - area.col0), dtype=np.bool_)
+    if at.window is not None:
+        around = buffer.around(at.window, quality.header.grid.shape)
+        near[at.inside] = buffer.near(_read(quality, around)[0])[at.nearest(around)]
+    return near
 
 
 def _empty(file: _File, layer: BandSource, grid: Grid, shape: tuple[int, int]) -> Numbers:

@@ -75,6 +75,66 @@ def outline_from_geojson(
         area or too much, or crosses itself; the error says where.
     """
     shape = shapely.from_geojson(json.dumps(_checked(geometry, pointer)))
+    return _outline(shape, pointer, repair=repair, area_limit_ha=area_limit_ha)
+
+
+def outline_from_shape(
+    shape: BaseGeometry, *, pointer: str, repair: bool, area_limit_ha: float
+) -> Outline:
+    """Return the outline that a geometry draws, by the same rules as one sent as GeoJSON.
+
+    Parameters
+    ----------
+    shape
+        Any geometry, degrees, longitude first; heights are dropped.
+    pointer, repair, area_limit_ha
+        As for `outline_from_geojson`.
+
+    Raises
+    ------
+    RejectedInput
+        As `outline_from_geojson` does.
+    """
+    if shape.geom_type not in _POLYGONAL or shape.is_empty:
+        raise not_polygonal(pointer)
+    check_vertices(shapely.get_num_coordinates(shape), pointer)
+    positions = shapely.get_coordinates(shape)
+    if not np.isfinite(positions).all() or not _is_within_wgs84(positions):
+        raise _outside_wgs84(pointer)
+    return _outline(shapely.force_2d(shape), pointer, repair=repair, area_limit_ha=area_limit_ha)
+
+
+def check_vertices(count: int, pointer: str) -> None:
+    """Refuse an outline of too many vertices, best before they are read."""
+    if count > MAX_VERTICES:
+        raise RejectedInput.at(
+            pointer,
+            f"The outline has more than {MAX_VERTICES:,} vertices. Simplify it; a tenth of a "
+            "cell (1 m) is finer than any scene resolves.",
+            code="invalid-geometry",
+        )
+
+
+def not_polygonal(pointer: str) -> RejectedInput:
+    """Return the error for a geometry that is no polygon or multipolygon."""
+    return RejectedInput.at(
+        pointer,
+        "A parcel needs a geometry of type Polygon or MultiPolygon; points, lines and "
+        "collections have no area to measure.",
+        code="invalid-geometry",
+    )
+
+
+def broken_ring(pointer: str) -> RejectedInput:
+    """Return the error for a ring that is too short or not closed."""
+    return RejectedInput.at(
+        pointer,
+        "A ring needs at least four positions, the last equal to the first (RFC 7946).",
+        code="invalid-geometry",
+    )
+
+
+def _outline(shape: BaseGeometry, pointer: str, *, repair: bool, area_limit_ha: float) -> Outline:
     was_repaired = False
     if not shape.is_valid:
         shape = _repaired(shape, pointer, repair=repair)
@@ -103,12 +163,7 @@ def _checked(geometry: object, pointer: str) -> dict[str, Any]:
     kind = geometry.get("type") if isinstance(geometry, Mapping) else None
     depth = _POLYGONAL.get(kind) if isinstance(kind, str) else None
     if depth is None or not isinstance(geometry, Mapping):
-        raise RejectedInput.at(
-            pointer,
-            "A parcel needs a geometry of type Polygon or MultiPolygon; points, lines and "
-            "collections have no area to measure.",
-            code="invalid-geometry",
-        )
+        raise not_polygonal(pointer)
     if not geometry.keys() <= {"type", "coordinates", "bbox"}:
         raise RejectedInput.at(
             pointer,
@@ -117,13 +172,7 @@ def _checked(geometry: object, pointer: str) -> dict[str, Any]:
             code="invalid-geometry",
         )
     rings = _rings(geometry.get("coordinates"), depth, f"{pointer}/coordinates")
-    if sum(len(ring) for ring, _ in rings) > MAX_VERTICES:
-        raise RejectedInput.at(
-            pointer,
-            f"The outline has more than {MAX_VERTICES:,} vertices. Simplify it; a tenth of a "
-            "cell (1 m) is finer than any scene resolves.",
-            code="invalid-geometry",
-        )
+    check_vertices(sum(len(ring) for ring, _ in rings), pointer)
     for ring, where in rings:
         _check_ring(ring, where)
     return {"type": kind, "coordinates": _flat(geometry["coordinates"])}
@@ -160,20 +209,23 @@ def _check_ring(ring: Sequence[Any], pointer: str) -> None:
             code="invalid-geometry",
         )
     if len(ring) < 4 or not np.array_equal(positions[0], positions[-1]):
-        raise RejectedInput.at(
-            pointer,
-            "A ring needs at least four positions, the last equal to the first (RFC 7946).",
-            code="invalid-geometry",
-        )
+        raise broken_ring(pointer)
+    if not _is_within_wgs84(positions):
+        raise _outside_wgs84(pointer)
+
+
+def _is_within_wgs84(positions: NDArray[np.float64]) -> bool:
     with np.errstate(invalid="ignore"):
-        is_inside = (np.abs(positions) <= [180.0, 90.0]).all()
-    if not is_inside:
-        raise RejectedInput.at(
-            pointer,
-            "Positions must lie within longitude -180 to 180 and latitude -90 to 90: send "
-            "WGS 84 degrees, longitude first.",
-            code="invalid-geometry",
-        )
+        return bool((np.abs(positions) <= [180.0, 90.0]).all())
+
+
+def _outside_wgs84(pointer: str) -> RejectedInput:
+    return RejectedInput.at(
+        pointer,
+        "Positions must lie within longitude -180 to 180 and latitude -90 to 90: send "
+        "WGS 84 degrees, longitude first.",
+        code="invalid-geometry",
+    )
 
 
 def _positions(ring: Sequence[Any]) -> NDArray[np.float64] | None:

@@ -34,7 +34,12 @@ def table(name: str) -> list[Row]:
 REFERENCE = {row["id"].lower(): row for row in table("indices.csv")}
 CHECKS = table("checks.csv")
 SURFACES = [row for row in CHECKS if row["group"] == "index"]
-SCALINGS = {row["id"]: row for row in CHECKS if row["group"] == "scaling"}
+SCALINGS = {
+    row["id"]: row for row in CHECKS if row["group"] == "scaling" and row["id"].startswith("s2_")
+}
+LANDSAT_SCALINGS = [
+    row for row in CHECKS if row["group"] == "scaling" and row["id"].startswith("ls_")
+]
 CLASSES = [row for row in CHECKS if row["group"] == "scl"]
 
 every_index = pytest.mark.parametrize("index", INDICES.values(), ids=INDICES)
@@ -157,6 +162,31 @@ def test_the_worked_special_numbers_are_the_profile_s() -> None:
     assert special == {sensor.nodata: "nodata", sensor.saturated: "saturated"}
 
 
+@pytest.mark.parametrize("row", LANDSAT_SCALINGS, ids=[row["id"] for row in LANDSAT_SCALINGS])
+def test_a_stored_number_of_landsat_scales_to_the_worked_figure(row: Row) -> None:
+    sent, worked = given(row), expected(row)
+    sensor = SENSORS["landsat-c2-l2"].on("landsat-8")
+    role = BandRole.LWIR11 if "kelvin" in worked else BandRole.RED
+    scaling = sensor.scaling(role, processing_baseline=None)
+    assert scaling == Scaling(scale=sent["scale"], offset=sent["offset"])
+    figure = worked.get("kelvin", worked.get("reflectance"))
+    if isinstance(figure, str):
+        assert figure == "nodata (mask)"
+        assert sent["dn"] == sensor.nodata
+        return
+    numbers = np.array([sent["dn"]], dtype=np.uint16)
+    found = scaling.reflectance(numbers)
+    if role is BandRole.LWIR11:
+        found = found.round(5)  # as the table's kelvins are
+    np.testing.assert_allclose(found, [figure], rtol=0, atol=float(row["tolerance"]))
+    if "in_valid_range_7273_43636" in worked:
+        band = sensor.band(role)
+        assert band is not None
+        assert band.valid_numbers is not None
+        low, high = band.valid_numbers
+        assert (low <= sent["dn"] <= high) == worked["in_valid_range_7273_43636"]
+
+
 def test_the_offset_of_the_catalogue_standard_and_of_the_agency_give_the_same_reflectance() -> None:
     row = SCALINGS["s2_stac_offset_equivalence"]
     sent = given(row)
@@ -193,7 +223,7 @@ def test_a_scene_class_is_kept_as_in_the_table(row: Row) -> None:
     assert SCL.classes[value].name == verdict["name"].split()[0]
 
     def kept(rule: str) -> bool:
-        return bool(SCL.judge(np.array([value], dtype=np.uint8), SCL.rules[rule]).usable[0])
+        return bool(SCL.judge(np.array([value], dtype=np.uint8), rule).usable[0])
 
     assert kept("land") == verdict["keep_land_strict"]
     assert kept("water") == verdict["keep_water"]
@@ -206,7 +236,7 @@ def test_a_scene_class_is_kept_as_in_the_table(row: Row) -> None:
 def test_every_reason_of_loss_has_its_scene_classes() -> None:
     # Source of the grouping: the names in the legend.
     values = np.arange(12, dtype=np.uint8)
-    lost = SCL.judge(values, SCL.rules["clear"]).lost
+    lost = SCL.judge(values, "clear").lost
     assert {loss: values[cells].tolist() for loss, cells in lost.items()} == {
         Loss.NODATA: [0],
         Loss.SATURATION: [1],

@@ -4,6 +4,8 @@ The scenes are ours: a few cells with round reflectances. Index formulas are che
 tests of `spectral`; here they are computed by hand from their published definitions.
 """
 
+import dataclasses
+
 import numpy as np
 import pytest
 import shapely
@@ -410,3 +412,134 @@ def test_parcels_of_more_cells_than_fit_one_batch_are_each_as_alone():
 
     assert together[0, 1] > 40_000  # usable cells
     np.testing.assert_array_equal(together, np.concatenate([figures([one]) for one in fields]))
+
+
+def with_bits(scene, bits, **bit_of):
+    """The scene with a layer of saturation bits, and each band's bit in it."""
+    for role, bit in bit_of.items():
+        scene[role].attrs = {**scene[role].attrs, "saturation_bit": bit}
+    return scene.assign(saturation=(("y", "x"), np.asarray(bits, dtype=np.uint16), {"nodata": 0}))
+
+
+def test_a_band_whose_bit_is_set_is_unknown_for_that_band_only():
+    bits = np.zeros((4, 4), np.uint16)
+    # Red in the first cell, near-infrared in the second, both and another in the third.
+    bits[0, :3] = 0b00_1000, 0b01_0000, 0b01_1010
+    scene = block({RED: four_by_four(0.1), NIR: four_by_four(0.3)}, CLEAR)
+    scene = with_bits(scene, bits, red=3, nir=4)
+
+    (seen,) = figures_of([scene], [box(0, 0, 4, 1)], roles=(RED, NIR))
+
+    assert seen["clear.valid_share"] == 0.75
+    assert seen["clear.saturation"] == 0.25
+    assert seen["ndvi.pixels"] == 1
+    assert seen["ndvi.mean"] == np.float32(0.5)
+    assert seen["red.mean"] == np.float32(0.1)
+
+
+def test_a_gap_stays_a_gap_whatever_its_saturation_bit_says():
+    red = four_by_four(0.1)
+    red[0, 0] = 0
+    scene = with_bits(block({RED: red}, CLEAR), np.full((4, 4), 8), red=3)
+
+    (seen,) = figures_of([scene], [box(0, 0, 2, 1)], roles=(RED,), indices=())
+
+    assert seen["clear.nodata"] == seen["clear.saturation"] == 0.5
+
+
+def test_a_band_without_a_bit_is_not_touched_by_the_layer_of_bits():
+    scene = with_bits(block({RED: four_by_four(0.1)}, CLEAR), np.full((4, 4), 0xFFF))
+
+    (seen,) = figures_of([scene], [box(0, 0, 2, 1)], roles=(RED,), indices=())
+
+    assert seen["clear.valid_share"] == 1
+
+
+def test_a_clear_cell_near_cloud_counts_as_cloud_and_a_lost_one_keeps_its_reason():
+    quality = [[CLOUD, VEGETATION, SHADOW, WATER], *[[VEGETATION] * 4] * 3]
+    near = np.zeros((4, 4), dtype=bool)
+    near[0] = True
+    scene = block({RED: four_by_four(0.1)}, quality).assign(near_cloud=(("y", "x"), near))
+
+    (clear,) = figures_of([scene], [box(0, 0, 4, 1)], roles=(RED,), indices=())
+    (land,) = figures_of([scene], [box(0, 0, 4, 1)], roles=(RED,), indices=(), rule="land")
+
+    assert clear["clear.cloud"] == land["land.cloud"] == 0.75
+    assert clear["clear.shadow"] == 0.25
+    assert clear["clear.valid_share"] == 0
+    assert clear["clear.water"] == 0.25
+
+
+NDSI = INDICES["ndsi"]
+GREEN = BandRole.GREEN
+
+
+def snowy():
+    """Bare ground beside snow, (0.1, 0.3) and (0.8, 0.1) in green and 1.6 µm, and a cloud."""
+    quality = [[5, 5, SNOW, CLOUD], *[[VEGETATION] * 4] * 3]
+    green, swir16 = four_by_four(0.1), four_by_four(0.3)
+    green[0, 2:], swir16[0, 2:] = stored([0.8, 0.8]), stored([0.1, 0.1])
+    return block({GREEN: green, SWIR16: swir16}, quality)
+
+
+def test_an_index_of_snow_is_of_snow_cells_too_and_has_a_look_of_its_own():
+    (seen,) = figures_of([snowy()], [box(0, 0, 4, 1)], roles=(GREEN, SWIR16), indices=(NDSI,))
+
+    assert seen["clear.valid_share"] == 0.5
+    assert seen["clear.snow"] == seen["clear.cloud"] == 0.25
+    assert seen["surface.valid_share"] == 0.75
+    assert seen["surface.snow"] == 0
+    assert seen["surface.cloud"] == 0.25
+    # (0.1 - 0.3) / 0.4 twice and (0.8 - 0.1) / 0.9 once; Hall et al. 1995.
+    assert seen["ndsi.pixels"] == 3
+    assert seen["ndsi.mean"] == pytest.approx((-0.5 - 0.5 + 7 / 9) / 3, rel=1e-6)
+    assert seen["ndsi.max"] == np.float32(7 / 9)
+    # The bands are of the scene's own rule.
+    assert seen["green.mean"] == np.float32(0.1)
+
+
+def test_an_index_of_the_scene_s_rule_does_not_notice_its_company():
+    mndwi = INDICES["mndwi"]
+    alone, beside = (
+        figures_of([snowy()], [box(0, 0, 4, 1)], roles=(GREEN, SWIR16), indices=indices)[0]
+        for indices in ((mndwi,), (NDSI, mndwi))
+    )
+
+    assert alone["mndwi.mean"] == np.float32(-0.5)
+    assert {column: beside[column] for column in alone} == alone
+
+
+@pytest.mark.parametrize(
+    ("quality", "rule"),
+    [
+        (None, "none"),
+        (dataclasses.replace(SCL, rules={"clear": SCL.rules["clear"]}), "clear"),
+        (SCL, "surface"),
+    ],
+    ids=["no layer", "a layer without that rule", "that rule"],
+)
+def test_an_index_s_own_rule_needs_a_layer_that_has_it_and_is_not_the_scene_s(quality, rule):
+    zones = zones_on(grid_of(4, 4), [box(0, 0, 4, 1)])
+
+    seen = observe(
+        [snowy()], zones, roles=(GREEN, SWIR16), indices=(NDSI,), quality=quality, rule=rule
+    )
+
+    assert seen.rules == {}
+    assert seen.columns == columns_for((GREEN, SWIR16), (NDSI,), rule)
+    assert {column.split(".")[0] for column in seen.columns} == {rule, "ndsi", "green", "swir16"}
+
+
+def test_what_was_read_by_another_rule_is_told():
+    zones = zones_on(grid_of(4, 4), [box(0, 0, 4, 1)])
+
+    seen = observe(
+        [snowy()], zones, roles=(GREEN, SWIR16), indices=(NDSI,), quality=SCL, rule="clear"
+    )
+
+    assert seen.rules == {"ndsi": "surface"}
+    assert seen.columns == columns_for((GREEN, SWIR16), (NDSI,), "clear", seen.rules)
+    assert seen.columns[: 2 * len(LOOK_FIGURES)] == (
+        *(f"clear.{figure}" for figure in LOOK_FIGURES),
+        *(f"surface.{figure}" for figure in LOOK_FIGURES),
+    )

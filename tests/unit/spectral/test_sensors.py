@@ -1,5 +1,7 @@
 """Sensor profiles."""
 
+import itertools
+
 import pytest
 
 from service.errors import RejectedInput
@@ -10,6 +12,7 @@ from service.spectral.scaling import Scaling
 from service.spectral.sensors import SENSORS, Sensor
 
 SENTINEL_2 = SENSORS["sentinel-2-l2a"]
+LANDSAT = SENSORS["landsat-c2-l2"]
 GENERIC = SENSORS["generic"]
 
 every_sensor = pytest.mark.parametrize("sensor", SENSORS.values(), ids=SENSORS)
@@ -113,7 +116,79 @@ def test_a_profile_is_whole(sensor: Sensor) -> None:
     assert SENSORS[sensor.id] is sensor
     assert len(set(sensor.roles)) == len(sensor.roles)
     assert sensor.quality is None or sensor.quality_rule in sensor.quality.rules
-    for band in sensor.bands:
-        assert 0.4 < band.centre_um < 2.5
-        assert 0.0 < band.width_um < 0.2
-        assert band.gsd_m in {10.0, 20.0, 60.0}
+    for band in itertools.chain(sensor.bands, *sensor.platforms.values()):
+        thermal = band.unit == "kelvin"
+        low, high = (10.0, 13.0) if thermal else (0.4, 2.5)
+        assert low < band.centre_um - band.width_um / 2
+        assert band.centre_um + band.width_um / 2 < high
+        assert band.gsd_m in {10.0, 20.0, 30.0, 60.0, 100.0, 120.0}
+        assert (band.scaling is not None) == thermal
+
+
+@every_sensor
+def test_a_profile_on_a_platform_has_that_platform_s_bands(sensor: Sensor) -> None:
+    for platform, bands in sensor.platforms.items():
+        on = sensor.on(platform)
+        assert on.bands == bands
+        assert len(set(on.roles)) == len(on.roles)
+        assert (on.id, on.quality, on.nodata) == (sensor.id, sensor.quality, sensor.nodata)
+        assert on.on("anything") is on
+
+
+@pytest.mark.parametrize("platform", [None, "", "landsat-6", "LANDSAT_8", "sentinel-2a"])
+def test_a_landsat_whose_platform_is_not_known_is_refused_with_what_to_send(
+    platform: str | None,
+) -> None:
+    with pytest.raises(RejectedInput) as caught:
+        LANDSAT.on(platform)
+    assert caught.value.faults[0].pointer == "/scene/platform"
+    assert "landsat-4, landsat-5, landsat-7, landsat-8, landsat-9" in caught.value.detail
+
+
+@pytest.mark.parametrize("platform", [None, "sentinel-2d", "a ship"])
+def test_a_sentinel_2_of_another_unit_has_the_bands_of_the_first(platform: str | None) -> None:
+    assert SENTINEL_2.on(platform) is SENTINEL_2
+    assert SENTINEL_2.bands == SENTINEL_2.platforms["sentinel-2a"]
+
+
+@pytest.mark.parametrize(
+    ("platform", "names"),
+    [
+        ("landsat-5", ["SR_B1", "SR_B2", "SR_B3", "SR_B4", "SR_B5", "SR_B7", "ST_B6"]),
+        ("landsat-7", ["SR_B1", "SR_B2", "SR_B3", "SR_B4", "SR_B5", "SR_B7", "ST_B6"]),
+        ("landsat-9", [f"SR_B{number}" for number in range(1, 8)] + ["ST_B10"]),
+    ],
+)
+def test_a_landsat_has_one_near_infrared_band_and_no_red_edge(
+    platform: str, names: list[str]
+) -> None:
+    sensor = LANDSAT.on(platform)
+    assert [band.name for band in sensor.bands] == names
+    assert BandRole.NIR in sensor.roles
+    absent = [BandRole.NIR08, BandRole.REDEDGE071, BandRole.REDEDGE075, BandRole.REDEDGE078]
+    assert not set(absent) & set(sensor.roles)
+    assert (BandRole.COASTAL in sensor.roles) == (platform == "landsat-9")
+
+
+@pytest.mark.parametrize("baseline", [None, "05.10", "anything"])
+def test_landsat_reflectance_and_temperature_have_the_published_scalings(
+    baseline: str | None,
+) -> None:
+    # USGS, Landsat Collection 2 Level-2 scale factors.
+    sensor = LANDSAT.on("landsat-8")
+    red = sensor.scaling(BandRole.RED, processing_baseline=baseline)
+    heat = sensor.scaling(BandRole.LWIR11, processing_baseline=baseline)
+    assert red == Scaling(scale=0.0000275, offset=-0.2)
+    assert heat == Scaling(scale=0.00341802, offset=149.0)
+    assert (sensor.nodata, sensor.saturated) == (0.0, None)
+
+
+def test_saturation_bits_follow_the_band_numbers_of_each_instrument() -> None:
+    # From memory of LSDS-1618 and LSDS-1619: bit n - 1 for band n.
+    for platform in LANDSAT.platforms:
+        bits = {
+            band.name: band.saturation_bit
+            for band in LANDSAT.on(platform).bands
+            if band.unit == "reflectance"
+        }
+        assert bits == {name: int(name.removeprefix("SR_B")) - 1 for name in bits}

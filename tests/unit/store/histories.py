@@ -25,7 +25,12 @@ LAYOUTS: Mapping[str, tuple[str, ...]] = {
     "both": ("ndvi", "ndmi"),
     "first": ("ndvi",),
     "second": ("ndmi",),
+    "apart": ("ndvi", "ndmi"),
 }
+APART = "apart"
+"""The layout in which NDMI was read by a quality rule of its own."""
+OTHER_SHARES: Mapping[float, float] = {0.0: 0.8, 0.5: 1.0, 0.6: 0.5, 0.7: 0.0, 0.8: 0.9, 1.0: 0.6}
+"""The valid share by the other rule, by that of the look; of other shares the same."""
 NewestLooks = dict[tuple[int, str], tuple[datetime, int]]
 """Instant and write of the newest look, by parcel and measure."""
 
@@ -98,13 +103,21 @@ def measured(told: Pictured, *, first_value: float = 0.0) -> Measured:
         ]
         for place, _ in enumerate(LAYOUTS[told.layout])
     ]
-    figures = np.array([[share for _, share in seen], *means], dtype=np.float32).T
+    is_apart = told.layout == APART
+    shares = [[share for _, share in seen]]
+    if is_apart:
+        shares.append([OTHER_SHARES.get(share, share) for _, share in seen])
+    columns = [
+        *[f"{rule}.valid_share" for rule in ("clear", "surface")[: len(shares)]],
+        *(f"{measure}.mean" for measure in LAYOUTS[told.layout]),
+    ]
+    figures = np.array([*shares, *means], dtype=np.float32).T
     return Measured(
         parcel_ids=[parcel_id for parcel_id, _ in seen],
         boundary_ids=[parcel_id for parcel_id, _ in seen],
-        columns=["clear.valid_share", *(f"{measure}.mean" for measure in LAYOUTS[told.layout])],
-        figures=figures.reshape(len(seen), 1 + len(LAYOUTS[told.layout])),
-        recipe={"rule": "clear"},
+        columns=columns,
+        figures=figures.reshape(len(seen), len(columns)),
+        recipe={"rule": "clear", **({"rules": {"ndmi": "surface"}} if is_apart else {})},
         scaling={},
     )
 
@@ -127,8 +140,10 @@ def by_hand(
         for measure in measures:
             looks = [
                 look
-                for look in best_of_passes([row for row in kept if row.places.has(measure)])
-                if look.of_look("valid_share") >= 0.6
+                for look in best_of_passes(
+                    [row for row in kept if row.places.has(measure)], measure
+                )
+                if share_of(look, measure) >= 0.6
             ]
             if looks:
                 newest = max(looks, key=lambda look: (look.acquired_at, look.write_id))
@@ -136,7 +151,13 @@ def by_hand(
     return found
 
 
-def best_of_passes(rows: Sequence[Observed]) -> list[Observed]:
+def share_of(row: Observed, measure: str) -> float:
+    """Return the valid share by the rule that a measure was read by."""
+    own = row.figure("surface.valid_share") if measure == "ndmi" else None
+    return (row.figure("clear.valid_share") or 0.0) if own is None else own
+
+
+def best_of_passes(rows: Sequence[Observed], measure: str) -> list[Observed]:
     """Take from each pass the row with the largest valid share, of each scene its last write."""
     last = {row.scene_id: row for row in sorted(rows, key=lambda row: row.write_id)}
     waiting = sorted(last.values(), key=lambda row: row.acquired_at)
@@ -153,7 +174,7 @@ def best_of_passes(rows: Sequence[Observed]) -> list[Observed]:
             max(
                 one_pass,
                 key=lambda row: (
-                    row.of_look("valid_share"),
+                    share_of(row, measure),
                     row.processing_baseline,
                     row.scene_ref,
                 ),

@@ -24,6 +24,7 @@ from tests.unit.store.histories import (
     kept_latest,
     measured,
     post,
+    share_of,
 )
 
 MEASURES = ("ndvi", "ndmi")
@@ -97,7 +98,7 @@ def carry_out(sessions: Sessions, steps: list[Step]) -> None:
             for row in session.scalars(select(Latest)):
                 look = found[row.parcel_id, row.measure]
                 assert row.value == look.of_measure(row.measure, "mean")
-                assert row.valid_share == look.of_look("valid_share")
+                assert row.valid_share == share_of(look, row.measure)
     with sessions.reading() as session:
         every = (Observation.parcel_id, Observation.write_id)
         doubled = select(*every).group_by(*every).having(func.count() > 1)
@@ -153,5 +154,8 @@ def test_what_is_kept_follows_on_each_database(sessions: Sessions) -> None:
             step("withdraw", 2_005, "first", to=2),
             step("replace", 4_000, "first", None, 1.0, None, to=3),
             step("withdraw", 2_000, "both", to=0),
+            step("post", 6_000, "apart", 0.5, 0.6, 1.0),
+            step("post", 6_005, "both", 0.6, 0.6, 0.6),
+            step("withdraw", 6_000, "apart", to=4),
         ],
     )
