@@ -14,7 +14,9 @@ from service.api import (
     alerts,
     baselines,
     health,
+    imports,
     indices,
+    jobs,
     keys,
     observations,
     overview,
@@ -36,6 +38,8 @@ from service.tiles.archive import Archive
 _ROUTERS = (
     keys,
     parcels,
+    imports,
+    jobs,
     seasons,
     scenes,
     observations,

@@ -97,6 +97,11 @@ def _flat_events(file: IO[bytes]) -> Iterator[tuple[int, str, Any]]:
 
 def too_many() -> RejectedInput:
     """Return the error for more items than a call may bring."""
+    return too_many_in("")
+
+
+def too_many_in(pointer: str) -> RejectedInput:
+    """Return the error for a part with more items than a call may bring."""
     return RejectedInput.at(
-        "", f"A call takes up to {BULK_LIMIT_ROWS:,} items. Send them in several calls."
+        pointer, f"A call takes up to {BULK_LIMIT_ROWS:,} items. Send them in several calls."
     )

@@ -27,6 +27,9 @@ class Queue(Protocol):
     def promise_deliveries(self, promises: Sequence[Promise]) -> None:
         """Take up attempts of deliveries."""
 
+    def promise_import(self, job_id: str) -> None:
+        """Take up an import of parcels."""
+
     def promise_judging(self) -> None:
         """Take up whatever judging is promised."""
 
@@ -39,7 +42,7 @@ class Context:
     """The running service, as the handlers see it.
 
     Handlers open their own sessions, so that a write is committed before its answer is made.
-    The queue takes committed promises of scenes, of deliveries and of judging.
+    The queue takes committed promises of scenes, of deliveries, of imports and of judging.
     """
 
     work: Resources
@@ -52,6 +55,10 @@ class Context:
     def promise_deliveries(self, promises: Sequence[Promise]) -> None:
         """Hand promised attempts to the queue."""
         self.queue.promise_deliveries(promises)
+
+    def promise_import(self, job_id: str) -> None:
+        """Hand a promised import of parcels to the queue."""
+        self.queue.promise_import(job_id)
 
     def promise_judging(self) -> None:
         """Hand promised judging to the queue."""
@@ -154,6 +161,7 @@ def require(scope: Scope) -> Callable[[Caller], Caller]:
     return check
 
 
+Known = Annotated[Caller, Depends(_caller)]
 Reader = Annotated[Caller, Depends(require(Scope.READ))]
 Ingester = Annotated[Caller, Depends(require(Scope.INGEST))]
 Steward = Annotated[Caller, Depends(require(Scope.MANAGE))]

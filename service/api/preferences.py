@@ -9,6 +9,8 @@ from sqlalchemy import select
 from starlette.concurrency import run_in_threadpool
 
 from service.api.context import Context
+from service.store.job_tables import Job
+from service.store.jobs import UNFINISHED
 from service.store.judging import is_judging_wanted
 from service.store.scenes import SceneState
 from service.store.tables import Scene
@@ -41,6 +43,11 @@ async def is_settled(context: Context, ref: str, seconds: float) -> bool:
     return await _comes_true(lambda: _has_ended(context, ref), seconds)
 
 
+async def is_finished(context: Context, job_id: str, seconds: float) -> bool:
+    """Wait until a job is done or has failed; return whether that came in time."""
+    return await _comes_true(lambda: _job_has_ended(context, job_id), seconds)
+
+
 async def is_judged(context: Context, seconds: float) -> bool:
     """Wait until no judging is promised; return whether that came in time."""
     return await _comes_true(lambda: _nothing_wanted(context), seconds)
@@ -57,6 +64,11 @@ async def _comes_true(holds: Callable[[], bool], seconds: float) -> bool:
 def _nothing_wanted(context: Context) -> bool:
     with context.sessions.reading() as session:
         return not is_judging_wanted(session)
+
+
+def _job_has_ended(context: Context, job_id: str) -> bool:
+    with context.sessions.reading() as session:
+        return session.scalar(select(Job.state).where(Job.public_id == job_id)) not in UNFINISHED
 
 
 def _has_ended(context: Context, ref: str) -> bool:

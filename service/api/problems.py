@@ -187,7 +187,8 @@ KINDS: Final[Mapping[str, Kind]] = {
     ),
     "unsupported-crs": Kind(
         title="Unsupported coordinate reference system",
-        page="Files must be in a projected coordinate reference system in metres, such as UTM.",
+        page="Scenes must be in a projected coordinate reference system in metres, such as UTM; "
+        "files of parcels in a projected or geographic one that needs no further file.",
     ),
     "unsupported-grid": Kind(
         title="Unsupported grid", page="Grids must be aligned to their axes, without rotation."
@@ -197,6 +198,20 @@ KINDS: Final[Mapping[str, Kind]] = {
         page="All bands of a scene share one coordinate reference system.",
     ),
     "no-overlap": Kind(title="No overlap", page="All bands of a scene overlap on the ground."),
+    "not-outlines": Kind(
+        title="Not a file of outlines",
+        page="Parcels are read from GeoPackage, zipped Shapefile and GeoJSON files, told by their "
+        "content and not by their name.",
+    ),
+    "unreadable-outlines": Kind(
+        title="Unreadable file of outlines",
+        page="The file is damaged, incomplete, or uses what is not read here. Nothing was kept.",
+    ),
+    "outlines-too-large": Kind(
+        title="Too much in a file of outlines",
+        page="The file holds, or unpacks to, more than the service is ready to read.",
+    ),
+    "job-not-found": Kind(title="Job not found", page="No job has this id."),
     "disk-full": Kind(
         title="Disk full",
         page="The service keeps a reserve of free disk space and takes no uploads below it.",

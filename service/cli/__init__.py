@@ -7,7 +7,7 @@ from typing import Final
 
 import typer
 
-from service.cli import alerts, demo, keys, serve
+from service.cli import alerts, demo, keys, parcels, serve
 from service.errors import (
     Conflict,
     FurrowlightError,
@@ -40,6 +40,7 @@ app.command("demo")(demo.demo)
 app.command("serve")(serve.serve)
 app.add_typer(keys.app, name="keys")
 app.add_typer(alerts.app, name="alerts")
+app.add_typer(parcels.app, name="parcels")
 
 
 def main() -> None:

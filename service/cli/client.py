@@ -10,6 +10,7 @@ import httpx
 
 from service.errors import (
     Conflict,
+    Fault,
     FurrowlightError,
     NotAllowed,
     NotFound,
@@ -91,13 +92,16 @@ def _error_of(response: httpx.Response) -> Exception:
     ):
         return RuntimeError(f"the service failed with status {response.status_code}")
     kind = _KINDS.get(response.status_code, RejectedInput)
-    problem = _problem_of(response)
-    code = problem.get("type", "").rsplit("/", 1)[-1] or "problem"
-    return kind(code, problem.get("detail") or f"The service said {response.status_code}.")
+    is_problem = "problem+json" in response.headers.get("Content-Type", "")
+    problem = response.json() if is_problem else {}
+    return error_of(problem, kind, otherwise=f"The service said {response.status_code}.")
 
 
-def _problem_of(response: httpx.Response) -> dict[str, str]:
-    """Return the text members of a problem document; none of any other answer."""
-    if "problem+json" not in response.headers.get("Content-Type", ""):
-        return {}
-    return {name: text for name, text in response.json().items() if isinstance(text, str)}
+def error_of(
+    problem: Mapping[str, Any], kind: type[FurrowlightError], *, otherwise: str
+) -> FurrowlightError:
+    """Return the error of a kind that a problem document tells of, with its faults."""
+    code = str(problem.get("type", "")).rsplit("/", 1)[-1] or "problem"
+    error = kind(code, str(problem.get("detail") or otherwise))
+    error.faults = tuple(Fault(**fault) for fault in problem.get("errors", ()))
+    return error

@@ -9,10 +9,11 @@ import structlog
 from dbos import DBOS
 
 from service.clock import now
-from service.jobs import assess, deliver, ingest
+from service.jobs import assess, deliver, ingest, parcel_import
 from service.jobs.resources import Resources
 from service.store.answers import forget_old_answers
 from service.store.batches import in_batches
+from service.store.jobs import files_of_jobs, forget_old_jobs, unfinished_jobs
 from service.store.scenes import SceneState, kept_digests, put_back, unfinished_scenes
 from service.store.tables import Scene
 from service.store.webhooks import forget_old_deliveries, waiting_deliveries
@@ -23,6 +24,7 @@ ORPHAN_SECONDS: Final = 24 * 3600.0
 WORKFLOWS_KEPT_FOR: Final = timedelta(days=30)
 DELIVERIES_KEPT_FOR: Final = timedelta(days=30)
 """Settled ones, from when they were last begun, with their attempts and their event."""
+JOBS_KEPT_FOR: Final = timedelta(days=30)
 _PURGE_BATCH: Final = 500
 _UNKNOWN: Final = "unknown"
 _CRASHED: Final = "MAX_RECOVERY_ATTEMPTS_EXCEEDED"
@@ -67,9 +69,11 @@ def sweep(work: Resources) -> None:
 
     A promise without a workflow is enqueued. A scene at work whose workflow the queue does
     not know is promised anew. A scene whose workflow ended without telling it has failed.
+    The same holds for jobs.
     """
     assess.enqueue_wanted(work)
     _sweep_deliveries(work)
+    _sweep_jobs(work)
     with work.sessions.reading() as session:
         scenes = unfinished_scenes(session)
     states = _workflow_states([ingest.workflow_id(scene.id, scene.generation) for scene in scenes])
@@ -98,6 +102,21 @@ def _sweep_deliveries(work: Resources) -> None:
                 deliver.enqueue(deliver.promise_anew(work, promise))
 
 
+def _sweep_jobs(work: Resources) -> None:
+    """Enqueue jobs that the queue does not know, and fail those that it gave up."""
+    with work.sessions.reading() as session:
+        jobs = [row.public_id for row in unfinished_jobs(session)]
+    states = _workflow_states([parcel_import.workflow_id(job) for job in jobs])
+    for job in jobs:
+        state = states.get(parcel_import.workflow_id(job), _UNKNOWN)
+        if state == _UNKNOWN:
+            parcel_import.enqueue(job)
+        elif state == _CRASHED:
+            parcel_import.fail(job, parcel_import.CRASHED_FAILURE)
+        elif state in _ENDED:
+            parcel_import.fail(job, parcel_import.INTERNAL_FAILURE)
+
+
 def _workflow_states(ids: Sequence[str]) -> dict[str, str]:
     if not ids:
         return {}
@@ -116,12 +135,13 @@ def _promise_anew(work: Resources, scene: Scene) -> None:
 
 
 def tidy(work: Resources) -> None:
-    """Remove what nothing needs: orphaned files, old answers, deliveries and workflows."""
+    """Remove what nothing needs: orphaned files, old answers, deliveries, jobs, workflows."""
     with work.sessions.writing() as session:
         forget_old_answers(session, at=now())
         forget_old_deliveries(session, before=now() - DELIVERIES_KEPT_FOR)
+        forget_old_jobs(session, before=now() - JOBS_KEPT_FOR)
     with work.sessions.reading() as session:
-        wanted = kept_digests(session)
+        wanted = kept_digests(session) | files_of_jobs(session)
     removed = work.archive.remove_orphans(wanted, older_than_seconds=ORPHAN_SECONDS)
     if removed:
         _log.info("orphaned files removed", count=removed)

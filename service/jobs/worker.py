@@ -10,7 +10,7 @@ from dbos import DBOS, DBOSConfig, DBOSPortableJSONSerializer
 from sqlalchemy import Engine, create_engine, event, make_url
 
 from service.errors import Unavailable
-from service.jobs import assess, deliver, ingest
+from service.jobs import assess, deliver, ingest, parcel_import
 from service.jobs.resources import Resources, lend
 from service.jobs.upkeep import Upkeep
 from service.store.sessions import hold_database
@@ -82,6 +82,11 @@ class Worker:
             worker_concurrency=1,
             polling_interval_sec=settings.queue_polling_seconds,
         )
+        DBOS.register_queue(
+            parcel_import.QUEUE,
+            worker_concurrency=1,
+            polling_interval_sec=settings.queue_polling_seconds,
+        )
         # A slow receiver holds up only itself.
         DBOS.register_queue(
             deliver.QUEUE,
@@ -99,6 +104,10 @@ class Worker:
     def promise_deliveries(self, promises: Sequence[deliver.Promise]) -> None:
         """Hand promised attempts to the queue at once; if that fails, the sweep will."""
         self._hand(lambda: deliver.enqueue(promises))
+
+    def promise_import(self, job_id: str) -> None:
+        """Hand a promised import to the queue at once; if that fails, the sweep will."""
+        self._hand(lambda: parcel_import.enqueue(job_id))
 
     def promise_judging(self) -> None:
         """Hand promised judging to the queue at once; if that fails, the sweep will."""

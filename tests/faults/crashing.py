@@ -23,6 +23,8 @@ import service.jobs.assess
 import service.jobs.deliver
 import service.jobs.ingest
 import service.jobs.measuring
+import service.jobs.parcel_files
+import service.jobs.parcel_import
 import service.jobs.upkeep
 import service.store.observations
 
@@ -95,6 +97,12 @@ POINTS: Final[Mapping[str, Callable[[], None]]] = {
     # recorded, and the queue knows nothing of the next attempt.
     "posted-not-recorded": partial(before, service.jobs.deliver, "_record"),
     "next-not-promised": partial(before, service.jobs.deliver, "enqueue"),
+    # Importing a file: no job in the queue; in the middle of the file; its rows written and
+    # not committed; committed, and the queue knows nothing of it.
+    "before-import": partial(before, service.jobs.parcel_import, "enqueue"),
+    "half-a-file": partial(before, service.jobs.parcel_files, "_change", times=6_000),
+    "parcels-not-committed": partial(after, service.jobs.parcel_import, "keep_parcels"),
+    "import-not-noted": partial(after, service.jobs.parcel_import, "_kept"),
     # Starting: among the first tables, before the queue's engine, with the engine running.
     "migrating": partial(before, alembic.op, "create_table", times=5),
     "before-engine": partial(before, DBOS, "launch"),
