@@ -1,5 +1,6 @@
 """What the client commands share: calls of the HTTP API, and its problems as our errors."""
 
+import math
 import os
 from collections.abc import Mapping
 from http import HTTPStatus
@@ -8,6 +9,7 @@ from typing import Any, Final
 
 import httpx
 
+from service.clock import now
 from service.errors import (
     Conflict,
     Fault,
@@ -17,8 +19,10 @@ from service.errors import (
     RejectedInput,
     Unavailable,
 )
+from service.webhooks.retries import retry_after
 
 CALL_SECONDS: Final = 60.0
+UNREACHABLE: Final = "unreachable"
 
 _KINDS: Final[Mapping[int, type[FurrowlightError]]] = {
     HTTPStatus.UNAUTHORIZED: NotAllowed,
@@ -27,7 +31,10 @@ _KINDS: Final[Mapping[int, type[FurrowlightError]]] = {
     HTTPStatus.CONFLICT: Conflict,
     HTTPStatus.PRECONDITION_FAILED: Conflict,
     HTTPStatus.TOO_MANY_REQUESTS: Unavailable,
+    # The two beside it are a proxy's, before a service that is starting or gone.
+    HTTPStatus.BAD_GATEWAY: Unavailable,
     HTTPStatus.SERVICE_UNAVAILABLE: Unavailable,
+    HTTPStatus.GATEWAY_TIMEOUT: Unavailable,
 }
 
 
@@ -77,7 +84,7 @@ def call(client: httpx.Client, method: str, path: str, **request: Any) -> dict[s
         response = client.request(method, path, **request)
     except httpx.TransportError as error:
         raise Unavailable(
-            "unreachable", "The service can't be reached. Is it running, and is the address right?"
+            UNREACHABLE, "The service can't be reached. Is it running, and is the address right?"
         ) from error
     if response.is_error:
         raise _error_of(response)
@@ -94,7 +101,11 @@ def _error_of(response: httpx.Response) -> Exception:
     kind = _KINDS.get(response.status_code, RejectedInput)
     is_problem = "problem+json" in response.headers.get("Content-Type", "")
     problem = response.json() if is_problem else {}
-    return error_of(problem, kind, otherwise=f"The service said {response.status_code}.")
+    error = error_of(problem, kind, otherwise=f"The service said {response.status_code}.")
+    asked = retry_after(response.headers.get("Retry-After"), now=now())
+    if isinstance(error, Unavailable) and asked is not None:
+        error.retry_after_seconds = math.ceil(asked.total_seconds())
+    return error
 
 
 def error_of(

@@ -7,10 +7,9 @@ from typing import Annotated, Any, Final
 
 import httpx
 import typer
-from rich.console import Console
-from rich.progress import Progress
 
 from service.cli.client import call, connect_from_environment, error_of
+from service.cli.progress import News
 from service.errors import Conflict, FurrowlightError, NotFound, RejectedInput
 
 app = typer.Typer(no_args_is_help=True, help="Send parcels to a running service.")
@@ -18,7 +17,6 @@ EXIT_REFUSED: Final = 3
 EXIT_WAIT: Final = 6
 _UPLOAD_SECONDS: Final = 600.0
 _POLL_SECONDS: Final = 5
-_LINE_SECONDS: Final = 10.0
 
 
 @app.callback()
@@ -100,7 +98,7 @@ def _sent(
 def _finished(client: httpx.Client, job: dict[str, Any], timeout: int) -> dict[str, Any]:
     """Wait for a job, showing how far it is; return what became of the parcels."""
     until = time.monotonic() + timeout
-    with _News() as news:
+    with News("importing") as news:
         while job["state"] in ("queued", "running"):
             left = until - time.monotonic()
             if left <= 0:
@@ -125,33 +123,6 @@ def _failure_of(problem: dict[str, Any]) -> Exception:
         return RuntimeError(problem["detail"])
     kind = Conflict if problem["status"] == httpx.codes.CONFLICT else RejectedInput
     return error_of(problem, kind, otherwise="The service refused the file.")
-
-
-class _News:
-    """Shows progress on stderr: a bar on a terminal, else a line now and then."""
-
-    def __init__(self) -> None:
-        console = Console(stderr=True)
-        self._bar = Progress(console=console, transient=True) if console.is_terminal else None
-        self._task = self._bar.add_task("importing", total=1.0) if self._bar else None
-        self._told_at = time.monotonic()
-
-    def __enter__(self) -> "_News":
-        if self._bar is not None:
-            self._bar.start()
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        if self._bar is not None:
-            self._bar.stop()
-
-    def tell(self, progress: float) -> None:
-        """Show how far the job is."""
-        if self._bar is not None and self._task is not None:
-            self._bar.update(self._task, completed=progress)
-        elif time.monotonic() - self._told_at >= _LINE_SECONDS:
-            typer.echo(f"importing: {progress:.0%}", err=True)
-            self._told_at = time.monotonic()
 
 
 def _tell(outcome: dict[str, Any], *, as_json: bool) -> None:
