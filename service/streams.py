@@ -1,5 +1,6 @@
 """JSON read item by item, whoever sent it: never whole in memory, never nested without end."""
 
+import json
 from collections.abc import Iterator
 from typing import IO, Any, Final
 
@@ -28,6 +29,23 @@ def json_items(file: IO[bytes], prefix: str) -> Iterator[Any]:
                 raise too_many()
             yield item
     except (ijson.JSONError, UnicodeDecodeError, ValueError, OverflowError) as error:
+        raise RejectedInput("malformed-json", "The body is not valid JSON.") from error
+
+
+def json_document(file: IO[bytes]) -> Any:
+    """Return a short JSON document whole; the caller has bounded its length.
+
+    Raises
+    ------
+    RejectedInput
+        It is not JSON, is nested deeply, or holds numbers that nothing here could mean.
+    """
+    for _ in _flat_events(file):
+        pass
+    file.seek(0)
+    try:
+        return json.load(file)
+    except ValueError as error:
         raise RejectedInput("malformed-json", "The body is not valid JSON.") from error
 
 
