@@ -7,7 +7,7 @@ from typing import Final
 
 import typer
 
-from service.cli import alerts, demo, keys, parcels, serve
+from service.cli import alerts, demo, keys, parcels, push, serve
 from service.errors import (
     Conflict,
     FurrowlightError,
@@ -38,6 +38,7 @@ app = typer.Typer(
 )
 app.command("demo")(demo.demo)
 app.command("serve")(serve.serve)
+app.command("push")(push.push)
 app.add_typer(keys.app, name="keys")
 app.add_typer(alerts.app, name="alerts")
 app.add_typer(parcels.app, name="parcels")

@@ -22,7 +22,6 @@ from service.errors import (
 from service.webhooks.retries import retry_after
 
 CALL_SECONDS: Final = 60.0
-UNREACHABLE: Final = "unreachable"
 
 _KINDS: Final[Mapping[int, type[FurrowlightError]]] = {
     HTTPStatus.UNAUTHORIZED: NotAllowed,
@@ -80,16 +79,30 @@ def call(client: httpx.Client, method: str, path: str, **request: Any) -> dict[s
     FurrowlightError
         The service answered with a problem, or could not be reached (`Unavailable`).
     """
+    answer: dict[str, Any] = answer_of(client, method, path, **request).json()
+    return answer
+
+
+def answer_of(client: httpx.Client, method: str, path: str, **request: Any) -> httpx.Response:
+    """Send one request and return its answer.
+
+    Raises
+    ------
+    FurrowlightError
+        As for `call`. An `Unavailable` says how many seconds the service asked to wait, 0 if
+        it did not.
+    """
     try:
         response = client.request(method, path, **request)
     except httpx.TransportError as error:
         raise Unavailable(
-            UNREACHABLE, "The service can't be reached. Is it running, and is the address right?"
+            "unreachable",
+            "The service can't be reached. Is it running, and is the address right?",
+            retry_after_seconds=0,
         ) from error
     if response.is_error:
         raise _error_of(response)
-    answer: dict[str, Any] = response.json()
-    return answer
+    return response
 
 
 def _error_of(response: httpx.Response) -> Exception:
@@ -102,9 +115,9 @@ def _error_of(response: httpx.Response) -> Exception:
     is_problem = "problem+json" in response.headers.get("Content-Type", "")
     problem = response.json() if is_problem else {}
     error = error_of(problem, kind, otherwise=f"The service said {response.status_code}.")
-    asked = retry_after(response.headers.get("Retry-After"), now=now())
-    if isinstance(error, Unavailable) and asked is not None:
-        error.retry_after_seconds = math.ceil(asked.total_seconds())
+    if isinstance(error, Unavailable):
+        asked = retry_after(response.headers.get("Retry-After"), now=now())
+        error.retry_after_seconds = math.ceil(asked.total_seconds()) if asked else 0
     return error
 
 

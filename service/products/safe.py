@@ -40,21 +40,21 @@ _METADATA_LIMIT: Final = 16 * 2**20
 
 _NAME: Final = re.compile(
     r"(?P<ref>S(?P<unit>2[A-Z])_MSIL(?P<level>1C|2A)_[0-9]{8}T[0-9]{6}"
-    r"_N(?P<baseline>[0-9]{4})_R[0-9]{3}_(?P<tile>T[0-9]{2}[A-Z]{3})_[0-9]{8}T[0-9]{6})(\.SAFE)?"
+    r"_N(?P<baseline>[0-9]{4})_R[0-9]{3}_T(?P<tile>[0-9]{2}[A-Z]{3})_[0-9]{8}T[0-9]{6})(\.SAFE)?"
 )
 _IMAGE: Final = re.compile(
     r"GRANULE/(?P<granule>[^/]+)/IMG_DATA/(?:R[0-9]+m/)?"
     r"[^/]+_(?P<key>B[0-9][0-9A]|SCL|AOT|WVP|TCI)_(?P<metres>10|20|60)m"
 )
-_GRANULE: Final = re.compile(r"L2A_(?P<tile>T[0-9]{2}[A-Z]{3})_.+")
+_GRANULE: Final = re.compile(r"L2A_T(?P<tile>[0-9]{2}[A-Z]{3})_.+")
 _SCL: Final = "SCL"
 # By band id, where the metadata don't say themselves.
 _BAND_IDS: Final = ("1", "2", "3", "4", "5", "6", "7", "8", "8A", "9", "10", "11", "12")
 _LEFT_OUT: Final = {
-    "B09": "water vapour, which no index here uses",
-    "AOT": "no band: the aerosol that the correction took",
-    "WVP": "no band: the water vapour that the correction took",
-    "TCI": "no band: a picture",
+    "B09": "no index uses it",
+    "AOT": "no reflectance",
+    "WVP": "no reflectance",
+    "TCI": "no reflectance",
 }
 
 
