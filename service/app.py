@@ -24,6 +24,7 @@ from service.api import (
     scene_content,
     scenes,
     seasons,
+    sensors,
     series,
     webhooks,
 )
@@ -46,6 +47,7 @@ _ROUTERS = (
     scene_content,
     observations,
     indices,
+    sensors,
     series,
     baselines,
     overview,

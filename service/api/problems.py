@@ -151,6 +151,7 @@ KINDS: Final[Mapping[str, Kind]] = {
         "first answer again, another request is refused.",
     ),
     "unknown-sensor": Kind(title="Unknown sensor", page="No sensor profile has this id."),
+    "sensor-built-in": Kind(title="Built-in sensor", page="It comes with the service as it is."),
     "unknown-offset": Kind(
         title="Unknown offset",
         page="Without the right offset every index would be wrong, and nothing would show it: "
@@ -236,8 +237,7 @@ KINDS: Final[Mapping[str, Kind]] = {
         page="Somebody, or judging, has changed the alert since it was looked at.",
     ),
     "no-baseline": Kind(
-        title="No baseline",
-        page="What is normal for a parcel is worked out when a season of it is judged.",
+        title="No baseline", page="What is normal is worked out when a parcel's season is judged."
     ),
     "not-kept": Kind(
         title="Not kept",

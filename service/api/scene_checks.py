@@ -10,28 +10,24 @@ from typing import Annotated, Any, Final, Literal
 from pydantic import AfterValidator, Field, FiniteFloat, model_validator
 
 from service.api.batches import model_of
+from service.api.scalings import ScalingSent, scaling_from
 from service.api.uploads import SCENE, STACK, SceneReceived
 from service.api.wire import Instant, Ref, Sent, Text, written
 from service.errors import RejectedInput
 from service.jobs.measuring import WATCHED
-from service.jobs.sources import band_roles, bands_of, scalings_of, scene_source, sensor_of
+from service.jobs.sources import band_roles, bands_of, scalings_of, scene_source
 from service.spectral.gathered import QUALITY, SATURATION
 from service.spectral.roles import BandRole
 from service.spectral.sensors import SENSORS, Sensor
 from service.store.scenes import FileSent, SceneSent
+from service.store.sensors import SENSOR_VERSION, find_sensor
+from service.store.sessions import Sessions
 from service.tiles.intake import Header, check_together, footprint, inspect
 from service.tiles.reading import measuring_grid
 
 _EARLIEST: Final = datetime(1972, 1, 1, tzinfo=UTC)
 """No civil multispectral satellite flew before."""
 _AHEAD: Final = timedelta(days=1)
-
-
-class ScalingSent(Sent):
-    """Reflectance = number * scale + offset."""
-
-    scale: Annotated[FiniteFloat, Field(gt=0)]
-    offset: FiniteFloat
 
 
 def _stack_role(role: str | None) -> str | None:
@@ -66,26 +62,14 @@ class SceneIn(Sent):
     def _one_or_by_role(cls, value: Any) -> Any:
         """Decide between one scaling and one per role, so that faults name the right place."""
         sent = value.get("scaling") if isinstance(value, Mapping) else None
-        return value if sent is None else {**value, "scaling": _scaling_from(sent)}
+        if sent is None:
+            return value
+        return {**value, "scaling": scaling_from(sent, f"/{SCENE}/scaling")}
 
 
-def _scaling_from(sent: object) -> ScalingSent | dict[BandRole, ScalingSent]:
-    pointer = f"/{SCENE}/scaling"
-    if not isinstance(sent, Mapping) or not sent or "scale" in sent or "offset" in sent:
-        return model_of(ScalingSent, sent, pointer)
-    if not sent.keys() <= set(BandRole):
-        raise RejectedInput.at(
-            pointer,
-            "Scaling is one object with `scale` and `offset`, or one for each band role "
-            f"({', '.join(BandRole)}).",
-        )
-    return {
-        BandRole(role): model_of(ScalingSent, own, f"{pointer}/{role}")
-        for role, own in sent.items()
-    }
-
-
-def checked_scene(received: SceneReceived, *, at: datetime) -> tuple[SceneSent, dict[str, Path]]:
+def checked_scene(
+    received: SceneReceived, sessions: Sessions, *, at: datetime
+) -> tuple[SceneSent, dict[str, Path]]:
     """Return a received scene, ready to be kept, and where its parts are.
 
     Its files are named by the parts as they are stored: the single near-infrared band of a
@@ -97,13 +81,7 @@ def checked_scene(received: SceneReceived, *, at: datetime) -> tuple[SceneSent, 
         Metadata or headers break a rule; the pointer begins with the part's name.
     """
     scene = _scene_part(received.scene)
-    if scene.sensor not in SENSORS:
-        raise RejectedInput.at(
-            f"/{SCENE}/sensor",
-            f"No sensor profile has this id; there are {', '.join(SENSORS)}.",
-            code="unknown-sensor",
-        )
-    sensor = sensor_of(scene.sensor, {"platform": scene.platform})
+    sensor = _sensor(scene, sessions)
     check_acquired(scene.acquired_at, f"/{SCENE}/acquired_at", at=at)
     files = {part: file.path for part, file in received.files.items()}
     details, files = _with_one_nir(_details(scene), files, sensor)
@@ -122,7 +100,7 @@ def checked_scene(received: SceneReceived, *, at: datetime) -> tuple[SceneSent, 
         tile=scene.tile,
         acquired_at=scene.acquired_at,
         processing_baseline=scene.processing_baseline,
-        details=details,
+        details=details if sensor.version is None else {**details, SENSOR_VERSION: sensor.version},
         digest=_digest(details, {part: sizes[path].digest for part, path in files.items()}),
         grid=grid,
         footprint=footprint(grid),
@@ -133,6 +111,20 @@ def checked_scene(received: SceneReceived, *, at: datetime) -> tuple[SceneSent, 
         replace=scene.replace,
     )
     return sent, files
+
+
+def _sensor(scene: SceneIn, sessions: Sessions) -> Sensor:
+    """Return the scene's sensor, by the newest version of its profile, on its platform."""
+    with sessions.reading() as session:
+        sensor = find_sensor(session, scene.sensor)
+    if sensor is None:
+        raise RejectedInput.at(
+            f"/{SCENE}/sensor",
+            f"No sensor profile has this id. `GET /v1/sensors` lists those that there are; "
+            f"{', '.join(SENSORS)} are built in, others are put by `PUT /v1/sensors/{{id}}`.",
+            code="unknown-sensor",
+        )
+    return sensor.on(scene.platform)
 
 
 def _scene_part(data: bytes) -> SceneIn:

@@ -36,6 +36,7 @@ from service.store.scenes import (
     retry_scene,
     withdraw_scene,
 )
+from service.store.sensors import SENSOR_VERSION
 from service.store.tables import Parcel, Scene
 
 router = contract_router("/scenes", "scenes")
@@ -47,6 +48,7 @@ class SceneOut(BaseModel):
     ref: str
     kind: str
     sensor: str
+    sensor_version: int | None
     platform: str | None
     tile: str | None
     acquired_at: InstantOut
@@ -107,6 +109,7 @@ def _out(session: Session, row: Scene, caller: Caller) -> SceneOut:
         ref=row.ref,
         kind=row.kind,
         sensor=row.sensor,
+        sensor_version=row.details.get(SENSOR_VERSION),
         platform=row.platform,
         tile=row.tile,
         acquired_at=row.acquired_at,
@@ -172,7 +175,7 @@ def _keep(
 ) -> tuple[str, Response]:
     caller.must_see_all("a scene")
     at = now()
-    sent, paths = checked_scene(received, at=at)
+    sent, paths = checked_scene(received, context.sessions, at=at)
     for file in sent.files:
         context.archive.keep(paths[file.part], file.digest)
     fingerprint = f"{sent.ref}\n{sent.digest}\n{sent.replace}"

@@ -15,18 +15,20 @@ from service import __version__
 from service.clock import now
 from service.errors import RejectedInput
 from service.jobs.resources import Resources
-from service.jobs.sources import scene_source, sensor_of
+from service.jobs.sources import scene_source
 from service.observe import Observed, observe
 from service.spectral.gathered import QUALITY, SATURATION
 from service.spectral.indices import INDICES, Index
 from service.spectral.quality import QualityLayer
 from service.spectral.quality_bits import SaturationLayer
 from service.spectral.roles import BandRole
+from service.spectral.sensors import Sensor
 from service.store.judging import want_judging_of_scenes
 from service.store.looks import observations_of_scene
 from service.store.observations import Measured, has_write, parcels_to_measure, record
 from service.store.reports import out_of_range, scene_counts
 from service.store.scenes import SceneState, lock_scene, retire_figures
+from service.store.sensors import sensor_of_scene
 from service.store.tables import Scene
 from service.tiles.reading import SceneSource, measuring_grid, read_blocks
 from service.zonal.coverage import MIN_COVERAGE, project, zones_on
@@ -45,6 +47,7 @@ class _Task:
     saturation: SaturationLayer | None
     rule: str
     must_keep: frozenset[int]
+    profile: dict[str, Any] | None
 
 
 def measure_scene(work: Resources, scene_id: int, generation: int) -> bool:
@@ -75,7 +78,8 @@ def measure_scene(work: Resources, scene_id: int, generation: int) -> bool:
             replaced = _supersede(session, row)
             want_judging_of_scenes(session, [row, *replaced], work.settings.season_starts)
         seconds["total"] = round(time.monotonic() - started, 3)
-        row.report = _report(list(observations_of_scene(session, scene_id)), observed, seconds)
+        rows = list(observations_of_scene(session, scene_id))
+        row.report = _report(task, rows, observed, seconds)
         row.progress = 0.9
     return True
 
@@ -110,13 +114,13 @@ def _begin(work: Resources, scene_id: int, generation: int) -> Scene | None:
 
 def _task(work: Resources, scene: Scene) -> _Task | None:
     """Return what is to be measured, or None if this generation has its observations."""
-    sensor = sensor_of(scene.sensor, scene.details)
-    has_quality = scene.details.get(QUALITY) != "none" and sensor.quality is not None
     with work.sessions.reading() as session:
         if has_write(session, scene, scene.generation):
             return None
+        sensor = sensor_of_scene(session, scene.sensor, scene.details)
         parcels = parcels_to_measure(session, scene)
         kept = frozenset(row.parcel_id for row in observations_of_scene(session, scene.id))
+    has_quality = scene.details.get(QUALITY) != "none" and sensor.quality is not None
     files = {file.part: work.archive.path_of(file.digest) for file in scene.files}
     buffer = work.settings.cloud_buffer_cells if has_quality else 0
     source = scene_source(sensor, scene.details, files, cloud_buffer_cells=buffer)
@@ -127,7 +131,13 @@ def _task(work: Resources, scene: Scene) -> _Task | None:
         saturation=sensor.saturation if source.saturation is not None else None,
         rule=sensor.quality_rule if has_quality else "none",
         must_keep=kept,
+        profile=_profile(sensor),
     )
+
+
+def _profile(sensor: Sensor) -> dict[str, Any] | None:
+    """Name the version of a profile that is not built in, for the recipe."""
+    return {"sensor": sensor.id, "version": sensor.version} if sensor.version else None
 
 
 def _measured(task: _Task) -> tuple[Measured, Observed, dict[str, float]]:
@@ -171,6 +181,7 @@ def _kept(task: _Task, observed: Observed, keep: NDArray[np.bool_], grid: Grid) 
         columns=observed.columns,
         figures=observed.figures[keep],
         recipe={
+            "profile": task.profile,
             "rule": task.rule,
             "rules": dict(observed.rules),
             "quality": task.quality.id if task.quality else None,
@@ -209,13 +220,19 @@ def _checked(blocks: Iterable[xr.Dataset], task: _Task) -> Iterator[xr.Dataset]:
         yield block
 
 
-def _report(rows: list[Any], observed: Observed, seconds: dict[str, float]) -> dict[str, Any]:
+def _report(
+    task: _Task, rows: list[Any], observed: Observed, seconds: dict[str, float]
+) -> dict[str, Any]:
     normalised = [i for i in observed.measured if INDICES[i].normalised]
     leaving = out_of_range(rows, normalised)
     indices: dict[str, dict[str, Any]] = {
         index_id: {"state": "measured", "parcels_out_of_range": leaving.get(index_id, 0)}
         for index_id in observed.measured
     }
+    for index_id in observed.measured:
+        if INDICES[index_id].quality_rule is not None and task.quality is not None:
+            # It is read by the scene's rule where the layer lacks the one that it asks for.
+            indices[index_id]["rule"] = observed.rules.get(index_id, task.rule)
     for index_id, reason in observed.skipped.items():
         indices[index_id] = {"state": "skipped", "reason": reason}
     return {**scene_counts(rows), "indices": indices, "seconds": seconds}

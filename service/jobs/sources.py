@@ -8,7 +8,7 @@ from service.spectral.gathered import QUALITY, SATURATION
 from service.spectral.quality import Loss, QualityLayer
 from service.spectral.roles import BandRole
 from service.spectral.scaling import Scaling
-from service.spectral.sensors import SENSORS, Sensor
+from service.spectral.sensors import Sensor
 from service.tiles.buffering import CloudBuffer
 from service.tiles.intake import inspect
 from service.tiles.reading import BandSource, SceneSource
@@ -34,17 +34,6 @@ def bands_of(details: Mapping[str, Any], parts: Mapping[str, Any]) -> dict[str, 
 def band_roles(bands: Mapping[str, Any]) -> list[BandRole]:
     """Return the roles among what `bands_of` found, in one order."""
     return sorted(BandRole(name) for name in bands if name not in _NO_BANDS)
-
-
-def sensor_of(sensor_id: str, details: Mapping[str, Any]) -> Sensor:
-    """Return the profile of a scene's sensor, as it is on the scene's platform.
-
-    Raises
-    ------
-    RejectedInput
-        The platform has to be named, and is not one that the profile knows.
-    """
-    return SENSORS[sensor_id].on(details.get("platform"))
 
 
 def scalings_of(
@@ -76,7 +65,7 @@ def _scaling_sent(sent: Mapping[str, Any], sensor: Sensor, role: BandRole) -> An
     if "scale" not in sent:
         return sent.get(role.value)
     described = sensor.band(role)
-    return sent if described is None or described.scaling is None else None
+    return sent if described is None or described.unit == "reflectance" else None
 
 
 def scene_source(

@@ -29,7 +29,8 @@ class Band:
     centre_um, width_um
         Centre wavelength and full width at half maximum, micrometres.
     gsd_m
-        Ground sample distance at which it is taken, metres; a product may be resampled.
+        Ground sample distance at which it is taken, metres, None if it varies; a product may
+        be resampled.
     unit
         Of what its numbers become by their scaling: ``reflectance`` or ``kelvin``.
     scaling
@@ -45,7 +46,7 @@ class Band:
     name: str
     centre_um: float
     width_um: float
-    gsd_m: float
+    gsd_m: float | None
     unit: str = "reflectance"
     scaling: Scaling | None = None
     valid_numbers: tuple[int, int] | None = None

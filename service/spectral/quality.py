@@ -138,10 +138,11 @@ class ClassLayer:
     def judge(self, values: NDArray[np.integer], rule: str) -> Judged:
         """Return which cells are usable under a rule, and what the others were lost to."""
         keep = self.rules[rule].keep
-        beyond = max(self.classes) + 1
-        # Any number off the table shares the row after the last class, which is no class.
-        rows = np.where((values >= 0) & (values < beyond), values, beyond).astype(np.intp)
-        classes = [self.classes.get(value) for value in range(beyond + 1)]
+        known = np.array(sorted(self.classes))
+        rows = np.minimum(np.searchsorted(known, values), len(known) - 1)
+        # Any number off the table has the row after the last class, which is no class.
+        rows = np.where(known[rows] == values, rows, len(known))
+        classes = [*(self.classes[value] for value in sorted(self.classes)), None]
 
         def where(chosen: list[bool]) -> NDArray[np.bool_]:
             return np.asarray(np.array(chosen, dtype=np.bool_)[rows])

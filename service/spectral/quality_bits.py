@@ -19,11 +19,16 @@ Integers = NDArray[np.integer]
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class BitField:
-    """Some neighbouring bits of a number, from `bit` (the lowest is 0) on."""
+    """Some neighbouring bits of a number, from `bit` (the lowest is 0) on.
+
+    `loss` is the reason to give where a rule drops a cell for this field, None for a clear
+    surface that a rule doesn't want.
+    """
 
     name: str
     bit: int
     width: int = 1
+    loss: Loss | None = None
 
     def of(self, values: Integers) -> Integers:
         """Return the field's own number in each value, from 0 to 2 ** width - 1."""
@@ -32,14 +37,10 @@ class BitField:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Drop:
-    """What a rule drops: cells where a field is `at_least` so high, and the reason to give.
-
-    `loss` is None for a clear surface that the rule does not want.
-    """
+    """What a rule drops: cells where a field is `at_least` so high, for the field's reason."""
 
     field: BitField
     at_least: int = 1
-    loss: Loss | None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -62,48 +63,53 @@ class BitLayer:
     ----------
     id, dtypes
         As in `service.spectral.quality.QualityLayer`.
-    fill
-        The bit of a cell without data. It stands alone: a number that has it and others is
-        none of this layer.
+    outside
+        As there.
+    silent
+        Numbers that say nothing of their cell, which count as nodata.
     width
         How many bits a number has.
+    fields
+        What the bits mean, by name; rules are made of these.
+    fill
+        The bit of a cell without data, None if that is told by a whole number. It stands
+        alone: a number that has it and is not `outside` is none of this layer.
     water
-        The bit of a water cell.
+        The field of a water cell, None if the layer tells of no water.
     rules
         The rules by id.
     """
 
     id: str
     dtypes: tuple[str, ...]
-    fill: BitField
+    outside: int
+    silent: frozenset[int]
     width: int
-    water: BitField
+    fields: Mapping[str, BitField]
+    fill: BitField | None
+    water: BitField | None
     rules: Mapping[str, BitRule]
-
-    @property
-    def outside(self) -> int:
-        """The number that stands for cells outside the layer."""
-        return 1 << self.fill.bit
 
     def judge(self, values: Integers, rule: str) -> Judged:
         """Return which cells are usable under a rule, and what the others were lost to.
 
-        A number without any bit says nothing of its cell (real ones state at least a low
-        confidence) and counts as nodata, as does one that the layer cannot have.
+        A silent number counts as nodata, as does one that the layer cannot have.
         """
         chosen = self.rules[rule]
-        told = self._possible(values) & (values != 0)
+        told = self._possible(values) & ~np.isin(values, list(self.silent))
         lost = {loss: np.zeros(values.shape, dtype=np.bool_) for loss in Loss}
         lost[Loss.NODATA] |= ~told
         usable = told.copy()
         for entry in chosen.drop:
             hit = usable & (entry.field.of(values) >= entry.at_least)
             usable &= ~hit
-            if entry.loss is not None:
-                lost[entry.loss] |= hit
+            if entry.field.loss is not None:
+                lost[entry.field.loss] |= hit
         for field in chosen.need:
             usable &= field.of(values) > 0
-        return Judged(usable=usable, lost=lost, water=told & (self.water.of(values) > 0))
+        none = np.zeros(values.shape, dtype=np.bool_)
+        water = none if self.water is None else told & (self.water.of(values) > 0)
+        return Judged(usable=usable, lost=lost, water=water)
 
     def unknown(self, values: Integers) -> bool:
         """Return whether any value is none that this layer can have."""
@@ -111,6 +117,8 @@ class BitLayer:
 
     def _possible(self, values: Integers) -> NDArray[np.bool_]:
         whole = (values >= 0) & (values < (1 << self.width))
+        if self.fill is None:
+            return np.asarray(whole)
         return np.asarray(whole & ((self.fill.of(values) == 0) | (values == self.outside)))
 
 
@@ -137,33 +145,32 @@ class SaturationLayer:
         return not bool(((values >= 0) & (values < (1 << self.width))).all())
 
 
-_FILL: Final = BitField(name="fill", bit=0)
-_DILATED_CLOUD: Final = BitField(name="dilated_cloud", bit=1)
-_CIRRUS: Final = BitField(name="cirrus", bit=2)
-_CLOUD: Final = BitField(name="cloud", bit=3)
-_SHADOW: Final = BitField(name="cloud_shadow", bit=4)
-_SNOW: Final = BitField(name="snow", bit=5)
+_FILL: Final = BitField(name="fill", bit=0, loss=Loss.NODATA)
+_DILATED_CLOUD: Final = BitField(name="dilated_cloud", bit=1, loss=Loss.CLOUD)
+_CIRRUS: Final = BitField(name="cirrus", bit=2, loss=Loss.CLOUD)
+_CLOUD: Final = BitField(name="cloud", bit=3, loss=Loss.CLOUD)
+_SHADOW: Final = BitField(name="cloud_shadow", bit=4, loss=Loss.SHADOW)
+_SNOW: Final = BitField(name="snow", bit=5, loss=Loss.SNOW)
 _WATER: Final = BitField(name="water", bit=7)
-_CLOUD_CONFIDENCE: Final = BitField(name="cloud_confidence", bit=8, width=2)
-_SHADOW_CONFIDENCE: Final = BitField(name="cloud_shadow_confidence", bit=10, width=2)
-_SNOW_CONFIDENCE: Final = BitField(name="snow_confidence", bit=12, width=2)
-_CIRRUS_CONFIDENCE: Final = BitField(name="cirrus_confidence", bit=14, width=2)
+_CLOUD_CONFIDENCE: Final = BitField(name="cloud_confidence", bit=8, width=2, loss=Loss.CLOUD)
+_SHADOW_CONFIDENCE: Final = BitField(
+    name="cloud_shadow_confidence", bit=10, width=2, loss=Loss.SHADOW
+)
+_SNOW_CONFIDENCE: Final = BitField(name="snow_confidence", bit=12, width=2, loss=Loss.SNOW)
+_CIRRUS_CONFIDENCE: Final = BitField(name="cirrus_confidence", bit=14, width=2, loss=Loss.CLOUD)
 _MEDIUM: Final = 2
 _HIGH: Final = 3
 
-_NO_DATA = (Drop(field=_FILL, loss=Loss.NODATA),)
-_CLOUD_BITS = tuple(
-    Drop(field=field, loss=Loss.CLOUD) for field in (_CLOUD, _DILATED_CLOUD, _CIRRUS)
-)
+_NO_DATA = (Drop(field=_FILL),)
+_CLOUD_BITS = tuple(Drop(field=field) for field in (_CLOUD, _DILATED_CLOUD, _CIRRUS))
 _CLOUD_SURE = tuple(
-    Drop(field=field, at_least=_HIGH, loss=Loss.CLOUD)
-    for field in (_CLOUD_CONFIDENCE, _CIRRUS_CONFIDENCE)
+    Drop(field=field, at_least=_HIGH) for field in (_CLOUD_CONFIDENCE, _CIRRUS_CONFIDENCE)
 )
-_CLOUD_LIKELY = (Drop(field=_CLOUD_CONFIDENCE, at_least=_MEDIUM, loss=Loss.CLOUD),)
-_SHADOW_BIT = (Drop(field=_SHADOW, loss=Loss.SHADOW),)
-_SHADOW_SURE = (Drop(field=_SHADOW_CONFIDENCE, at_least=_HIGH, loss=Loss.SHADOW),)
-_SNOW_BIT = (Drop(field=_SNOW, loss=Loss.SNOW),)
-_SNOW_SURE = (Drop(field=_SNOW_CONFIDENCE, at_least=_HIGH, loss=Loss.SNOW),)
+_CLOUD_LIKELY = (Drop(field=_CLOUD_CONFIDENCE, at_least=_MEDIUM),)
+_SHADOW_BIT = (Drop(field=_SHADOW),)
+_SHADOW_SURE = (Drop(field=_SHADOW_CONFIDENCE, at_least=_HIGH),)
+_SNOW_BIT = (Drop(field=_SNOW),)
+_SNOW_SURE = (Drop(field=_SNOW_CONFIDENCE, at_least=_HIGH),)
 
 _IN_VIEW = (*_NO_DATA, *_CLOUD_BITS, *_CLOUD_SURE, *_SHADOW_BIT, *_SHADOW_SURE)
 _CLEAR = (*_IN_VIEW, *_SNOW_BIT, *_SNOW_SURE)
@@ -182,13 +189,31 @@ def _rules(*rules: BitRule) -> dict[str, BitRule]:
 QA_PIXEL: Final = BitLayer(
     id="qa_pixel",
     dtypes=("uint16", "uint32", "int32"),
-    fill=_FILL,
+    outside=1,
+    silent=frozenset({0}),  # real numbers state at least a low confidence
     width=16,
+    fields={
+        field.name: field
+        for field in (
+            _FILL,
+            _DILATED_CLOUD,
+            _CIRRUS,
+            _CLOUD,
+            _SHADOW,
+            _SNOW,
+            _WATER,
+            _CLOUD_CONFIDENCE,
+            _SHADOW_CONFIDENCE,
+            _SNOW_CONFIDENCE,
+            _CIRRUS_CONFIDENCE,
+        )
+    },
+    fill=_FILL,
     water=_WATER,
     rules=_rules(
         BitRule(id="clear", drop=_CLEAR),
         BitRule(id="strict", drop=(*_NO_DATA, *_CLOUD_LIKELY, *_CLEAR)),
-        BitRule(id="land", drop=(*_CLEAR, Drop(field=_WATER, loss=None))),
+        BitRule(id="land", drop=(*_CLEAR, Drop(field=_WATER))),
         BitRule(
             id="water",
             drop=(*_NO_DATA, *_CLOUD_BITS, *_SHADOW_BIT, *_SNOW_BIT),

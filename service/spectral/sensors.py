@@ -50,6 +50,8 @@ class Sensor:
         Stored numbers that mean "nothing here" and "too bright", None if not fixed.
     published
         Returns the published scaling for a processing baseline, or refuses.
+    version
+        Which version of a profile of one's own this is, from 1; None for a built-in one.
     """
 
     id: str
@@ -63,6 +65,7 @@ class Sensor:
     nodata: float | None
     saturated: float | None
     published: Callable[[str | None], Scaling]
+    version: int | None = None
 
     @property
     def roles(self) -> tuple[BandRole, ...]:

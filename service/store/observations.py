@@ -16,6 +16,7 @@ from service.store.batches import in_batches
 from service.store.bulk import advance_latest, insert_latest, insert_observations
 from service.store.looks import LOOK_SHARE, PASS_GAP, bucket_of, newest_looks
 from service.store.parcels import bump_revisions, in_force, intersects
+from service.store.sensors import SENSOR_VERSION
 from service.store.sessions import serialise
 from service.store.tables import Boundary, Latest, Layout, Observation, Parcel, Scene, Write
 
@@ -83,10 +84,23 @@ def _measured_outlines(session: Session, scene: Scene) -> dict[int, int]:
     query = (
         select(Observation.parcel_id, Observation.boundary_id)
         .join(Write, Write.id == Observation.write_id)
-        .where(Write.scene_id == scene.id, Write.closed_at.is_(None), Write.digest == scene.digest)
+        .where(
+            Write.scene_id == scene.id, Write.closed_at.is_(None), Write.digest == _content(scene)
+        )
         .order_by(Observation.write_id)
     )
     return dict(session.execute(query).all())
+
+
+def _content(scene: Scene) -> str:
+    """Return the digest of all that a scene's figures are made of.
+
+    That is what was sent, and the version of a profile of one's own that it is read by.
+    """
+    version = scene.details.get(SENSOR_VERSION)
+    if version is None:
+        return scene.digest
+    return hashlib.sha256(f"{scene.digest} {scene.sensor} {version}".encode()).hexdigest()
 
 
 def has_write(session: Session, scene: Scene, generation: int) -> bool:
@@ -102,11 +116,11 @@ def record(session: Session, scene: Scene, measured: Measured, *, at: datetime) 
     `lock_scene`, and must not have a write of this generation.
     """
     is_first = session.scalar(select(Write.id).where(Write.scene_id == scene.id)) is None
-    replaced = _current_writes(session, scene.id, other_than=scene.digest)
+    replaced = _current_writes(session, scene.id, other_than=_content(scene))
     write = Write(
         scene_id=scene.id,
         generation=scene.generation,
-        digest=scene.digest,
+        digest=_content(scene),
         layout_id=_layout(session, measured).id,
         scaling=dict(measured.scaling),
         recorded_at=at,

@@ -15,6 +15,7 @@ from service.errors import Conflict, NotFound
 from service.store.looks import PASS_GAP
 from service.store.observations import close_writes
 from service.store.parcels import Box
+from service.store.sensors import SENSOR_VERSION
 from service.store.sessions import serialise
 from service.store.tables import Boundary, GridRow, Observation, Scene, SceneFile, Write
 from service.zonal.grid import Grid
@@ -88,8 +89,10 @@ def keep_scene(session: Session, sent: SceneSent, *, at: datetime) -> tuple[Scen
     """Keep a scene and promise its ingest; return its row and whether work was promised.
 
     The same ref and content again promises nothing, unless the first try failed or was
-    withdrawn. Other content under the same ref, or another ref for the same tile and pass,
-    needs `replace`; its figures then supersede the old ones in one step, once measured.
+    withdrawn, or `replace` is said and the sensor's profile has a newer version by now; it is
+    read by that version then. Other content under the same ref, or another ref for the same
+    tile and pass, needs `replace`; its figures then supersede the old ones in one step, once
+    measured.
 
     Raises
     ------
@@ -100,7 +103,8 @@ def keep_scene(session: Session, sent: SceneSent, *, at: datetime) -> tuple[Scen
     serialise(session, "scenes")
     row = session.scalar(select(Scene).where(Scene.ref == sent.ref))
     if row is not None and row.digest == sent.digest and row.state in (*_LIVE, SceneState.FAILED):
-        if row.state == SceneState.FAILED:
+        if row.state == SceneState.FAILED or (sent.replace and _is_outdated(row, sent)):
+            row.details = dict(sent.details)
             _requeue(session, row, at=at)
             return row, True
         return row, False
@@ -119,6 +123,11 @@ def _differs(row: Scene | None, sent: SceneSent) -> bool:
     if row is None:
         return False
     return row.digest != sent.digest or row.state == SceneState.SUPERSEDED
+
+
+def _is_outdated(row: Scene, sent: SceneSent) -> bool:
+    """Whether the sensor's profile has another version than when the scene was received."""
+    return row.details.get(SENSOR_VERSION) != sent.details.get(SENSOR_VERSION)
 
 
 def _must_replace(rival: Scene | None) -> Conflict:
