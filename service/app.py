@@ -36,6 +36,7 @@ from service.jobs.worker import Worker
 from service.settings import Settings
 from service.store.sessions import Sessions, migrate, open_engine
 from service.tiles.archive import Archive
+from service.tiles.assets import Assets
 
 _ROUTERS = (
     keys,
@@ -95,7 +96,7 @@ def create_app(settings: Settings) -> FastAPI:
         lifespan=lifespan,
     )
     app.state.claim = worker.claim
-    app.state.context = Context(work=work, queue=worker)
+    app.state.context = Context(work=work, queue=worker, assets=Assets(settings))
     for module in _ROUTERS:
         app.include_router(module.router)
     answer_problems(app)

@@ -98,8 +98,15 @@ class Conflict(FurrowlightError):
 class Unavailable(FurrowlightError):
     """The service can't do this now; the same request will work later."""
 
-    def __init__(self, code: str, detail: str, *, retry_after_seconds: int = 30) -> None:
-        super().__init__(code, detail)
+    def __init__(
+        self,
+        code: str,
+        detail: str,
+        *,
+        retry_after_seconds: int = 30,
+        faults: Sequence[Fault] = (),
+    ) -> None:
+        super().__init__(code, detail, faults)
         self.retry_after_seconds = retry_after_seconds
 
 

@@ -3,6 +3,7 @@
 from ipaddress import ip_network
 from pathlib import Path
 from typing import Annotated
+from urllib.parse import urlsplit
 
 from pydantic import Field, field_validator
 from pydantic_settings import BaseSettings, NoDecode, SettingsConfigDict
@@ -79,6 +80,39 @@ class Settings(BaseSettings):
         description="Networks (CIDR, comma-separated) that webhooks may reach beyond public "
         "addresses, also by plain http.",
     )
+    asset_folders: Annotated[tuple[Path, ...], NoDecode] = Field(
+        default=(),
+        description="Folders (absolute, comma-separated) whose files STAC Items may name by "
+        "`file:` addresses.",
+    )
+    asset_hosts: Annotated[tuple[str, ...], NoDecode] = Field(
+        default=(),
+        description="Hosts (comma-separated, with a port if it is not the usual one) from which "
+        "the assets of STAC Items are fetched by https.",
+    )
+    asset_networks: Annotated[tuple[str, ...], NoDecode] = Field(
+        default=(),
+        description="Networks (CIDR, comma-separated) in which those hosts, and the object store, "
+        "may lie beyond public addresses, also by plain http.",
+    )
+    asset_certificates: Path | None = Field(
+        default=None,
+        description="File of further certificate authorities (PEM) that those hosts may have.",
+    )
+    asset_buckets: Annotated[tuple[str, ...], NoDecode] = Field(
+        default=(),
+        description="Buckets (comma-separated) of the object store from which the assets of STAC "
+        "Items are fetched; needs the extra `object-stores`.",
+    )
+    asset_store_endpoint: str = Field(
+        default="", description="Address of the object store; empty means the environment's."
+    )
+    asset_seconds: float = Field(
+        default=300.0, gt=0, le=3600, description="Longest time to fetch all assets of an Item."
+    )
+    asset_fetches: int = Field(
+        default=2, ge=1, le=16, description="Items whose assets are fetched at a time."
+    )
     delivery_wait_scale: float = Field(
         default=1.0, gt=0, le=10, description="Stretches the waits between delivery attempts."
     )
@@ -90,17 +124,42 @@ class Settings(BaseSettings):
     )
     log_level: str = Field(default="info", pattern="^(debug|info|warning|error)$")
 
-    @field_validator("allowed_origins", "webhook_networks", mode="before")
+    @field_validator(
+        "allowed_origins",
+        "webhook_networks",
+        "asset_folders",
+        "asset_hosts",
+        "asset_networks",
+        "asset_buckets",
+        mode="before",
+    )
     @classmethod
     def _split(cls, value: object) -> object:
         if isinstance(value, str):
             return tuple(part.strip() for part in value.split(",") if part.strip())
         return value
 
-    @field_validator("webhook_networks")
+    @field_validator("webhook_networks", "asset_networks")
     @classmethod
     def _are_networks(cls, value: tuple[str, ...]) -> tuple[str, ...]:
         return tuple(str(ip_network(text)) for text in value)
+
+    @field_validator("asset_folders")
+    @classmethod
+    def _are_absolute(cls, value: tuple[Path, ...]) -> tuple[Path, ...]:
+        if not all(folder.is_absolute() for folder in value):
+            raise ValueError("name folders from the root, such as /srv/scenes")
+        return value
+
+    @field_validator("asset_hosts")
+    @classmethod
+    def _are_hosts(cls, value: tuple[str, ...]) -> tuple[str, ...]:
+        for text in value:
+            parts = urlsplit(f"//{text}")
+            if not parts.hostname or parts.netloc != text or parts.username is not None:
+                raise ValueError("name hosts alone, such as tiles.example or tiles.example:8443")
+            _ = parts.port  # refuses what is no port
+        return value
 
     @property
     def season_starts(self) -> tuple[str, str]:

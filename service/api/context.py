@@ -16,6 +16,7 @@ from service.settings import Settings
 from service.store.keys import Scope, find_valid_key
 from service.store.sessions import Sessions
 from service.tiles.archive import Archive
+from service.tiles.assets import Assets
 
 
 class Queue(Protocol):
@@ -42,11 +43,13 @@ class Context:
     """The running service, as the handlers see it.
 
     Handlers open their own sessions, so that a write is committed before its answer is made.
-    The queue takes committed promises of scenes, of deliveries, of imports and of judging.
+    The queue takes committed promises of scenes, of deliveries, of imports and of judging;
+    the assets of STAC Items are fetched through `assets`.
     """
 
     work: Resources
     queue: Queue
+    assets: Assets
 
     def promise(self, scene_id: int, generation: int) -> None:
         """Hand a scene's promised ingest to the queue."""

@@ -2,7 +2,6 @@
 
 import html
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from http import HTTPStatus
 from typing import Any, Final
 
@@ -12,6 +11,7 @@ from fastapi.exceptions import RequestValidationError
 from fastapi.responses import HTMLResponse, JSONResponse, Response
 from starlette.exceptions import HTTPException
 
+from service.api.problem_kinds import ITEM_KINDS, Kind
 from service.errors import (
     MAX_ERRORS,
     Conflict,
@@ -33,15 +33,6 @@ _STATUS_BY_KIND: Final[Mapping[type[FurrowlightError], int]] = {
     Conflict: 409,
     Unavailable: 503,
 }
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Kind:
-    """A kind of problem: its title, what its page says, and a status if not its error's."""
-
-    title: str
-    page: str
-    status: int | None = None
 
 
 KINDS: Final[Mapping[str, Kind]] = {
@@ -263,6 +254,7 @@ KINDS: Final[Mapping[str, Kind]] = {
         status=500,
         page="The service has a fault; its log tells more under the request's or scene's id.",
     ),
+    **ITEM_KINDS,
 }
 
 router = APIRouter(include_in_schema=False)

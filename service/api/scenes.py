@@ -1,6 +1,7 @@
 """Scenes: received, listed, retried, withdrawn; what became of them and of their parcels."""
 
 from collections.abc import Collection, Iterable
+from contextlib import ExitStack
 from datetime import datetime
 from itertools import islice
 from typing import Annotated, Any, Literal
@@ -13,13 +14,14 @@ from sqlalchemy.orm import Session
 from starlette.concurrency import run_in_threadpool
 
 from service.api.context import Caller, Context, Ctx, Ingester, Reader
+from service.api.items import ItemReceived, faults_of_item
 from service.api.once import Once, OnceOnly, json_answer
 from service.api.paging import Cursor, Limit, foreign_cursor, link_next, place_in
 from service.api.preferences import Wait, is_settled
 from service.api.problems import problem_document, status_of
 from service.api.routes import contract_router, takes
-from service.api.scene_checks import checked_scene
-from service.api.uploads import SceneReceived, SceneUpload
+from service.api.scene_bodies import MEDIA_TYPES, SceneBody, fingerprint_of, ready, ref_of
+from service.api.uploads import SceneReceived
 from service.api.wire import InstantOut, QueryBox, QueryInstant, Text, instant_from, written
 from service.clock import now
 from service.errors import RejectedInput
@@ -40,6 +42,14 @@ from service.store.sensors import SENSOR_VERSION
 from service.store.tables import Parcel, Scene
 
 router = contract_router("/scenes", "scenes")
+
+
+class FoundOut(BaseModel):
+    """Which asset of a STAC Item a part is, and what told it."""
+
+    part: str
+    asset: str
+    by: str
 
 
 class SceneOut(BaseModel):
@@ -67,6 +77,8 @@ class SceneOut(BaseModel):
     alerts_opened: int | None
     indices: dict[str, Any] | None
     seconds: dict[str, float] | None
+
+    found: list[FoundOut] | None
 
 
 class ScenesOut(BaseModel):
@@ -121,6 +133,7 @@ def _out(session: Session, row: Scene, caller: Caller) -> SceneOut:
         changed_at=row.changed_at,
         supersedes=replaced.ref if replaced else None,
         failure=_failure(row),
+        found=row.found,
         **{name: report.get(name) for name in _REPORT},
     )
 
@@ -140,13 +153,13 @@ def _failure(row: Scene) -> dict[str, Any] | None:
     """Return the problem document that the POST would have got, had the headers shown it."""
     if row.failure is None:
         return None
-    code = row.failure["code"]
+    code, errors = row.failure["code"], row.failure["errors"]
     return problem_document(
         code,
         row.failure["detail"],
         status=status_of(code, RejectedInput),
         instance=_address(row),
-        errors=row.failure["errors"],
+        errors=errors if row.found is None else faults_of_item(errors, row.found, row.details),
     )
 
 
@@ -154,13 +167,11 @@ def _address(row: Scene) -> str:
     return f"/v1/scenes/{quote(row.ref, safe='')}"
 
 
-@router.post(
-    "", status_code=202, response_model=SceneOut, openapi_extra=takes("multipart/form-data")
-)
+@router.post("", status_code=202, response_model=SceneOut, openapi_extra=takes(*MEDIA_TYPES))
 async def receive_scene(
-    caller: Ingester, received: SceneUpload, context: Ctx, once: OnceOnly, wait: Wait
+    caller: Ingester, received: SceneBody, context: Ctx, once: OnceOnly, wait: Wait
 ) -> Response:
-    """Keep a scene and promise its ingest.
+    """Keep a scene, sent as parts or as a STAC Item, and promise its ingest.
 
     The row in state `queued` is the promise: it commits before the answer, and the sweep
     enqueues it should this process die before the next line. The same content sent again
@@ -171,14 +182,18 @@ async def receive_scene(
 
 
 def _keep(
-    received: SceneReceived, caller: Caller, context: Context, once: Once
+    received: SceneReceived | ItemReceived, caller: Caller, context: Context, once: Once
 ) -> tuple[str, Response]:
     caller.must_see_all("a scene")
     at = now()
-    sent, paths = checked_scene(received, context.sessions, at=at)
-    for file in sent.files:
-        context.archive.keep(paths[file.part], file.digest)
-    fingerprint = f"{sent.ref}\n{sent.digest}\n{sent.replace}"
+    if (known := fingerprint_of(received)) is not None:
+        # A retry of the same Item fetches nothing.
+        with context.sessions.writing() as session:
+            if (first := once.replay(session, caller, known)) is not None:
+                return ref_of(received), first
+    with ExitStack() as stack:
+        sent = ready(received, context, stack, at=at)
+    fingerprint = known or f"{sent.ref}\n{sent.digest}\n{sent.replace}"
     with context.sessions.writing() as session:
         if (first := once.replay(session, caller, fingerprint)) is not None:
             return sent.ref, first

@@ -1,15 +1,14 @@
 """Receiving a scene: multipart parts streamed to the archive's incoming files while hashed."""
 
-from collections.abc import AsyncIterator
 from contextlib import ExitStack
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Annotated, Final
+from typing import Final
 
-from fastapi import Depends, Request
+from fastapi import Request
 
 from service.api.bodies import JSON_LIMIT_BYTES
-from service.api.context import Ctx
+from service.api.context import Context
 from service.api.multipart import FileSink, Sink, TextSink, receive_parts
 from service.errors import RejectedInput, Unavailable
 from service.settings import Settings
@@ -108,12 +107,9 @@ def check_disk(archive: Archive, settings: Settings) -> None:
         )
 
 
-async def _receive(request: Request, context: Ctx) -> AsyncIterator[SceneReceived]:
-    with ExitStack() as stack:
-        parts = _SceneParts(context.archive, context.settings, stack)
-        limit = context.settings.scene_upload_limit_bytes
-        await receive_parts(request, parts.open, limit=limit)
-        yield parts.received()
-
-
-SceneUpload = Annotated[SceneReceived, Depends(_receive)]
+async def parts_received(request: Request, context: Context, stack: ExitStack) -> SceneReceived:
+    """Return a scene's parts; their files end with the stack."""
+    parts = _SceneParts(context.archive, context.settings, stack)
+    limit = context.settings.scene_upload_limit_bytes
+    await receive_parts(request, parts.open, limit=limit)
+    return parts.received()

@@ -13,7 +13,14 @@ import httpcore
 import httpx
 
 from service.egress.addresses import Network
-from service.egress.targets import Resolver, port_of, read_url, system_resolver, vetted
+from service.egress.targets import (
+    MAX_URL_CHARACTERS,
+    Resolver,
+    port_of,
+    read_url,
+    system_resolver,
+    vetted,
+)
 from service.egress.wire import AnswerTooLong, Deadline, Dialer, PinnedBackend, TlsFailed, dial
 from service.errors import Unavailable
 
@@ -22,16 +29,26 @@ TLS_FAILED: Final = "tls-failed"
 TIMED_OUT: Final = "timed-out"
 BROKEN_ANSWER: Final = "broken-answer"
 
+# Unpacked bodies are not bounded by what was sent.
+FIXED_HEADERS: Final[Mapping[str, str]] = {
+    "accept-encoding": "identity",
+    "connection": "close",
+    "user-agent": "Furrowlight",
+}
 # Room for status line, headers and chunk marks beside the kept part of the body.
 _OVERHEAD_BYTES: Final = 128 * 1024
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Limits:
-    """What one request may take: seconds in all, name look-up included, and bytes of body."""
+    """What one request may take: seconds in all, name look-up included, and bytes of body.
+
+    Signed addresses of files are long, so their requests may have more characters.
+    """
 
     seconds: float
     answer_bytes: int
+    url_characters: int = MAX_URL_CHARACTERS
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -91,7 +108,7 @@ class GuardedTransport(httpx.BaseTransport):
             No answer, or none that is HTTP.
         """
         deadline = Deadline(self.limits.seconds)
-        url = read_url(str(request.url))
+        url = read_url(str(request.url), longest=self.limits.url_characters)
         addresses = vetted(url, self._allowed, resolve=self._resolve, seconds=self.limits.seconds)
         backend = PinnedBackend(
             addresses,
@@ -130,9 +147,9 @@ def send(
     Unavailable
         No answer within the time, or none that is HTTP.
     """
-    # Unpacked bodies are not bounded by what was sent.
-    fixed = {"accept-encoding": "identity", "connection": "close", "user-agent": "Furrowlight"}
-    request = httpx.Request(method, read_url(url), headers={**fixed, **headers}, content=content)
+    request = httpx.Request(
+        method, read_url(url), headers={**FIXED_HEADERS, **headers}, content=content
+    )
     response = transport.handle_request(request)
     try:
         body, is_complete = _first(response, transport.limits.answer_bytes)

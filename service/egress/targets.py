@@ -65,10 +65,10 @@ def check_address(
         raise RejectedInput.at(pointer, error.detail, code=error.code) from error
 
 
-def read_url(url: str) -> httpx.URL:
+def read_url(url: str, *, longest: int = MAX_URL_CHARACTERS) -> httpx.URL:
     """Read a URL, strictly: what is read here is what the request is sent to."""
-    if len(url) > MAX_URL_CHARACTERS:
-        raise _invalid(f"The address is longer than {MAX_URL_CHARACTERS} characters; shorten it.")
+    if len(url) > longest:
+        raise _invalid(f"The address is longer than {longest} characters; shorten it.")
     try:
         target = httpx.URL(url)
     except (httpx.InvalidURL, ValueError) as error:

@@ -12,7 +12,8 @@ _SENTINEL_2: Final = "sentinel-2"
 _BASELINE: Final = re.compile(r"[0-9]{2}\.[0-9]{2}")
 _LEVEL_1: Final = re.compile(r"L(?:EVEL)?[-_ ]?[01]|MSI1", re.IGNORECASE)
 _LEVELS: Final = ("processing:level", "s2:product_type", "landsat:correction")
-_GRID: Final = re.compile(r"(MGRS|WRS[12])-(.+)", re.IGNORECASE)
+_MGRS: Final = re.compile(r"(?:MGRS-|T)?([0-9]{1,2}[C-HJ-NP-X][A-HJ-NP-Z]{2})", re.IGNORECASE)
+_WRS: Final = re.compile(r"WRS[12]-([0-9]{6})", re.IGNORECASE)
 
 
 def sensor_of(properties: Node) -> tuple[Sensor, str | None]:
@@ -85,15 +86,20 @@ def acquired_at(properties: Node) -> str:
 
 
 def tile_of(properties: Node) -> str | None:
-    """Return the tile by the agency's grid: 33UVR, or path and row as 190026; None if unsaid."""
+    """Return the tile as the agencies' products name it, None if it is not said.
+
+    That is T and the square of the military grid (T33UVR), or path and row (190026); another
+    grid's code stays as it is.
+    """
     code = properties.member("grid:code").text()
-    if code is not None:
-        match = _GRID.fullmatch(code)
-        return match[2].upper() if match else code
-    tile = properties.member("s2:mgrs_tile").text()
-    if tile is not None:
-        return tile.upper()
-    return _path_and_row(properties) or _mgrs(properties)
+    if code is not None and (match := _WRS.fullmatch(code)):
+        return match[1]
+    squares = (code, properties.member("s2:mgrs_tile").text(), _mgrs(properties))
+    square = next((text for text in squares if text is not None), None)
+    if square is None:
+        return _path_and_row(properties)
+    match = _MGRS.fullmatch(square)
+    return f"T{match[1].upper().zfill(5)}" if match else square
 
 
 def _path_and_row(properties: Node) -> str | None:
@@ -110,7 +116,7 @@ def _mgrs(properties: Node) -> str | None:
     zone = _digits(properties.member("mgrs:utm_zone"))
     band = properties.member("mgrs:latitude_band").text()
     square = properties.member("mgrs:grid_square").text()
-    return f"{zone.zfill(2)}{band}{square}".upper() if zone and band and square else None
+    return f"{zone}{band}{square}" if zone and band and square else None
 
 
 def _digits(node: Node) -> str | None:

@@ -47,7 +47,10 @@ class FileSent:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class SceneSent:
-    """A scene as sent: checked, hashed, its files kept."""
+    """A scene as sent: checked, hashed, its files kept.
+
+    `found` says how each part was found, for a scene that did not come as parts.
+    """
 
     ref: str
     sensor: str
@@ -61,6 +64,7 @@ class SceneSent:
     footprint: Box
     files: Sequence[FileSent]
     replace: bool
+    found: Sequence[Mapping[str, str]] | None = None
 
 
 def get_scene(session: Session, ref: str) -> Scene:
@@ -186,6 +190,7 @@ def _written(session: Session, row: Scene | None, sent: SceneSent, *, at: dateti
     row.sensor, row.platform, row.tile = sent.sensor, sent.platform, sent.tile
     row.acquired_at, row.processing_baseline = sent.acquired_at, sent.processing_baseline
     row.details, row.digest, row.grid = dict(sent.details), sent.digest, grid
+    row.found = None if sent.found is None else [dict(one) for one in sent.found]
     kept = {file.part: file for file in row.files}
     row.files = [
         _file_row(kept.get(file.part), file) for file in sorted(sent.files, key=lambda f: f.part)

@@ -193,6 +193,7 @@ class Scene(Base):
     progress: Mapped[float] = mapped_column(Float(53))
     report: Mapped[dict[str, Any] | None] = mapped_column(JSON(none_as_null=True))
     failure: Mapped[dict[str, Any] | None] = mapped_column(JSON(none_as_null=True))
+    found: Mapped[list[dict[str, str]] | None] = mapped_column(JSON(none_as_null=True))
     received_at: Mapped[datetime]
     changed_at: Mapped[datetime]
 

@@ -71,7 +71,7 @@ def test_an_item_of_sentinel_2_is_a_scene_with_all_of_its_bands(version: str) ->
         "sensor": "sentinel-2-l2a",
         "platform": "sentinel-2b",
         "acquired_at": "2024-06-03T10:10:31Z",
-        "tile": "33UVR",
+        "tile": "T33UVR",
         "processing_baseline": "05.10",
     }
     assert by_part(product) == {
@@ -618,14 +618,14 @@ def test_a_landsat_flag_of_another_sensor_changes_nothing() -> None:
 @pytest.mark.parametrize(
     ("properties", "tile"),
     [
-        ({"grid:code": "MGRS-33UVR"}, "33UVR"),
+        ({"grid:code": "MGRS-33UVR"}, "T33UVR"),
         ({"grid:code": "WRS2-190026"}, "190026"),
         ({"grid:code": "own-7"}, "own-7"),
-        ({"s2:mgrs_tile": "33UVR"}, "33UVR"),
+        ({"s2:mgrs_tile": "33UVR"}, "T33UVR"),
         ({"landsat:wrs_path": 9, "landsat:wrs_row": "026"}, "009026"),
         (
             {"mgrs:utm_zone": 5, "mgrs:latitude_band": "Q", "mgrs:grid_square": "KB"},
-            "05QKB",
+            "T05QKB",
         ),
         ({}, None),
     ],
