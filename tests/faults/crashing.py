@@ -19,6 +19,7 @@ from dbos import DBOS
 
 import service.api.scenes
 import service.cli
+import service.cli.pushing
 import service.jobs.assess
 import service.jobs.deliver
 import service.jobs.ingest
@@ -26,6 +27,7 @@ import service.jobs.measuring
 import service.jobs.parcel_files
 import service.jobs.parcel_import
 import service.jobs.upkeep
+import service.products.places
 import service.store.observations
 
 
@@ -47,13 +49,16 @@ def before(owner: Any, name: str, *, times: int = 1, act: Callable[[], None] = d
     setattr(owner, name, acting)
 
 
-def after(owner: Any, name: str) -> None:
-    """Die when a function has done its work, before its caller learns of it."""
+def after(owner: Any, name: str, *, times: int = 1) -> None:
+    """Die when a function has done its work for the so-manieth time, its caller not told."""
     wrapped = getattr(owner, name)
+    calls = count(start=1)
 
-    def dying(*args: Any, **kwargs: Any) -> None:
-        wrapped(*args, **kwargs)
-        die()
+    def dying(*args: Any, **kwargs: Any) -> Any:
+        done = wrapped(*args, **kwargs)
+        if next(calls) == times:
+            die()
+        return done
 
     setattr(owner, name, dying)
 
@@ -103,6 +108,11 @@ POINTS: Final[Mapping[str, Callable[[], None]]] = {
     "half-a-file": partial(before, service.jobs.parcel_files, "_change", times=6_000),
     "parcels-not-committed": partial(after, service.jobs.parcel_import, "keep_parcels"),
     "import-not-noted": partial(after, service.jobs.parcel_import, "_kept"),
+    # Pushing, the client's own end: of ten products the fourth half sent (of each the two files
+    # of metadata are read first, then twelve files are hashed and sent); the fourth answered,
+    # and nobody told.
+    "half-a-body": partial(before, service.products.places.Span, "chunks", times=20 + 3 * 24 + 18),
+    "answered-not-told": partial(after, service.cli.pushing, "answer_of", times=4),
     # Starting: among the first tables, before the queue's engine, with the engine running.
     "migrating": partial(before, alembic.op, "create_table", times=5),
     "before-engine": partial(before, DBOS, "launch"),
