@@ -54,5 +54,7 @@ def _feature(row: Parcel, boundary: Boundary, crop: str | None) -> dict[str, Any
 
 def geometry_of(boundary: Boundary) -> dict[str, Any]:
     """Return a boundary as GeoJSON geometry."""
-    geometry: dict[str, Any] = json.loads(shapely.to_geojson(shapely.from_wkb(boundary.wkb)))
+    # What is stored is in a normal form, whose exterior rings run clockwise.
+    outline = shapely.orient_polygons(shapely.from_wkb(boundary.wkb))
+    geometry: dict[str, Any] = json.loads(shapely.to_geojson(outline))
     return geometry

@@ -12,7 +12,7 @@ from service.store.parcels import Box
 
 _DAY: Final = re.compile(r"\d{4}-\d\d-\d\d", re.ASCII)
 _RFC3339: Final = re.compile(
-    r"(\d{4}-\d\d-\d\d)[Tt ](\d\d:\d\d):(\d\d)(\.\d+)?([Zz]|[+-]\d\d:\d\d)", re.ASCII
+    r"(\d{4}-\d\d-\d\d)[Tt ]((?:[01]\d|2[0-3]):\d\d):(\d\d)(\.\d+)?([Zz]|[+-]\d\d:\d\d)", re.ASCII
 )
 _FIRST_YEAR: Final = 1000
 _LAST_YEAR: Final = 9998
@@ -28,7 +28,8 @@ class Sent(BaseModel):
 def instant_from(text: object) -> datetime:
     """Return the instant that an RFC 3339 date-time names, in UTC.
 
-    A leap second counts as the first moment of the next minute.
+    A leap second counts as the first moment of the next minute. It is one only where there can
+    be one: in UTC the last second of a month (RFC 3339, section 5.7).
     """
     match = _RFC3339.fullmatch(text) if isinstance(text, str) else None
     if match is None:
@@ -46,7 +47,12 @@ def instant_from(text: object) -> datetime:
     if not _FIRST_YEAR <= parsed.year <= _LAST_YEAR:
         raise ValueError(f"send a year from {_FIRST_YEAR} to {_LAST_YEAR}")
     instant = parsed.astimezone(UTC)
-    return instant.replace(microsecond=0) + timedelta(seconds=1) if is_leap else instant
+    if not is_leap:
+        return instant
+    after = instant.replace(microsecond=0) + timedelta(seconds=1)
+    if (after.day, after.hour, after.minute) != (1, 0, 0):
+        raise ValueError("a 60th second is there at the end of a month in UTC only; check it")
+    return after
 
 
 def _instant_or_date(text: object) -> datetime:
