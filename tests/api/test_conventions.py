@@ -51,6 +51,7 @@ def upload(service: Service, request: httpx.Request, **headers: str) -> httpx.Re
 
 BULK, JSON = 64 * 1024**2, 2 * 1024**2
 JSON_TYPE = {"Content-Type": "application/json"}
+SCENE_TYPES = {"multipart/form-data", "application/json", "application/geo+json"}
 
 
 def too_much(size: int) -> Iterator[bytes]:
@@ -77,7 +78,7 @@ def test_every_kind_of_refusal_is_a_problem_whose_type_is_a_page(service: Servic
         (call("PUT", "/v1/parcels", content="{", headers=JSON_TYPE), 400, "malformed-json"),
         (call("POST", "/v1/keys", content="[" * 99_999, headers=JSON_TYPE), 400, "malformed-body"),
         (call("POST", "/v1/keys", content="{}"), 415, "unsupported-media-type"),
-        (call("POST", "/v1/scenes", json={}), 415, "unsupported-media-type"),
+        (call("POST", "/v1/scenes", content="{}"), 415, "unsupported-media-type"),
         (call("PUT", "/v1/parcels", content="a,b"), 415, "unsupported-media-type"),
         (call("POST", "/v1/keys", json={}), 422, "invalid-input"),
         (call("PUT", "/v1/parcels", json={}), 422, "invalid-input"),
