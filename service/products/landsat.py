@@ -4,7 +4,6 @@ Source: USGS, Landsat Collection 2 Level-2 data format control books (LSDS-1618 
 4 to 7, LSDS-1619 for 8 and 9); names of keys of the quality layers' files from memory.
 """
 
-import math
 import re
 import tarfile
 from collections.abc import Mapping
@@ -25,6 +24,7 @@ from service.products.places import (
     written,
 )
 from service.products.product import Found, Product
+from service.products.stated import scaling_part
 from service.spectral.bands import Band
 from service.spectral.gathered import QUALITY, SATURATION
 from service.spectral.scaling import Scaling
@@ -69,9 +69,7 @@ def is_landsat(folder: Path) -> bool:
 def read_landsat(path: Path) -> Product[Span]:
     """Return what a bundle holds, in a folder or a tar.
 
-    The scaling is read from the Level-2 groups. Where it is the published one nothing is
-    sent; where it differs, the product's own word goes along as ``scaling``, since it says
-    how these very numbers were stored.
+    The scaling is read from the Level-2 groups; those of Level-1 have the same keys.
 
     Raises
     ------
@@ -91,14 +89,16 @@ def read_landsat(path: Path) -> Product[Span]:
         raise incomplete(
             f"The metadata list files that are not there or are empty: {', '.join(missing)}."
         )
-    scaling = _own_scaling(groups, sensor, layers)
+    stated = {
+        band.role: _stated(groups, band) for band in sensor.bands if band.role.value in layers
+    }
     scene: dict[str, Any] = {
         "ref": tokens["ref"],
         "sensor": LANDSAT_C2_L2.id,
         "acquired_at": written(sensed_at),
         "platform": _platform(attributes),
         "tile": tokens["tile"],
-        **({"scaling": scaling} if scaling else {}),
+        **scaling_part(stated, sensor, processing_baseline=None),
     }
     sent = {layer.file for layer in layers.values()}
     return Product(
@@ -242,22 +242,6 @@ def _bare(name: str) -> str:
             "its source."
         )
     return name
-
-
-def _own_scaling(groups: Groups, sensor: Sensor, layers: Mapping[str, _Listed]) -> dict[str, Any]:
-    """Return by band role the scaling that the product states, where it is not the published."""
-    found = {}
-    for band in sensor.bands:
-        if band.role.value not in layers:
-            continue
-        own = _stated(groups, band)
-        published = sensor.scaling(band.role, processing_baseline=None)
-        if not (
-            math.isclose(own.scale, published.scale, rel_tol=1e-9)
-            and math.isclose(own.offset, published.offset, rel_tol=1e-9, abs_tol=1e-12)
-        ):
-            found[band.role.value] = {"scale": own.scale, "offset": own.offset}
-    return found
 
 
 def _stated(groups: Groups, band: Band) -> Scaling:

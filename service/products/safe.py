@@ -28,7 +28,9 @@ from service.products.places import (
     written,
 )
 from service.products.product import Found, Product
+from service.products.stated import scaling_part
 from service.spectral.gathered import QUALITY
+from service.spectral.roles import BandRole
 from service.spectral.scaling import Scaling
 from service.spectral.sensors import SENTINEL_2_L2A
 
@@ -40,13 +42,13 @@ _METADATA_LIMIT: Final = 16 * 2**20
 
 _NAME: Final = re.compile(
     r"(?P<ref>S(?P<unit>2[A-Z])_MSIL(?P<level>1C|2A)_[0-9]{8}T[0-9]{6}"
-    r"_N(?P<baseline>[0-9]{4})_R[0-9]{3}_T(?P<tile>[0-9]{2}[A-Z]{3})_[0-9]{8}T[0-9]{6})(\.SAFE)?"
+    r"_N(?P<baseline>[0-9]{4})_R[0-9]{3}_(?P<tile>T[0-9]{2}[A-Z]{3})_[0-9]{8}T[0-9]{6})(\.SAFE)?"
 )
 _IMAGE: Final = re.compile(
     r"GRANULE/(?P<granule>[^/]+)/IMG_DATA/(?:R[0-9]+m/)?"
     r"[^/]+_(?P<key>B[0-9][0-9A]|SCL|AOT|WVP|TCI)_(?P<metres>10|20|60)m"
 )
-_GRANULE: Final = re.compile(r"L2A_T(?P<tile>[0-9]{2}[A-Z]{3})_.+")
+_GRANULE: Final = re.compile(r"L2A_(?P<tile>T[0-9]{2}[A-Z]{3})_.+")
 _SCL: Final = "SCL"
 # By band id, where the metadata don't say themselves.
 _BAND_IDS: Final = ("1", "2", "3", "4", "5", "6", "7", "8", "8A", "9", "10", "11", "12")
@@ -108,7 +110,7 @@ def read_safe(folder: Path) -> Product[Span]:
         "processing_baseline": baseline,
         "platform": _platform(root, name["unit"]),
         "tile": name["tile"],
-        "scaling": _scaling_part(scalings),
+        **scaling_part(scalings, SENTINEL_2_L2A, processing_baseline=baseline),
     }
     parts = _parts(images)
     return Product(
@@ -300,7 +302,7 @@ def _files(folder: Path, images: Mapping[str, _Image]) -> dict[str, Span]:
     return {key: Span.whole(path) for key, (_, path) in paths.items() if path is not None}
 
 
-def _scalings(root: Any, baseline: str, images: Mapping[str, _Image]) -> dict[str, Scaling]:
+def _scalings(root: Any, baseline: str, images: Mapping[str, _Image]) -> dict[BandRole, Scaling]:
     """Return by band role the scaling that the metadata state: (number + offset) / divisor."""
     characteristics = "Product_Image_Characteristics"
     divisor = _number(
@@ -326,7 +328,7 @@ def _scalings(root: Any, baseline: str, images: Mapping[str, _Image]) -> dict[st
                 f"The metadata do not state BOA_ADD_OFFSET of {image.key}, which a product of "
                 f"baseline {baseline} needs. Fetch the product again from its source."
             )
-        found[part] = Scaling(scale=1 / divisor, offset=offset / divisor)
+        found[BandRole(part)] = Scaling(scale=1 / divisor, offset=offset / divisor)
     return found
 
 
@@ -361,16 +363,6 @@ def _no_number() -> RejectedInput:
         f"{METADATA} states a scale or an offset that is no such number. Fetch the product again "
         "from its source."
     )
-
-
-def _scaling_part(scalings: Mapping[str, Scaling]) -> dict[str, Any]:
-    """Return the scaling as the ``scene`` part has it: one, or one for each band role."""
-    told = {
-        role: {"scale": scaling.scale, "offset": scaling.offset}
-        for role, scaling in scalings.items()
-    }
-    one = next(iter(told.values()))
-    return one if all(own == one for own in told.values()) else dict(told)
 
 
 def _left_out(images: Mapping[str, _Image]) -> dict[str, str]:
