@@ -4,6 +4,7 @@ The sensors are invented. Shares and reasons are counted by hand from the layers
 """
 
 import copy
+import json
 from collections.abc import Callable
 from datetime import UTC, datetime
 from pathlib import Path
@@ -822,3 +823,12 @@ def test_each_faulty_profile_is_refused_where_it_is_wrong_and_nothing_is_kept(
         "/bands/2/role",
         "/quality/rules/clear/keep/0",
     }
+
+
+def test_the_example_of_the_readme_is_a_sensor(service: Service) -> None:
+    readme = Path(__file__).parents[2].joinpath("README.md").read_text("utf-8")
+    example = readme.split("<!-- sensor:begin -->")[1].split("<!-- sensor:end -->")[0]
+    document = json.loads(example.split("-d '")[1].split("'")[0])
+    answer = put(service, document)
+    assert answer.status_code == 201, answer.text
+    assert answer.json()["quality_rules"] == ["clear", "dry"]
