@@ -530,7 +530,7 @@ def test_the_openapi_document_tells_of_every_address_as_it_is(service: Service) 
     for path, method, media_types in [
         ("/v1/parcels", "put", {"application/geo+json", "application/json"}),
         ("/v1/seasons", "post", {"application/json", "text/csv"}),
-        ("/v1/scenes", "post", {"multipart/form-data"}),
+        ("/v1/scenes", "post", SCENE_TYPES),
         ("/v1/keys", "post", {"application/json"}),
     ]:
         assert described[path][method]["requestBody"]["content"].keys() == media_types
