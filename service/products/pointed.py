@@ -13,6 +13,7 @@ from service.errors import RejectedInput, pointer_of
 
 LONGEST_TEXT: Final = 4_000
 _LONGEST_NAME: Final = 100
+_LONGEST_ARRAY: Final = 1_000
 # Above it a number is no scale, offset, wavelength or cell size, and a float may overflow.
 _LARGEST: Final = 1e12
 
@@ -77,6 +78,8 @@ class Node:
             return []
         if not isinstance(self.value, list):
             raise self.refused("A JSON array must stand here.")
+        if len(self.value) > _LONGEST_ARRAY:
+            raise self.refused(f"An array here is taken with up to {_LONGEST_ARRAY:,} items.")
         return [Node(value=item, place=(*self.place, at)) for at, item in enumerate(self.value)]
 
     def text(self) -> str | None:

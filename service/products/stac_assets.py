@@ -17,6 +17,7 @@ from service.products.pointed import Node, same
 CONTRADICTS: Final = "item-contradicts"
 _MOST_ASSETS: Final = 1_000
 _MOST_BANDS: Final = 64
+_MOST_BANDS_IN_ALL: Final = 2_000
 _ARRAYS: Final = ("bands", "eo:bands", "raster:bands")
 # A picture's bands are called red, green and blue too, and are no reflectance.
 _OTHER_ROLES: Final = ("thumbnail", "overview", "metadata", "visual")
@@ -49,7 +50,7 @@ class AssetBand:
     number: int
     node: Node
     properties: Node
-    entries: tuple[Node, Node, Node]
+    entries: tuple[Node, ...]
 
     @property
     def names(self) -> Iterable[Node]:
@@ -128,11 +129,16 @@ def assets_of(item: Node) -> tuple[list[Asset], dict[str, str]]:
     held = item.member("assets")
     if len(held.must_be_object().value) > _MOST_ASSETS:
         raise held.refused(f"An Item is taken with up to {_MOST_ASSETS:,} assets.")
-    found, left_out = [], {}
+    found: list[Asset] = []
+    left_out: dict[str, str] = {}
+    bands = 0
     for key, node in held.named():
         reason = _why_not(key, node.must_be_object())
         if reason is None:
             found.append(_asset(key, node, item.member("properties")))
+            bands += len(found[-1].bands)
+            if bands > _MOST_BANDS_IN_ALL:
+                raise held.refused(f"An Item is taken with up to {_MOST_BANDS_IN_ALL:,} bands.")
         else:
             left_out[key] = reason
     return found, left_out
@@ -161,22 +167,16 @@ def _is_geotiff(node: Node) -> bool | None:
 
 
 def _asset(key: str, node: Node, properties: Node) -> Asset:
-    arrays = [(name, node.member(name)) for name in _ARRAYS]
-    count = max([1, *(len(array.items()) for _, array in arrays)])
+    arrays = [node.member(name) for name in _ARRAYS]
+    entries = [array.items() for array in arrays]
+    count = max([1, *map(len, entries)])
     if count > _MOST_BANDS:
         raise node.refused(f"An asset is taken with up to {_MOST_BANDS} bands.")
+    padded = (_padded(array, held, count) for array, held in zip(arrays, entries, strict=True))
     bands = tuple(
-        AssetBand(
-            asset=key,
-            number=at + 1,
-            node=node,
-            properties=properties,
-            entries=(
-                _entry(arrays[0][1], at), _entry(arrays[1][1], at), _entry(arrays[2][1], at)
-            ),
-        )
-        for at in range(count)
-    )  # fmt: skip
+        AssetBand(asset=key, number=number, node=node, properties=properties, entries=(*told,))
+        for number, told in enumerate(zip(*padded, strict=True), start=1)
+    )
     return Asset(
         key=key,
         node=node,
@@ -186,10 +186,12 @@ def _asset(key: str, node: Node, properties: Node) -> Asset:
     )
 
 
-def _entry(array: Node, at: int) -> Node:
-    entries = array.items()
-    missing = Node(value=None, place=(*array.place, at))
-    return entries[at].must_be_object() if at < len(entries) else missing
+def _padded(array: Node, entries: list[Node], count: int) -> list[Node]:
+    """Return the entries of an array, and missing ones after them up to a count."""
+    missing = range(len(entries), count)
+    return [entry.must_be_object() for entry in entries] + [
+        Node(value=None, place=(*array.place, at)) for at in missing
+    ]
 
 
 def check_aligned(asset: Asset) -> None:

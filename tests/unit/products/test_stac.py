@@ -532,6 +532,34 @@ REFUSED: dict[str, tuple[Item, str, list[str]]] = {
         "invalid-input",
         ["/assets/B04"],
     ),
+    "bands without end": (
+        changed(sentinel_2(), setting("assets", "B04", "bands", to=[{}] * 100_000)),
+        "invalid-input",
+        ["/assets/B04/bands"],
+    ),
+    "many assets of many bands": (
+        changed(
+            sentinel_2(),
+            lambda item: item["assets"].update(
+                {f"x{at}": {"href": "a.tif", "bands": [{}] * 64} for at in range(100)}
+            ),
+        ),
+        "invalid-input",
+        ["/assets"],
+    ),
+    "more assets than any product has": (
+        changed(
+            sentinel_2(),
+            lambda item: item["assets"].update({f"x{at}": {} for at in range(1_000)}),
+        ),
+        "invalid-input",
+        ["/assets"],
+    ),
+    "links without end": (
+        changed(sentinel_2(), setting("links", to=[{}] * 100_000)),
+        "invalid-input",
+        ["/links"],
+    ),
     "a scale that is text": (
         changed(sentinel_2("1.0.0"), setting(*RED_1_0, "scale", to="0.0001")),
         "invalid-input",
