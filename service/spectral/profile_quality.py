@@ -26,6 +26,7 @@ _NAME: Final = re.compile(r"[a-z][a-z0-9_]{0,39}")
 _TAKEN: Final = frozenset({"none", *INDICES, *BandRole})
 _QUALITY: Final = "quality"
 _USUAL_TYPE: Final = "uint8"
+_LARGEST_CLASS: Final = 65_535
 
 
 def checked_layer(sent: Mapping[str, Any] | None, faults: list[Fault]) -> QualityLayer | None:
@@ -135,9 +136,13 @@ def _too_large(
         )
 
 
-def _class_layer(sent: Mapping[str, Any], faults: list[Fault]) -> QualityLayer:
+def _class_layer(sent: Mapping[str, Any], faults: list[Fault]) -> QualityLayer | None:
     dtype, nodata = sent.get("dtype") or _USUAL_TYPE, sent["nodata"]
     _too_large(nodata, dtype, faults, "nodata")
+    if max(nodata, *(one["value"] for one in sent["classes"])) > _LARGEST_CLASS:
+        detail = f"Numbers of classes, and `nodata` beside them, go up to {_LARGEST_CLASS:,} here."
+        _note(faults, "classes", detail=detail)
+        return None
     classes: dict[int, QualityClass] = {}
     for place, one in enumerate(sent["classes"]):
         value, loss = one["value"], _loss(one.get("loss"))

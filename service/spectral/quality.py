@@ -121,7 +121,8 @@ class ClassLayer:
     id, dtypes, outside
         As in `QualityLayer`.
     classes
-        Every class by its number. A number that is none of these counts as nodata.
+        Every class by its number, 0 to 65,535. A number that is none of these counts as
+        nodata.
     water
         The numbers of the water classes.
     rules
@@ -138,11 +139,13 @@ class ClassLayer:
     def judge(self, values: NDArray[np.integer], rule: str) -> Judged:
         """Return which cells are usable under a rule, and what the others were lost to."""
         keep = self.rules[rule].keep
-        known = np.array(sorted(self.classes))
-        rows = np.minimum(np.searchsorted(known, values), len(known) - 1)
+        known = sorted(self.classes)
+        beyond = known[-1] + 1
         # Any number off the table has the row after the last class, which is no class.
-        rows = np.where(known[rows] == values, rows, len(known))
-        classes = [*(self.classes[value] for value in sorted(self.classes)), None]
+        row_of = np.full(beyond + 1, len(known), dtype=np.intp)
+        row_of[known] = np.arange(len(known))
+        rows = row_of[np.where((values >= 0) & (values < beyond), values, beyond)]
+        classes = [*(self.classes[value] for value in known), None]
 
         def where(chosen: list[bool]) -> NDArray[np.bool_]:
             return np.asarray(np.array(chosen, dtype=np.bool_)[rows])

@@ -706,6 +706,13 @@ BAD: dict[str, tuple[Document, str, str]] = {
         "/quality/classes/1/value",
         "fit",
     ),
+    "class beyond 65535": (
+        with_quality(
+            {**LAYER, "dtype": "uint32", "classes": [*CLASSES, {"value": 65536, "name": "x"}]}
+        ),
+        "/quality/classes",
+        "65,535",
+    ),
     "unknown loss": (
         changed("quality", "classes", 1, "loss", to="fog")(),
         "/quality/classes/1/loss",
