@@ -25,7 +25,7 @@ def is_to_be_sent_again(there: Mapping[str, Any]) -> bool:
 
 
 def standing_of(
-    there: Mapping[str, Any], scene: Mapping[str, Any], files: Mapping[str, str]
+    there: Mapping[str, Any], scene: Mapping[str, Any], files: Mapping[str, str] | None
 ) -> Standing:
     """Compare a scene with what ``GET /v1/scenes/{ref}/content`` answered.
 
@@ -36,10 +36,11 @@ def standing_of(
     scene
         The ``scene`` part that would be sent.
     files
-        SHA-256 by part that would be sent.
+        SHA-256 by part that would be sent, None if the service is to fetch them: then a
+        scene of the same ref and metadata counts as the same.
     """
     kept = {part: file["sha256"] for part, file in there["files"].items()}
-    if _with_one_name(kept) != _with_one_name(files):
+    if files is not None and _with_one_name(kept) != _with_one_name(files):
         return Standing.OTHER
     return Standing.SAME if _told(there["scene"]) == _told(scene) else Standing.UNSURE
 

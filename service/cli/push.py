@@ -1,7 +1,7 @@
 """Agencies' products from a terminal: read as they were delivered, sent once."""
 
 import time
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field, replace
 from datetime import UTC, datetime
 from pathlib import Path
@@ -23,15 +23,31 @@ from service.cli.push_results import (
     tell_summary,
 )
 from service.cli.pushing import Sender
+from service.cli.uploading import Offer, offer_of_files, offer_of_item
 from service.cli.watching import Watch
 from service.errors import RejectedInput
-from service.products.kinds import products_at, read_product
+from service.products.items import is_item, items_at, read_item_files
+from service.products.kinds import is_product, products_at, read_product
 from service.products.places import INCOMPLETE, Span
 from service.products.product import Product
 
 _EXIT_INTERRUPTED: Final = 130
 _LATE: Final = datetime.max.replace(tzinfo=UTC)
-_Read = tuple[Path, Product[Span]]
+_Any = Product[Span] | Product[str]
+_Read = tuple[Path, _Any]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Kinds:
+    """What paths are taken for: how products are found, recognised and read."""
+
+    at: Callable[[Path], list[Path]]
+    fits: Callable[[Path], bool]
+    read: Callable[[Path], _Any]
+
+
+_DELIVERED: Final = _Kinds(at=products_at, fits=is_product, read=read_product)
+_ITEMS: Final = _Kinds(at=items_at, fits=is_item, read=read_item_files)
 
 
 @dataclass(slots=True)
@@ -41,19 +57,20 @@ class _Run:
     `sender` is None when nothing is to be sent.
     """
 
+    kinds: _Kinds
     sender: Sender | None
     as_json: bool
     is_waiting: bool
     timeout: int
     results: list[Result] = field(default_factory=list)
 
-    def read(self, path: Path, *, incomplete: Outcome) -> Product[Span] | None:
+    def read(self, path: Path, *, incomplete: Outcome) -> _Any | None:
         """Return what a path holds, None once it is told why it can't be sent.
 
         `incomplete` is the outcome of a product of which something is missing.
         """
         try:
-            return read_product(path)
+            return self.kinds.read(path)
         except RejectedInput as error:
             outcome = incomplete if error.code == INCOMPLETE else Outcome.REFUSED
             self.told(refused_by(error, outcome, name=_name(path)))
@@ -66,7 +83,7 @@ class _Run:
         tried: list[tuple[Path, Result]] = []
         for path, product in sorted(products, key=lambda each: _order(each[1])):
             tell_found(_name(path), product)
-            result = self._sent(_name(path), product)
+            result = self._sent(path, product)
             tried.append((path, result))
             if not self.is_waiting:
                 self.told(result)
@@ -76,10 +93,13 @@ class _Run:
             self._wait(result for _, result in tried)
         return tried
 
-    def _sent(self, name: str, product: Product[Span]) -> Result:
+    def _sent(self, path: Path, product: _Any) -> Result:
         if self.sender is None:
-            return Result(name=name, outcome=Outcome.FOUND, product=product)
-        return self.sender.sent(name, product)
+            return Result(name=_name(path), outcome=Outcome.FOUND, product=product)
+        is_replacing = self.sender.is_replacing
+        return self.sender.sent(
+            _name(path), product, lambda: _offer(path, product, is_replacing=is_replacing)
+        )
 
     def _wait(self, results: Iterable[Result]) -> None:
         until = time.monotonic() + self.timeout
@@ -94,6 +114,13 @@ class _Run:
         """Tell what became of a product, and keep the outcome for the end."""
         tell(result, as_json=self.as_json)
         self.results.append(replace(result, product=None, scene=None, faults=()))
+
+
+def _offer(path: Path, product: _Any, *, is_replacing: bool) -> Offer:
+    spans = {part: place for part, place in product.files.items() if isinstance(place, Span)}
+    if spans:
+        return offer_of_files(product.scene, spans, is_replacing=is_replacing)
+    return offer_of_item(product.scene, path, is_replacing=is_replacing)
 
 
 def _name(path: Path) -> str:
@@ -139,6 +166,14 @@ def push(
     every: Annotated[
         float, typer.Option(min=0.1, help="Seconds between two looks at the folder.")
     ] = 30.0,
+    is_stac: Annotated[
+        bool,
+        typer.Option(
+            "--stac",
+            help="The paths are STAC Items: files beside them are sent, others fetched by the "
+            "service.",
+        ),
+    ] = False,
     wait: Annotated[bool, typer.Option(help="Wait for the scenes' reports.")] = False,
     timeout: Annotated[int, typer.Option(min=1, help="How many seconds to wait for them.")] = 3_600,
     is_replacing: Annotated[
@@ -157,13 +192,14 @@ def push(
     """Send products as agencies deliver them; what is there already is not sent again.
 
     A Sentinel-2 Level-2A SAFE folder, a Landsat Collection 2 Level-2 bundle (folder or tar),
-    a folder with a scene.json, or a folder of such.
+    a folder with a scene.json, or a folder of such; with --stac STAC Items.
     """
     if not paths and watch_folder is None:
         raise typer.BadParameter("Name a product or a folder of products, or use --watch-folder.")
 
     def go_on(sender: Sender | None) -> None:
-        run = _Run(sender=sender, as_json=as_json, is_waiting=wait, timeout=timeout)
+        kinds = _ITEMS if is_stac else _DELIVERED
+        run = _Run(kinds=kinds, sender=sender, as_json=as_json, is_waiting=wait, timeout=timeout)
         untried = _push_paths(run, paths or [])
         code = exit_code(run.results)
         if watch_folder is not None and code not in _ENDING:
@@ -187,7 +223,7 @@ def _push_paths(run: _Run, paths: Iterable[Path]) -> int:
     found: list[_Read] = []
     for path in paths:
         try:
-            products = products_at(path)
+            products = run.kinds.at(path)
         except RejectedInput as error:
             run.told(refused_by(error, Outcome.REFUSED, name=_name(path)))
             continue
@@ -203,7 +239,7 @@ def _push_paths(run: _Run, paths: Iterable[Path]) -> int:
 
 def _watched(run: _Run, folder: Path, every: float) -> int:
     """Push what comes into a folder until interrupted; return what to exit with."""
-    watch = Watch(folder)
+    watch = Watch(folder, fits=run.kinds.fits)
     typer.echo("Watching for products; Ctrl-C ends this.", err=True)
     try:
         while EXITS[Outcome.NOT_ALLOWED] != exit_code(run.results):

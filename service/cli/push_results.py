@@ -2,10 +2,9 @@
 
 import json
 from collections import Counter
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from enum import StrEnum
-from itertools import groupby
 from typing import Any, Final
 
 import typer
@@ -104,14 +103,20 @@ def tell_found(name: str, product: Product[Any]) -> None:
     told.append(f"baseline {baseline}" if baseline else None)
     _say(f"{name}: {product.kind}")
     _say(f"  {scene.get('ref')}: {', '.join(str(value) for value in told if value)}")
-    for by, found in groupby(product.found, key=lambda found: found.by):
-        _say(f"  by {by}: {', '.join(f'{each.part} ← {each.source}' for each in found)}")
-    reasons: dict[str, list[str]] = {}
-    for source, reason in product.left_out.items():
-        reasons.setdefault(reason, []).append(source)
+    ways = _grouped((found.by, f"{found.part} ← {found.source}") for found in product.found)
+    for by, parts in ways.items():
+        _say(f"  by {by}: {', '.join(parts)}")
+    reasons = _grouped((reason, source) for source, reason in product.left_out.items())
     if reasons:
         left_out = (f"{', '.join(sources)} ({reason})" for reason, sources in reasons.items())
         _say(f"  left out: {'; '.join(left_out)}")
+
+
+def _grouped(pairs: Iterable[tuple[str, str]]) -> dict[str, list[str]]:
+    groups: dict[str, list[str]] = {}
+    for group, member in pairs:
+        groups.setdefault(group, []).append(member)
+    return groups
 
 
 def tell(result: Result, *, as_json: bool) -> None:

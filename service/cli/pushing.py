@@ -13,9 +13,8 @@ from service.cli.already_there import Standing, is_to_be_sent_again, standing_of
 from service.cli.client import answer_of, call
 from service.cli.progress import News
 from service.cli.push_results import Outcome, Result, refused_by
-from service.cli.uploading import Upload
+from service.cli.uploading import Offer
 from service.errors import Conflict, NotAllowed, NotFound, RejectedInput, Unavailable
-from service.products.places import Span
 from service.products.product import Product
 
 _Made = TypeVar("_Made")
@@ -45,7 +44,7 @@ class Sender:
     is_replacing: bool
     patience_seconds: float
 
-    def sent(self, name: str, product: Product[Span]) -> Result:
+    def sent(self, name: str, product: Product[Any], offer: Callable[[], Offer]) -> Result:
         """Send a product unless it is there; return what became of it."""
 
         def ended(error: Any, outcome: Outcome) -> Result:
@@ -53,7 +52,8 @@ class Sender:
 
         try:
             with News("sending") as news:
-                return self._sent(name, product, news)
+                outcome, scene = self._sent(offer(), news)
+                return Result(name=name, outcome=outcome, product=product, scene=scene)
         except NotAllowed as error:
             return ended(error, Outcome.NOT_ALLOWED)
         except Unavailable as error:
@@ -67,37 +67,35 @@ class Sender:
             detail = "The service failed at this scene; its log says why."
             return ended(RejectedInput("fault", detail), Outcome.FAULT)
 
-    def _sent(self, name: str, product: Product[Span], news: News) -> Result:
-        scene = {**product.scene, **({"replace": True} if self.is_replacing else {})}
-        upload = Upload(scene, product.files)
-        measured = upload.measured(lambda _: None)
-        headers = {
-            "Content-Type": upload.content_type,
-            "Content-Length": str(measured.size),
-            "Content-Digest": measured.content_digest,
-        }
-
-        def attempt() -> Result:
-            there = self._content(str(scene["ref"]))
-            if there is not None and not is_to_be_sent_again(there):
-                standing = standing_of(there, scene, measured.files)
-                if standing is Standing.SAME:
-                    return Result(name=name, outcome=Outcome.THERE, product=product, scene=there)
-                if standing is Standing.OTHER and not self.is_replacing:
-                    raise _other_content()
+    def _sent(self, offer: Offer, news: News) -> tuple[Outcome, Mapping[str, Any]]:
+        def attempt() -> tuple[Outcome, Mapping[str, Any]]:
+            there = self._content(str(offer.scene["ref"]))
+            if there is not None and self._is_there(there, offer):
+                return Outcome.THERE, there
             answer = answer_of(
                 self.client,
                 "POST",
                 _SCENES,
-                content=upload.body(news.tell),
-                headers=headers,
+                content=offer.body(news.tell),
+                headers=offer.headers,
+                params=offer.params,
                 timeout=httpx.Timeout(_ANSWER_SECONDS, connect=self.client.timeout.connect),
             )
             is_new = answer.status_code == httpx.codes.ACCEPTED
-            outcome = Outcome.SENT if is_new else Outcome.THERE
-            return Result(name=name, outcome=outcome, product=product, scene=answer.json())
+            return (Outcome.SENT if is_new else Outcome.THERE), answer.json()
 
         return self._in_the_end(attempt)
+
+    def _is_there(self, there: Mapping[str, Any], offer: Offer) -> bool:
+        """Whether nothing is to be sent; other content is refused unless it is to replace."""
+        if is_to_be_sent_again(there):
+            return False
+        standing = standing_of(there, offer.scene, offer.files)
+        if standing is Standing.OTHER and not self.is_replacing:
+            raise _other_content()
+        # What a fetched file holds by now, only the service can tell.
+        is_asked_anew = offer.files is None and self.is_replacing
+        return standing is Standing.SAME and not is_asked_anew
 
     def _content(self, ref: str) -> Mapping[str, Any] | None:
         """Return what the service has under a ref, None if there is no such scene."""

@@ -1,4 +1,4 @@
-"""One scene as a multipart body that streams from disk, hashed before it is sent."""
+"""One scene as a body: its files as they stream from disk, or the STAC Item that names them."""
 
 import base64
 import hashlib
@@ -6,6 +6,7 @@ import json
 import secrets
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any, Final
 
 from service.products.places import Span
@@ -13,6 +14,69 @@ from service.products.places import Span
 Tell = Callable[[float], None]
 """Takes how far the work is, from 0 to 1."""
 _SCENE: Final = "scene"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Offer:
+    """A scene, ready to be posted.
+
+    Attributes
+    ----------
+    scene
+        The ``scene`` part that it is, or that the service makes of it.
+    files
+        SHA-256 by part, None if the files are elsewhere.
+    headers, params
+        Of the request.
+    body
+        Gives the body anew for each attempt, telling how far it is.
+    """
+
+    scene: Mapping[str, Any]
+    files: Mapping[str, str] | None
+    headers: Mapping[str, str]
+    params: Mapping[str, str]
+    body: Callable[[Tell], Iterator[bytes]]
+
+
+def offer_of_files(
+    scene: Mapping[str, Any], files: Mapping[str, Span], *, is_replacing: bool
+) -> Offer:
+    """Return a scene whose files are on this machine, each read once."""
+    scene = {**scene, **({"replace": True} if is_replacing else {})}
+    upload = Upload(scene, files)
+    measured = upload.measured(lambda _: None)
+    return Offer(
+        scene=scene,
+        files=measured.files,
+        headers={
+            "Content-Type": upload.content_type,
+            "Content-Length": str(measured.size),
+            "Content-Digest": measured.content_digest,
+        },
+        params={},
+        body=upload.body,
+    )
+
+
+def offer_of_item(scene: Mapping[str, Any], path: Path, *, is_replacing: bool) -> Offer:
+    """Return an Item whose files the service is to fetch."""
+    content = path.read_bytes()
+    return Offer(
+        scene=scene,
+        files=None,
+        headers={
+            "Content-Type": "application/geo+json",
+            "Content-Length": str(len(content)),
+            "Content-Digest": _content_digest(hashlib.sha256(content).digest()),
+        },
+        params={"replace": "true"} if is_replacing else {},
+        body=lambda _: iter((content,)),
+    )
+
+
+def _content_digest(digest: bytes) -> str:
+    return f"sha-256=:{base64.b64encode(digest).decode()}:"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -64,10 +128,9 @@ class Upload:
             whole.update(piece)
             if is_content and part != _SCENE:
                 parts.setdefault(part, hashlib.sha256()).update(piece)
-        encoded = base64.b64encode(whole.digest()).decode()
         return Measured(
             files={part: hashed.hexdigest() for part, hashed in parts.items()},
-            content_digest=f"sha-256=:{encoded}:",
+            content_digest=_content_digest(whole.digest()),
             size=size,
         )
 

@@ -4,7 +4,6 @@ from collections.abc import Callable, Iterator
 from pathlib import Path
 
 from service.errors import RejectedInput
-from service.products.kinds import is_product
 
 Fingerprint = frozenset[tuple[str, int, int]]
 """Name, size and time of change of every file of a product."""
@@ -21,7 +20,7 @@ class Watch:
         Whether an entry of the folder looks like a product.
     """
 
-    def __init__(self, folder: Path, *, fits: Callable[[Path], bool] = is_product) -> None:
+    def __init__(self, folder: Path, *, fits: Callable[[Path], bool]) -> None:
         self._folder = folder
         self._fits = fits
         self._seen: dict[Path, Fingerprint] = {}

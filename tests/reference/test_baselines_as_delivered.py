@@ -76,3 +76,13 @@ def test_a_product_of_an_unknown_baseline_is_refused_and_the_others_are_sent(
     assert (sent.code, sent.outcomes) == (3, ["refused", "sent"]), sent.told
     assert sent.lines[0]["detail"].startswith("Processing baseline 99.99 is not known")
     assert len(service.get("/v1/scenes")["scenes"]) == 1
+
+
+def test_an_offset_of_a_product_s_own_is_believed(service: Service, tmp_path: Path) -> None:
+    """The metadata say how these very numbers were stored; the baseline is a rule of thumb."""
+    service.put_parcels(square("A", col=0, row=0, size=SIZE))
+    write_safe(tmp_path / "in", {"red": 0.05, "nir": 0.4}, baseline="05.10", offset=-2000)
+    sent = pushed(service, tmp_path, tmp_path / "in", "--wait")
+    assert (sent.code, sent.outcomes) == (0, ["sent"]), sent.told
+    assert sent.lines[0]["scene"]["scaling"]["red"] == {"scale": 1e-4, "offset": -0.2}
+    assert service.series("A", "red")["mean"] == pytest.approx([0.05], abs=QUANTUM / 2)
