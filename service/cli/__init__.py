@@ -2,12 +2,13 @@
 
 import logging
 import sys
-from collections.abc import Mapping
-from typing import Final
+from collections.abc import Iterator, Mapping
+from importlib import import_module
+from typing import Any, Final
 
 import typer
+from typer.core import TyperGroup
 
-from service.cli import alerts, demo, keys, parcels, push, serve
 from service.errors import (
     Conflict,
     FurrowlightError,
@@ -28,20 +29,55 @@ EXIT_CODES: Final[Mapping[type[FurrowlightError], int]] = {
 
 EXIT_BUG: Final = 70
 
+COMMANDS: Final = ("demo", "serve", "push", "keys", "alerts", "parcels")
+"""A command is a function, and a group of them an ``app``, in the module of its name."""
+
+
+class _Commands(Mapping[str, Any]):
+    """Commands by name, imported when they are asked for.
+
+    Most commands are clients, and the libraries of the service take seconds to import.
+    """
+
+    def __getitem__(self, name: str) -> Any:
+        if name not in COMMANDS:
+            raise KeyError(name)
+        module = import_module(f"{__name__}.{name}")
+        outer = typer.Typer(add_completion=False, rich_markup_mode=None)
+        outer.callback()(lambda: None)
+        if hasattr(module, "app"):
+            outer.add_typer(module.app, name=name)
+        else:
+            outer.command(name)(getattr(module, name))
+        return typer.main.get_group(outer).commands[name]
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(COMMANDS)
+
+    def __len__(self) -> int:
+        return len(COMMANDS)
+
+
+class _Group(TyperGroup):
+    """The top of the command line."""
+
+    def __init__(self, **settings: Any) -> None:
+        super().__init__(**settings | {"commands": _Commands()})
+
+
 app = typer.Typer(
+    cls=_Group,
     name="furrowlight",
-    help="Vegetation and water indices of field parcels from satellite scenes.",
     no_args_is_help=True,
     add_completion=False,
     pretty_exceptions_enable=False,
     rich_markup_mode=None,
 )
-app.command("demo")(demo.demo)
-app.command("serve")(serve.serve)
-app.command("push")(push.push)
-app.add_typer(keys.app, name="keys")
-app.add_typer(alerts.app, name="alerts")
-app.add_typer(parcels.app, name="parcels")
+
+
+@app.callback()
+def _top() -> None:
+    """Vegetation and water indices of field parcels from satellite scenes."""
 
 
 def main() -> None:
