@@ -111,7 +111,16 @@ def _change(change: dict[str, Any]) -> str:
     who = f" by {change['who']}" if change["who"] else ""
     verdict = f", verdict {change['verdict']}" if change["verdict"] else ""
     note = f": {change['note']}" if change["note"] else ""
-    return f"  {change['recorded_at']} {change['kind']}{who}{verdict}{note}"
+    return f"  {change['recorded_at']} {change['kind']}{_what(change['what'])}{who}{verdict}{note}"
+
+
+def _what(what: dict[str, Any]) -> str:
+    """Return what changed, from what to what, and why where that is said."""
+    moved = [
+        f"{name} from {value[0]} to {value[1]}" if isinstance(value, list) else str(value)
+        for name, value in what.items()
+    ]
+    return f" ({'; '.join(moved)})" if moved else ""
 
 
 @app.command()
