@@ -1,6 +1,6 @@
-"""What judging keeps: baselines, folds, judgements, alerts and their changes."""
+"""What judging keeps: baselines, folds, judgements, alerts, notices; rules and the diary."""
 
-from datetime import datetime
+from datetime import date, datetime
 from typing import Any
 
 import numpy as np
@@ -117,3 +117,54 @@ class AlertChange(Base):
     verdict: Mapped[str | None] = mapped_column(String(20))
     note: Mapped[str | None] = mapped_column(String(2000))
     what: Mapped[dict[str, Any]] = mapped_column(JSON)
+
+
+class NoticeRow(Base):
+    """A regional notice as it stands: a shift that the crops of an axis share."""
+
+    __tablename__ = "notice"
+    __table_args__ = (
+        Index("ix_notice_opened", "opened_at", "id"),
+        Index("ix_notice_fold", "axis", "season"),
+    )
+
+    id: Mapped[str] = mapped_column(String(40), primary_key=True)
+    axis: Mapped[str] = mapped_column(String(5))
+    season: Mapped[int]
+    kind: Mapped[str] = mapped_column(String(40))
+    state: Mapped[str] = mapped_column(String(20))
+    measure: Mapped[str] = mapped_column(String(100))
+    shift: Mapped[float] = mapped_column(Float(53))
+    crops: Mapped[list[str]]
+    opened_at: Mapped[datetime]
+    closed_at: Mapped[datetime | None]
+    recorded_at: Mapped[datetime]
+    revision: Mapped[int]
+
+
+class DiaryRow(Base):
+    """Something that a person knows to have happened on a parcel, both days included."""
+
+    __tablename__ = "diary"
+
+    id: Mapped[int] = mapped_column(RowId, primary_key=True)
+    public_id: Mapped[str] = mapped_column(String(40), unique=True)
+    parcel_id: Mapped[int] = mapped_column(ForeignKey("parcel.id"), index=True)
+    kind: Mapped[str] = mapped_column(String(20))
+    first_on: Mapped[date]
+    last_on: Mapped[date]
+    note: Mapped[str | None] = mapped_column(String(2000))
+    who: Mapped[str] = mapped_column(String(100))
+    recorded_at: Mapped[datetime]
+
+
+class RuleRow(Base):
+    """A rule as an operator put it; a built-in one that nobody changed has no row."""
+
+    __tablename__ = "rule"
+
+    id: Mapped[str] = mapped_column(String(100), primary_key=True)
+    definition: Mapped[dict[str, Any]]
+    revision: Mapped[int]
+    who: Mapped[str] = mapped_column(String(100))
+    changed_at: Mapped[datetime]
