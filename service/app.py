@@ -14,6 +14,7 @@ from service.api import (
     alerts,
     baselines,
     health,
+    holdings,
     imports,
     indices,
     jobs,
@@ -38,6 +39,7 @@ from service.tiles.archive import Archive
 _ROUTERS = (
     keys,
     parcels,
+    holdings,
     imports,
     jobs,
     seasons,

@@ -19,7 +19,15 @@ from service.seasons.axis import SeasonStart, season_ending_in, season_holding
 from service.seasons.baseline import Baselines
 from service.store.alert_tables import AlertChange, AlertRow, BaselineRow, SeasonFold
 from service.store.looks import PASS_GAP, Observed, observations, one_per_pass
-from service.store.tables import Boundary, CropSeason, Observation, Parcel, Scene, Write
+from service.store.tables import (
+    Boundary,
+    CropSeason,
+    Holding,
+    Observation,
+    Parcel,
+    Scene,
+    Write,
+)
 
 SPOILED: Final = ("confirmed", "bad_data")
 """Verdicts that take an alert's looks out of the baselines; no verdict does so too."""
@@ -55,17 +63,21 @@ def _midnight(day: date) -> datetime:
 
 
 def axes(session: Session, starts: tuple[str, str]) -> list[Axis]:
-    """Return the season axes that have parcels; `starts` are north and south of the equator."""
+    """Return the season axes that have parcels; `starts` are north and south of the equator.
+
+    A holding that has a start of its own is on the axis of that day.
+    """
     latitude = func.max(Boundary.south + Boundary.north)
     query = (
-        select(Parcel.id, Parcel.ref, latitude)
+        select(Parcel.id, Parcel.ref, latitude, Holding.season_start)
         .join(Boundary, Boundary.parcel_id == Parcel.id)
+        .outerjoin(Holding, Holding.id == Parcel.holding_id)
         .where(Boundary.closed_at.is_(None))
-        .group_by(Parcel.id, Parcel.ref)
+        .group_by(Parcel.id, Parcel.ref, Holding.season_start)
     )
     refs: dict[str, dict[int, str]] = {}
-    for parcel_id, ref, twice_latitude in session.execute(query):
-        start = starts[0] if twice_latitude >= 0 else starts[1]
+    for parcel_id, ref, twice_latitude, own in session.execute(query):
+        start = own or (starts[0] if twice_latitude >= 0 else starts[1])
         refs.setdefault(start, {})[parcel_id] = ref
     return [
         Axis(id=start, start=SeasonStart.parse(start), refs=of_axis)
