@@ -16,6 +16,7 @@ TOP_LEVEL = {
     "migrations",
     "tests",
     "sample_tiles",
+    "benchmarks",
     "docker",
 }
 LINES_PER_MODULE = 400
