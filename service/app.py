@@ -25,6 +25,7 @@ from service.api import (
     scenes,
     seasons,
     series,
+    summaries,
     webhooks,
 )
 from service.api.context import Context
@@ -49,6 +50,8 @@ _ROUTERS = (
     series,
     baselines,
     overview,
+    # Before alerts: its address is not the id of one.
+    summaries,
     alerts,
     webhooks,
     health,

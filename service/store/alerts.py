@@ -107,8 +107,8 @@ def list_alerts(
         (states, AlertRow.state.in_(list(states or ()))),
         (parcel, Parcel.ref == parcel),
         (since, AlertRow.opened_at >= (since or _EARLIEST)),
-        (holdings, _held_by(holdings or ())),
-        (holding, _held_by([holding] if holding else ())),
+        (holdings, held_by(holdings or ())),
+        (holding, held_by([holding] if holding else ())),
     )
     query = query.where(*(condition for asked, condition in conditions if asked is not None))
     if after is not None:
@@ -137,7 +137,8 @@ def open_alerts(session: Session, at: datetime) -> dict[int, list[str]]:
     return found
 
 
-def _held_by(holdings: Collection[str]) -> ColumnElement[bool]:
+def held_by(holdings: Collection[str]) -> ColumnElement[bool]:
+    """Return the condition that a parcel belongs to one of some holdings."""
     return Parcel.holding_id.in_(select(Holding.id).where(Holding.ref.in_(list(holdings))))
 
 
