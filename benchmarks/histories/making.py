@@ -258,7 +258,7 @@ def _looked(rng: np.random.Generator, land: Land, stands: Days, passes: Sequence
     veils = veils_of(rng, share, in_pass)
     is_landsat = (sensors == "landsat-c2-l2").astype(np.float64)
     bands *= noise_of(rng, in_pass, len(passes), len(BANDS), is_landsat=is_landsat)
-    bands = np.round(np.clip(through(veils, bands), 0.0005, 1.2), 5)
+    bands[:] = np.round(np.clip(through(veils, bands), 0.0005, 1.2), 5)
     return _Looks(
         day=day,
         in_pass=in_pass,
