@@ -53,7 +53,7 @@ def insert_observations(
     instant = microseconds(acquired_at)
     if is_sqlite(session):
         packed = figures.astype("<f4")
-        _driver(session).executemany(
+        driver_of(session).executemany(
             f"INSERT INTO {_OBSERVATION} VALUES (?, ?, ?, ?, ?, ?)",  # noqa: S608 - constants
             zip(
                 repeat(bucket),
@@ -77,7 +77,7 @@ def insert_observations(
         rows[field]["value"] = value
     rows["figures"]["value"] = figures
     with (
-        _driver(session).cursor() as cursor,
+        driver_of(session).cursor() as cursor,
         cursor.copy(f"COPY {_OBSERVATION} FROM STDIN (FORMAT BINARY)") as copy,
     ):
         copy.write(_COPY_HEADER + rows.tobytes() + _COPY_TRAILER)
@@ -194,7 +194,7 @@ def insert_latest(session: Session, rows: Iterable[LatestRow]) -> None:
         _upsert_latest_sqlite(session, ordered)
         return
     with (
-        _driver(session).cursor() as cursor,
+        driver_of(session).cursor() as cursor,
         cursor.copy(f"COPY {_LATEST} FROM STDIN (FORMAT BINARY)") as copy,
     ):
         copy.set_types(["varchar", "int8", "timestamptz", "int8", "float4", "float4"])
@@ -210,7 +210,7 @@ def _upsert_latest_sqlite(session: Session, rows: Iterable[LatestRow]) -> None:
             instants[instant] = microseconds(instant)
         return instants[instant]
 
-    _driver(session).executemany(
+    driver_of(session).executemany(
         _UPSERT_LATEST,
         (
             (measure, parcel_id, stored(acquired_at), write_id, value, share)
@@ -227,7 +227,7 @@ def _known(values: NDArray[np.float32]) -> list[float | None]:
     return found
 
 
-def _driver(session: Session) -> Any:
+def driver_of(session: Session) -> Any:
     """Return the driver's own connection, in the session's transaction."""
     driver = session.connection().connection.driver_connection
     assert driver is not None  # noqa: S101 - a session in a transaction has a connection
