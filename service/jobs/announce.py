@@ -11,7 +11,8 @@ from service.jobs.deliver import Promise, promise_of
 from service.settings import Settings
 from service.store.alerts import document_of
 from service.store.judgements import Happened
-from service.store.tables import Scene, Webhook
+from service.store.tables import Parcel, Scene, Webhook
+from service.store.unseen import Unseen
 from service.store.webhooks import Announcement, announce, announce_to, event_id_of
 from service.webhooks.events import EventName, event_body
 
@@ -98,6 +99,30 @@ def announce_alert(
         at=at,
         holding=holding,
         severity=row.severity,
+    )
+    return [promise_of(delivery, at=at) for delivery in announce(session, told, at=at)]
+
+
+def announce_unseen(
+    session: Session, settings: Settings, parcel: Parcel, unseen: Unseen, *, at: datetime
+) -> list[Promise]:
+    """Tell that nobody has seen a parcel for a while; return the attempts that were promised."""
+    last = unseen.last_look_at
+    told = announcement(
+        settings,
+        EventName.PARCEL_UNSEEN,
+        key=(parcel.ref, last),
+        subject=parcel.ref,
+        data={
+            "parcel": parcel.ref,
+            "holding": parcel.holding.ref if parcel.holding else None,
+            "last_look_at": last and last.isoformat().replace("+00:00", "Z"),
+            "passes": unseen.passes,
+            "reasons": dict(unseen.reasons),
+            "link": f"{settings.public_url}/v1/parcels/{quote(parcel.ref, safe='')}",
+        },
+        at=at,
+        holding=parcel.holding.ref if parcel.holding else None,
     )
     return [promise_of(delivery, at=at) for delivery in announce(session, told, at=at)]
 

@@ -21,6 +21,7 @@ class EventName(StrEnum):
     ALERT_OPENED = "alert.opened"
     ALERT_CHANGED = "alert.changed"
     ALERT_CLOSED = "alert.closed"
+    PARCEL_UNSEEN = "parcel.unseen"
     SCENE_DONE = "scene.done"
     SCENE_FAILED = "scene.failed"
     PING = "ping"

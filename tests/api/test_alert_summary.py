@@ -58,7 +58,9 @@ def test_a_summary_is_of_the_holdings_and_days_asked_for(judged: Service) -> Non
     late = summary(judged, params={"from": f"{RUNNING}-07-10"})["total"]["alerts"]
     early = summary(judged, params={"to": f"{RUNNING}-07-10"})["total"]["alerts"]
     assert (early, late + early) == (2, 5)
-    answer = judged.call("GET", "/v1/alerts/summary", params={"from": "2024-07-01", "to": "2024-07-01"})
+    answer = judged.call(
+        "GET", "/v1/alerts/summary", params={"from": "2024-07-01", "to": "2024-07-01"}
+    )
     assert answer.json()["errors"][0]["parameter"] == "to"
     assert judged.call("GET", "/v1/alerts/summary", params={"by": "crop"}).status_code == 422
     assert judged.call("GET", "/v1/alerts/summary", key=judged.key("triage")).status_code == 403
