@@ -21,11 +21,11 @@ LatestRow = tuple[str, int, datetime, int, float | None, float]
 
 _OBSERVATION: Final = "observation (bucket, parcel_id, acquired_at, write_id, boundary_id, figures)"
 _LATEST: Final = "latest (measure, parcel_id, acquired_at, write_id, value, valid_share)"
-_COPY_HEADER: Final = b"PGCOPY\n\xff\r\n\0" + bytes(8)
-_COPY_TRAILER: Final = b"\xff\xff"
-_FLOAT4_OID: Final = 700
+COPY_HEADER: Final = b"PGCOPY\n\xff\r\n\0" + bytes(8)
+COPY_TRAILER: Final = b"\xff\xff"
+FLOAT4_OID: Final = 700
 # PostgreSQL counts binary instants from here.
-_POSTGRES_EPOCH_US: Final = microseconds(datetime(2000, 1, 1, tzinfo=UTC))
+POSTGRES_EPOCH_US: Final = microseconds(datetime(2000, 1, 1, tzinfo=UTC))
 
 
 def is_sqlite(session: Session) -> bool:
@@ -70,7 +70,7 @@ def insert_observations(
     for field, value in (
         ("bucket", bucket),
         ("parcel_id", parcel_ids),
-        ("acquired_at", instant - _POSTGRES_EPOCH_US),
+        ("acquired_at", instant - POSTGRES_EPOCH_US),
         ("write_id", write_id),
         ("boundary_id", boundary_ids),
     ):
@@ -80,7 +80,7 @@ def insert_observations(
         driver_of(session).cursor() as cursor,
         cursor.copy(f"COPY {_OBSERVATION} FROM STDIN (FORMAT BINARY)") as copy,
     ):
-        copy.write(_COPY_HEADER + rows.tobytes() + _COPY_TRAILER)
+        copy.write(COPY_HEADER + rows.tobytes() + COPY_TRAILER)
 
 
 def _copied_rows(shape: tuple[int, ...]) -> NDArray[Any]:
@@ -113,7 +113,7 @@ def _copied_rows(shape: tuple[int, ...]) -> NDArray[Any]:
     rows["bucket"]["length"] = 4
     for name in ("parcel_id", "acquired_at", "write_id", "boundary_id"):
         rows[name]["length"] = 8
-    rows["head"] = (20 + 8 * columns, 1, 0, _FLOAT4_OID, columns, 1)
+    rows["head"] = (20 + 8 * columns, 1, 0, FLOAT4_OID, columns, 1)
     rows["figures"]["length"] = 4
     return rows
 

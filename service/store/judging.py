@@ -4,10 +4,9 @@ import hashlib
 import io
 import json
 import zlib
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, date, datetime, time, timedelta
-from itertools import groupby
 from typing import Any, Final
 
 import numpy as np
@@ -18,7 +17,6 @@ from service.alerts.actions import Action, ActionKind
 from service.seasons.axis import SeasonStart, season_ending_in, season_holding
 from service.seasons.baseline import Baselines
 from service.store.alert_tables import AlertChange, AlertRow, BaselineRow, SeasonFold
-from service.store.looks import PASS_GAP, Observed, observations, one_per_pass
 from service.store.tables import (
     Boundary,
     CropSeason,
@@ -161,66 +159,6 @@ def axes_of_scene(session: Session, scene: Scene, known: Sequence[Axis]) -> list
     return [axis for axis in known if not parcels.isdisjoint(axis.refs)]
 
 
-Look = tuple[Observed, dict[str, float]]
-"""The observation that a look rests on, and its figures by measure."""
-
-
-def looks_of(
-    session: Session,
-    axis: Axis,
-    measures: Sequence[str],
-    *,
-    since: datetime | None,
-    until: datetime,
-    is_judged: bool | None = None,
-) -> Iterator[tuple[int, list[Look]]]:
-    """Yield each parcel with its looks from `since` until before `until`, one per pass.
-
-    A look's figures are those of its scene: of each measure the newest write that has it.
-    """
-    rows = observations(
-        session,
-        sorted(axis.refs),
-        since=since - PASS_GAP if since else None,
-        until=until + PASS_GAP,
-        is_judged=is_judged,
-    )
-    for parcel_id, of_parcel in groupby(rows, key=lambda row: row.parcel_id):
-        known = list(of_parcel)
-        by_scene: dict[int, list[Observed]] = {}
-        for row in known:
-            by_scene.setdefault(row.scene_id, []).append(row)
-        looks = [
-            (look, _figures(by_scene[look.scene_id], measures))
-            for look in one_per_pass(_telling(rows) for rows in by_scene.values())
-            if (since is None or look.acquired_at >= since) and look.acquired_at < until
-        ]
-        yield parcel_id, looks
-
-
-def _telling(rows: Sequence[Observed]) -> Observed:
-    """Return the observation that tells of a parcel in a scene.
-
-    Of those whose figures count the one with the least valid share: measures may have been
-    sent with different shares, and which came last must not matter.
-    """
-    if len(rows) == 1:
-        return rows[0]
-    in_order = sorted(rows, key=lambda row: row.write_id)
-    counting = {measure: row for row in in_order for measure in row.places.measures}
-    return min(counting.values(), key=lambda row: row.of_look("valid_share"), default=in_order[-1])
-
-
-def _figures(rows: Sequence[Observed], measures: Sequence[str]) -> dict[str, float]:
-    found: dict[str, float] = {}
-    for row in sorted(rows, key=lambda row: row.write_id):
-        for measure in measures:
-            if row.places.has(measure):
-                value = row.figure(f"{measure}.mean")
-                found[measure] = np.nan if value is None else value
-    return found
-
-
 def history_key(session: Session, axis: Axis, season: int) -> str:
     """Return a hash of all that a season's baselines are fitted from."""
     begin = axis.begins_at(season)
@@ -325,11 +263,3 @@ def actions_in(session: Session, axis: Axis, season: int) -> list[Action]:
         )
         for change, row in session.execute(query)
     ]
-
-
-def crops_on(
-    seasons: Mapping[int, Sequence[CropSeason]], parcel_id: int, days: Iterable[date]
-) -> list[str | None]:
-    """Return what grew on a parcel on some days."""
-    own = seasons.get(parcel_id, ())
-    return [next((s.crop for s in own if s.from_on <= d <= s.until_on), None) for d in days]
