@@ -19,6 +19,8 @@ _ID = sa.BigInteger().with_variant(sa.Integer(), "sqlite")
 
 def upgrade() -> None:
     op.add_column("holding", sa.Column("season_start", sa.String(length=5), nullable=True))
+    op.add_column("baseline", sa.Column("tuned", sa.JSON(none_as_null=True), nullable=True))
+    op.add_column("judgement", sa.Column("p", sa.Float(precision=53), nullable=True))
     op.create_table(
         "crop_group",
         sa.Column("crop", sa.String(length=100), nullable=False),
@@ -68,6 +70,22 @@ def upgrade() -> None:
     )
     op.create_index("ix_diary_parcel_id", "diary", ["parcel_id"], unique=False)
     op.create_table(
+        "explained",
+        sa.Column("alert_id", sa.String(length=40), nullable=False),
+        sa.Column("parcel_id", _ID, nullable=False),
+        sa.Column("axis", sa.String(length=5), nullable=False),
+        sa.Column("season", sa.Integer(), nullable=False),
+        sa.Column("rule", sa.String(length=100), nullable=False),
+        sa.Column("departed_at", UtcDateTime(), nullable=False),
+        sa.Column("cause", sa.String(length=40), nullable=False),
+        sa.Column("because", sa.String(length=200), nullable=False),
+        sa.Column("recorded_at", UtcDateTime(), nullable=False),
+        sa.ForeignKeyConstraint(["parcel_id"], ["parcel.id"]),
+        sa.PrimaryKeyConstraint("alert_id"),
+    )
+    op.create_index("ix_explained_fold", "explained", ["axis", "season"], unique=False)
+    op.create_index("ix_explained_parcel_id", "explained", ["parcel_id"], unique=False)
+    op.create_table(
         "rule",
         sa.Column("id", sa.String(length=100), nullable=False),
         sa.Column("definition", sa.JSON(), nullable=False),
@@ -80,6 +98,9 @@ def upgrade() -> None:
 
 def downgrade() -> None:
     op.drop_table("rule")
+    op.drop_index("ix_explained_parcel_id", table_name="explained")
+    op.drop_index("ix_explained_fold", table_name="explained")
+    op.drop_table("explained")
     op.drop_index("ix_diary_parcel_id", table_name="diary")
     op.drop_table("diary")
     op.drop_index("ix_notice_fold", table_name="notice")
@@ -87,4 +108,6 @@ def downgrade() -> None:
     op.drop_table("notice")
     op.drop_table("unseen_spell")
     op.drop_table("crop_group")
+    op.drop_column("judgement", "p")
+    op.drop_column("baseline", "tuned")
     op.drop_column("holding", "season_start")

@@ -15,7 +15,8 @@ from service.store.tables import Base, Parcel, RowId
 class BaselineRow(Base):
     """The baselines of a season axis for one season, fitted from the seasons before it.
 
-    `history` says what they were fitted from; the newest row of a season is in use.
+    `history` says what they were fitted from; the newest row of a season is in use. `tuned`
+    is what replaying those seasons says of each rule.
     """
 
     __tablename__ = "baseline"
@@ -28,6 +29,7 @@ class BaselineRow(Base):
     version: Mapped[str] = mapped_column(String(64))
     measures: Mapped[list[str]]
     arrays: Mapped[bytes] = mapped_column(LargeBinary)
+    tuned: Mapped[dict[str, Any] | None] = mapped_column(JSON(none_as_null=True))
     fitted_at: Mapped[datetime]
 
 
@@ -64,6 +66,7 @@ class Judgement(Base):
     baseline_id: Mapped[int] = mapped_column(ForeignKey("baseline.id"))
     crop: Mapped[str | None] = mapped_column(String(100))
     score: Mapped[float | None] = mapped_column(Float(53))
+    p: Mapped[float | None] = mapped_column(Float(53))
     unjudged: Mapped[str | None] = mapped_column(String(100))
     figures: Mapped[NDArray[np.float32]] = mapped_column(Figures)
     recorded_at: Mapped[datetime]
@@ -140,6 +143,23 @@ class NoticeRow(Base):
     closed_at: Mapped[datetime | None]
     recorded_at: Mapped[datetime]
     revision: Mapped[int]
+
+
+class ExplainedRow(Base):
+    """An alert that was not opened because something explains the departure."""
+
+    __tablename__ = "explained"
+    __table_args__ = (Index("ix_explained_fold", "axis", "season"),)
+
+    alert_id: Mapped[str] = mapped_column(String(40), primary_key=True)
+    parcel_id: Mapped[int] = mapped_column(ForeignKey("parcel.id"), index=True)
+    axis: Mapped[str] = mapped_column(String(5))
+    season: Mapped[int]
+    rule: Mapped[str] = mapped_column(String(100))
+    departed_at: Mapped[datetime]
+    cause: Mapped[str] = mapped_column(String(40))
+    because: Mapped[str] = mapped_column(String(200))
+    recorded_at: Mapped[datetime]
 
 
 class DiaryRow(Base):
