@@ -165,17 +165,17 @@ GRASS: Final = NAMES.index("permanent grassland")
 
 MOWINGS: Final = (232.0, 275.0, 322.0)
 """Usual days of season on which grass is mown."""
-MOWN_LAI: Final = 0.7
-REGROWS_DAYS: Final = 32.0
+MOWN_LAI: Final = 1.1
+REGROWS_DAYS: Final = 28.0
 
 # Share of the land, and what follows what.
 _ROTATIONS: Final = (
-    (0.26, ("winter rape", "winter wheat", "winter barley")),
+    (0.27, ("winter rape", "winter wheat", "winter barley")),
     (0.20, ("sugar beet", "winter wheat", "spring barley")),
     (0.14, ("maize", "winter wheat")),
     (0.10, ("maize", "maize", "winter wheat", "spring barley")),
-    (0.12, ("winter rape", "winter wheat", "spring barley", "maize")),
-    (0.18, ("permanent grassland",)),
+    (0.13, ("winter rape", "winter wheat", "spring barley", "maize")),
+    (0.16, ("permanent grassland",)),
 )
 _OUT_OF_TURN: Final = 0.06
 _LATE: Final = ("maize", "sugar beet")

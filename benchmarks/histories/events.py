@@ -5,6 +5,7 @@ from dataclasses import dataclass, fields
 from typing import Final
 
 import numpy as np
+from numpy.typing import NDArray
 
 from benchmarks.histories.crops import CROPS, GROWTH, HARVEST, RIPENING, SOWING, Places
 from benchmarks.histories.optics import INDICES, Figures, measures_of, reflectance_of
@@ -21,7 +22,7 @@ VISIBLE: Final = 0.10
 """An event is visible from the first day on which it has lowered NDVI, NDMI or NBR, or raised
 NDWI, by so much in the true signal, without noise, against the same stand without it."""
 OVER: Final = 0.05
-"""It is over when its change has been below this for good."""
+"""It is over when its change has been below this for `_QUIET_DAYS`."""
 SUDDEN: Final = ("flood", "burn", "early_cut", "hail")
 SLOW: Final = ("moisture_stress", "late_emergence", "decline")
 KINDS: Final = (*SUDDEN, *SLOW)
@@ -37,16 +38,17 @@ CAUSES: Final[Mapping[str, str]] = {
 """The cause that an alert of each kind should name."""
 _WORSE: Final = np.array([-1.0, -1.0, -1.0, 1.0])
 _LAST_ONSET: Final = 350.0
-_TRIES: Final = 12
+_QUIET_DAYS: Final = 15
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Event:
     """What befell a parcel.
 
-    Days count from the first of the history. `visible` is None when the event never became
-    visible; `over` is the last day on which its change still shows. `change` is the largest
-    adverse change of an index.
+    Days count from the first of the history. `visible` to `faded` are the first and the last
+    day on which its change is visible, `over` the last on which a trace of it is left; all
+    None when it never became visible. What follows after a quiet time is not the event any
+    more. `change` is the largest adverse change of an index.
     """
 
     kind: str
@@ -54,6 +56,7 @@ class Event:
     season: int
     onset: int
     visible: int | None
+    faded: int | None
     over: int | None
     change: float
 
@@ -144,20 +147,30 @@ def witnessed(
         change = _adverse_change(
             befallen, unharmed, land, row=row, parcel=one.parcel, days=span, sun=sun_zenith[span]
         )
-        shown = np.flatnonzero(change >= VISIBLE)
-        lasting = np.flatnonzero(change >= OVER)
+        shown = _spell(change >= VISIBLE, since=0)
+        left = None if shown is None else _spell(change >= OVER, since=shown[0])
         events.append(
             Event(
                 kind=one.kind,
                 parcel=one.parcel,
                 season=one.season,
                 onset=onset,
-                visible=int(span[shown[0]]) if shown.size else None,
-                over=int(span[lasting[-1]]) if lasting.size else None,
+                visible=None if shown is None else onset + shown[0],
+                faded=None if shown is None else onset + shown[1],
+                over=None if left is None else onset + left[1],
                 change=float(change.max(initial=0.0)),
             )
         )
     return events
+
+
+def _spell(holds: NDArray[np.bool_], *, since: int) -> tuple[int, int] | None:
+    """Return the first and last day on which something holds, up to a quiet time after it."""
+    days = since + np.flatnonzero(holds[since:])
+    if days.size == 0:
+        return None
+    pauses = np.flatnonzero(np.diff(days) > _QUIET_DAYS)
+    return int(days[0]), int(days[pauses[0]] if pauses.size else days[-1])
 
 
 def dry_out(days: Days, land: Land, season: int, *, onset: int, thirst: Figures) -> None:
@@ -267,8 +280,8 @@ def _flood(rows: Rows, since: Figures, dice: Sequence[float]) -> None:
     """Let water stand for days and drain for weeks; it harms the stand, the ground stays wet."""
     stands, drains = 3.0 + 12.0 * dice[0], 10.0 + 20.0 * dice[1]
     left = np.interp(since, (stands, stands + drains), (1.0, 0.0))
-    rows["water"][:] = (0.35 + 0.6 * dice[2]) * left
-    harm = (0.2 + 0.5 * dice[3]) * np.interp(since, (0.0, 10.0, 50.0, 110.0), (0.0, 1.0, 1.0, 0.4))
+    rows["water"][:] = (0.40 + 0.6 * dice[2]) * left
+    harm = (0.2 + 0.5 * dice[3]) * np.interp(since, (0.0, 10.0, 50.0, 110.0), (0.0, 1.0, 1.0, 0.0))
     rows["lai"] *= 1.0 - harm
     rows["wetness"][:] = np.maximum(rows["wetness"], np.where(left > 0.0, 1.0, 0.0))
 

@@ -5,7 +5,7 @@ Nothing here comes from the service: what it says can be held against what was p
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from datetime import date, datetime, timedelta
+from datetime import UTC, date, datetime, timedelta
 from enum import StrEnum
 from typing import Final
 
@@ -140,10 +140,9 @@ class History:
     events: tuple[Event, ...]
     drought: Drought | None
 
-    def at(self, day: float) -> datetime:
-        """Return the beginning of a day as an instant."""
-        midnight = self.passes[0].at.replace(hour=0, minute=0, second=0)
-        return midnight + timedelta(days=day - self.passes[0].day)
+    def day_of(self, at: datetime) -> int:
+        """Return the day on which an instant lies."""
+        return (at.astimezone(UTC).date() - self.first_on).days
 
     @property
     def is_judged(self) -> Flags:

@@ -85,7 +85,7 @@ def veils_of(rng: np.random.Generator, share: Figures, in_pass: Places) -> Veils
     """
     beside = share < 0.999
     which = rng.random(share.size)
-    rates = np.where(beside[:, None], (0.045, 0.018, 0.022), (0.012, 0.003, 0.004))
+    rates = np.where(beside[:, None], (0.036, 0.013, 0.018), (0.010, 0.002, 0.004))
     edges = rates.cumsum(axis=1)
     haze = np.where(which < edges[:, 0], rng.exponential(0.035, share.size), 0.0)
     cloud = np.where(

@@ -106,9 +106,9 @@ def land_of(
         brightness=np.exp(rng.normal(0.0, 0.16, parcels)),
         thirst=np.exp(rng.normal(0.0, 0.35, parcels)),
         mowings=np.array(MOWINGS)
-        + rng.normal(0.0, 5.0, (1, seasons, 1))
-        + rng.normal(0.0, 6.0, (parcels, 1, 1))
-        + rng.normal(0.0, 5.0, (parcels, seasons, len(MOWINGS))),
+        + rng.normal(0.0, 4.0, (1, seasons, 1))
+        + rng.normal(0.0, 4.0, (parcels, 1, 1))
+        + rng.normal(0.0, 3.0, (parcels, seasons, len(MOWINGS))),
         litter_left=rng.uniform(0.45, 0.9, (parcels, seasons)),
         tilled_after=rng.uniform(4.0, 45.0, (parcels, seasons)),
         catch_lai=_catch_lai(rng, parcels, seasons),
@@ -160,7 +160,7 @@ class OwnWeather:
 def own_weather_of(rng: np.random.Generator, places: Figures, days: int) -> OwnWeather:
     """Draw weather by place, and the ups and downs of single parcels."""
     parcels = len(places)
-    drift = wandering(rng, 2, days, memory_days=30, spread=0.035)
+    drift = wandering(rng, 2, days, memory_days=30, spread=0.025)
     fields_at = np.stack([patches(rng, places, size_km=9.0) for _ in range(2)])
     showers = np.zeros((parcels, days))
     for day in np.flatnonzero(rng.random(days) < 0.10):
@@ -168,9 +168,9 @@ def own_weather_of(rng: np.random.Generator, places: Figures, days: int) -> OwnW
         lasts = min(8, days - int(day))
         showers[:, day : day + lasts] += fallen[:, None] * np.exp(-np.arange(lasts) / 4.0)
     return OwnWeather(
-        growth=wandering(rng, parcels, days, memory_days=30, spread=0.06) + fields_at.T @ drift,
-        greening=wandering(rng, parcels, days, memory_days=40, spread=0.05),
-        leaf_water=wandering(rng, parcels, days, memory_days=20, spread=0.05),
+        growth=wandering(rng, parcels, days, memory_days=30, spread=0.045) + fields_at.T @ drift,
+        greening=wandering(rng, parcels, days, memory_days=40, spread=0.04),
+        leaf_water=wandering(rng, parcels, days, memory_days=20, spread=0.04),
         showers=showers,
     )
 
@@ -217,13 +217,13 @@ def _shifts(rng: np.random.Generator, crop: Places, places: Figures) -> Figures:
     by_crop = rng.normal(0.0, 2.5, (len(CROPS), seasons, 4))
     shifts = by_crop[crop, np.arange(seasons)]
     lasting = rng.normal(0.0, 3.0, (parcels, 1)) + 1.5 * patches(rng, places, size_km=12.0)[:, None]
-    sown = rng.normal(0.0, 4.0, every) + rng.normal(0.0, 5.5, (parcels, seasons))
-    variety = rng.normal(0.0, 2.5, (parcels, seasons))
+    sown = rng.normal(0.0, 4.0, every) + rng.normal(0.0, 3.5, (parcels, seasons))
+    variety = rng.normal(0.0, 1.5, (parcels, seasons))
     shifts[..., SOWING] += lasting + sown
     shifts[..., GROWTH] += lasting + 6.0 * region + 0.3 * sown + variety
     shifts[..., RIPENING] += lasting + 5.5 * region + 0.2 * sown + 1.5 * variety
     shifts[..., HARVEST] += (
-        lasting + 5.5 * region + 1.2 * variety + rng.normal(0.0, 4.5, (parcels, seasons))
+        lasting + 5.5 * region + 1.2 * variety + rng.normal(0.0, 3.0, (parcels, seasons))
     )
     return np.clip(shifts, -24.0, 24.0)
 
@@ -232,7 +232,7 @@ def _vigour(rng: np.random.Generator, crop: Places) -> Figures:
     parcels, seasons = crop.shape
     by_crop = rng.normal(0.0, 0.08, (len(CROPS), seasons))[crop, np.arange(seasons)]
     lasting = rng.normal(0.0, 0.09, (parcels, 1))
-    factor: Figures = np.exp(by_crop + lasting + rng.normal(0.0, 0.09, (parcels, seasons)))
+    factor: Figures = np.exp(by_crop + lasting + rng.normal(0.0, 0.06, (parcels, seasons)))
     return factor
 
 
@@ -302,7 +302,7 @@ def _leave_stubble(
 
 def _catch_lai(rng: np.random.Generator, parcels: int, seasons: int) -> Figures:
     """Draw who sows catch crops: mostly a lasting habit."""
-    does = (rng.random((parcels, 1)) < 0.3) ^ (rng.random((parcels, seasons)) < 0.12)
+    does = (rng.random((parcels, 1)) < 0.3) ^ (rng.random((parcels, seasons)) < 0.06)
     return np.where(
         does,
         rng.uniform(1.0, 2.2, (parcels, seasons)),
