@@ -77,7 +77,7 @@ def get_baseline(
         seasons = seasons_of(session, [parcel.id]).get(parcel.id, [])
     grown = crop or _crop_of_season(seasons, days)
     expected = expected_at(
-        unpacked(row.arrays),
+        unpacked(row.arrays).baselines,
         parcel=parcel.ref,
         crop=grown or "",
         measure=measures[0],

@@ -18,15 +18,15 @@ from sqlalchemy.orm import Session
 
 from service.alerts.alert import Alert
 from service.alerts.rules import RULES
-from service.assess import State, Step, alerts_after, fold, in_order
+from service.assess import Prepared, State, Step, alerts_after, fold, in_order, prepare
 from service.clock import now
 from service.errors import Unavailable
 from service.jobs.announce import announce_alert
 from service.jobs.deliver import enqueue as enqueue_deliveries
 from service.jobs.deliver import fresh_promises
 from service.jobs.resources import Resources, resources
-from service.jobs.season_looks import Spell, history_of, passes_of
-from service.seasons.baseline import Baselines, fit_baselines
+from service.jobs.season_looks import history_of, passes_of
+from service.seasons.history import History
 from service.seasons.judgement import Judgements, OnePass
 from service.store.alert_tables import BaselineRow, SeasonFold
 from service.store.columns import microseconds
@@ -38,6 +38,7 @@ from service.store.judging import (
     find_baselines,
     history_key,
     packed,
+    real_departures,
     spoiled_looks,
     squeezed,
     state_before,
@@ -60,7 +61,7 @@ class _Season:
 
     season: int
     wanted: int
-    baselines: Baselines
+    prepared: Prepared
     fitted_from: str
     baseline_id: int | None
     judged: Sequence[JudgedPass]
@@ -104,25 +105,34 @@ def _judge_axis(work: Resources, axis: Axis) -> None:
 
 def _state_before(session: Session, axis: Axis, season: int) -> State:
     kept = state_before(session, axis, season)
-    return State.start(RULE) if kept is None else State.from_dict(unsqueezed(kept), RULE)
+    return State.start(RULE, region=axis.id) if kept is None else unsqueezed(kept)
 
 
 def _judge_season(session: Session, axis: Axis, season: int, wanted: int, before: State) -> _Season:
     key = history_key(session, axis, season)
     row = find_baselines(session, axis.id, season)
     is_fitted = row is not None and row.history == key
-    baselines = (
+    prepared = (
         unpacked(row.arrays)
         if row is not None and is_fitted
-        else fit_baselines(history_of(session, axis, season, _spoiled(session, axis, season)))
+        else prepare(_history(session, axis, season), [RULE])
     )
     passes = passes_of(session, axis, season)
     actions = actions_in(session, axis, season)
-    steps = list(fold(before, passes, actions, baselines=baselines, rule=RULE))
+    steps = list(
+        fold(
+            before,
+            passes,
+            actions,
+            baselines=prepared.baselines,
+            rule=RULE,
+            tuned=prepared.tuned.get(RULE.id),
+        )
+    )
     return _Season(
         season=season,
         wanted=wanted,
-        baselines=baselines,
+        prepared=prepared,
         fitted_from=key,
         baseline_id=row.id if row is not None and is_fitted else None,
         judged=_judged_passes(axis, season, passes, steps),
@@ -131,10 +141,15 @@ def _judge_season(session: Session, axis: Axis, season: int, wanted: int, before
     )
 
 
-def _spoiled(session: Session, axis: Axis, season: int) -> list[Spell]:
-    """Return the spells of parcels that must not shape a season's baselines."""
+def _history(session: Session, axis: Axis, season: int) -> History:
     begin = axis.begins_at(season)
-    return [spell for spell in spoiled_looks(session, begin) if spell[0] in axis.refs]
+    return history_of(
+        session,
+        axis,
+        season,
+        spoiled=spoiled_looks(session, begin),
+        real=real_departures(session, begin),
+    )
 
 
 def _judged_passes(
@@ -188,7 +203,7 @@ def _record(
             at=at,
         )
         rows[each.season].done = each.wanted
-        rows[each.season].state = squeezed(each.state.to_dict())
+        rows[each.season].state = squeezed(each.state)
     alerts, seasons = _all_alerts(axis, judged)
     parcels = {ref: parcel_id for parcel_id, ref in axis.refs.items()}
     happened = put_alerts(
@@ -206,9 +221,9 @@ def _baseline_id(session: Session, axis: Axis, judged: _Season, *, at: datetime)
         axis=axis.id,
         season=judged.season,
         history=judged.fitted_from,
-        version=judged.baselines.version,
-        measures=list(judged.baselines.measures),
-        arrays=packed(judged.baselines),
+        version=judged.prepared.baselines.version,
+        measures=list(judged.prepared.baselines.measures),
+        arrays=packed(judged.prepared),
         fitted_at=at,
     )
     session.add(row)

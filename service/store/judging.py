@@ -3,19 +3,19 @@
 import hashlib
 import io
 import json
-import zlib
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, date, datetime, time, timedelta
 from typing import Any, Final
 
 import numpy as np
-from sqlalchemy import func, or_, select
+from numpy.typing import NDArray
+from sqlalchemy import ColumnElement, func, or_, select
 from sqlalchemy.orm import Session
 
 from service.alerts.actions import Action, ActionKind
+from service.assess import Prepared, State
 from service.seasons.axis import SeasonStart, season_ending_in, season_holding
-from service.seasons.baseline import Baselines
 from service.store.alert_tables import AlertChange, AlertRow, BaselineRow, SeasonFold
 from service.store.tables import (
     Boundary,
@@ -29,6 +29,8 @@ from service.store.tables import (
 
 SPOILED: Final = ("confirmed", "bad_data")
 """Verdicts that take an alert's looks out of the baselines; no verdict does so too."""
+REAL: Final = ("confirmed", "expected")
+"""Verdicts by which a replayed alarm is no false one."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -173,17 +175,32 @@ def history_key(session: Session, axis: Axis, season: int) -> str:
         .where(CropSeason.from_on < first)
         .order_by(CropSeason.parcel_id, CropSeason.from_on)
     ).all()
-    spoiled = [(p, a.isoformat(), b.isoformat()) for p, a, b in spoiled_looks(session, begin)]
+    spoiled = [
+        (p, a.isoformat(), b.isoformat())
+        for spells in (spoiled_looks(session, begin), real_departures(session, begin))
+        for p, a, b in spells
+    ]
     told = [axis.id, season, len(axis.refs), list(writes), [list(map(str, row)) for row in crops]]
     return hashlib.sha256(json.dumps([told, spoiled]).encode()).hexdigest()
 
 
-def spoiled_looks(session: Session, until: datetime) -> list[tuple[int, datetime, datetime]]:
-    """Return (parcel, first, last instant) of looks that must not shape a baseline."""
+Spell = tuple[int, datetime, datetime]
+"""A parcel, and first and last instant of some of its looks."""
+
+
+def spoiled_looks(session: Session, until: datetime) -> list[Spell]:
+    """Return the looks that must not shape a baseline."""
+    return _spells(session, until, or_(AlertRow.verdict.is_(None), AlertRow.verdict.in_(SPOILED)))
+
+
+def real_departures(session: Session, until: datetime) -> list[Spell]:
+    """Return the looks of which a person said that they had departed indeed."""
+    return _spells(session, until, AlertRow.verdict.in_(REAL))
+
+
+def _spells(session: Session, until: datetime, condition: ColumnElement[bool]) -> list[Spell]:
     query = select(AlertRow).where(
-        AlertRow.state != "retracted",
-        AlertRow.first_departure_at < until,
-        or_(AlertRow.verdict.is_(None), AlertRow.verdict.in_(SPOILED)),
+        AlertRow.state != "retracted", AlertRow.first_departure_at < until, condition
     )
     return [
         (row.parcel_id, row.first_departure_at, row.closed_at or until)
@@ -204,28 +221,35 @@ def find_newest_baselines(session: Session, axis_id: str) -> BaselineRow | None:
     return session.scalar(newest.limit(1))
 
 
-def packed(baselines: Baselines) -> bytes:
-    """Return baselines as the bytes of an npz file."""
+def packed(prepared: Prepared) -> bytes:
+    """Return baselines and what replaying the past says as the bytes of an npz file."""
+    return _npz(prepared.to_arrays())
+
+
+def unpacked(arrays: bytes) -> Prepared:
+    """Return what `packed` wrote."""
+    return Prepared.from_arrays(_arrays(arrays))
+
+
+def squeezed(state: State) -> bytes:
+    """Return a fold's state as the bytes of an npz file."""
+    return _npz(state.to_arrays())
+
+
+def unsqueezed(state: bytes) -> State:
+    """Return the state that `squeezed` wrote."""
+    return State.from_arrays(_arrays(state))
+
+
+def _npz(arrays: Mapping[str, NDArray[Any]]) -> bytes:
     file = io.BytesIO()
-    np.savez_compressed(file, **baselines.to_arrays())  # type: ignore[arg-type]
+    np.savez_compressed(file, **arrays)  # type: ignore[arg-type]
     return file.getvalue()
 
 
-def unpacked(arrays: bytes) -> Baselines:
-    """Return the baselines that `packed` wrote."""
-    with np.load(io.BytesIO(arrays), allow_pickle=False) as file:
-        return Baselines.from_arrays(dict(file))
-
-
-def squeezed(state: Mapping[str, Any]) -> bytes:
-    """Return a fold's state as compressed JSON."""
-    return zlib.compress(json.dumps(state, separators=(",", ":")).encode(), 1)
-
-
-def unsqueezed(state: bytes) -> dict[str, Any]:
-    """Return the state that `squeezed` wrote."""
-    members: dict[str, Any] = json.loads(zlib.decompress(state))
-    return members
+def _arrays(npz: bytes) -> dict[str, NDArray[Any]]:
+    with np.load(io.BytesIO(npz), allow_pickle=False) as file:
+        return dict(file)
 
 
 def state_before(session: Session, axis: Axis, season: int) -> bytes | None:

@@ -26,7 +26,7 @@ PURE_ROOMS = (
     "seasons",
     "alerts",
     "observe.py",
-    "assess.py",
+    "assess",
     "exports.py",
 )
 
