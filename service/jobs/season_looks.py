@@ -8,23 +8,21 @@ import numpy as np
 from numpy.typing import NDArray
 from sqlalchemy.orm import Session
 
-from service.assess import BASELINE_MEASURES
+from service.assess import BASELINE_MEASURES, LOOK_MEASURES
 from service.seasons.history import History
 from service.seasons.judgement import OnePass
 from service.store.columns import microseconds
 from service.store.crop_labels import CropLabels, crop_labels
-from service.store.judging import Axis
+from service.store.judging import Axis, Spell
 from service.store.look_arrays import read_looks
 from service.store.look_choice import Looks
 from service.store.looks import LOOK_SHARE
 
 Numbers = NDArray[np.int64]
-Spell = tuple[int, datetime, datetime]
-"""A parcel, and the first and the last instant of something."""
-
 _DAY_US: Final = 86_400_000_000
 _DAY_0: Final = date(1970, 1, 1).toordinal()
 _TICK: Final = timedelta(microseconds=1)
+_DAY: Final = timedelta(days=1)
 
 
 def passes_of(
@@ -33,9 +31,7 @@ def passes_of(
     """Return the judged looks of a season, pass by pass; only those later than `after`."""
     since = axis.begins_at(season) if after is None else after + _TICK
     until = axis.ends_at(season)
-    looks = read_looks(
-        session, axis.refs, BASELINE_MEASURES, since=since, until=until, is_judged=True
-    )
+    looks = read_looks(session, axis.refs, LOOK_MEASURES, since=since, until=until, is_judged=True)
     labels = crop_labels(session, axis.refs, since=since.date(), until=until.date())
     begun = looks.begun()
     # A pass is one platform's; looks are by parcel and are taken apart by pass.
@@ -65,7 +61,7 @@ def _one_pass(
         crops=[names[code] for code in crop.tolist()],
         scenes=[looks.refs[at] for at in scene],
         looked_at=[looks.acquired_at[at] for at in scene],
-        measures=BASELINE_MEASURES,
+        measures=LOOK_MEASURES,
         values=looks.values.astype(np.float64),
         valid_share=_as_told(looks.valid_share),
         water=_as_told(looks.water),
@@ -84,14 +80,28 @@ def _days(looks: Looks) -> Numbers:
     return days
 
 
-def history_of(session: Session, axis: Axis, season: int, spoiled: Iterable[Spell]) -> History:
-    """Return the looks of the seasons before one, less those that must not shape a baseline."""
-    begin = axis.begins_at(season)
+def history_of(
+    session: Session,
+    axis: Axis,
+    season: int,
+    *,
+    spoiled: Iterable[Spell],
+    real: Iterable[Spell],
+) -> History:
+    """Return the looks of the seasons before one, and which of them shape baselines.
+
+    Parameters
+    ----------
+    spoiled
+        Looks that must not shape a baseline.
+    real
+        Looks of which a person said that they had departed indeed.
+    """
+    begin, end = axis.begins_at(season), axis.ends_at(season)
     looks = read_looks(session, axis.refs, BASELINE_MEASURES, since=None, until=begin)
-    is_kept = looks.valid_share >= np.float32(LOOK_SHARE)
-    is_kept &= ~_within(looks, spoiled)
-    looks = looks.kept(is_kept)
-    labels = crop_labels(session, axis.refs, since=None, until=begin.date())
+    looks = looks.kept(looks.valid_share >= np.float32(LOOK_SHARE))
+    labels = crop_labels(session, axis.refs, since=None, until=end.date() - _DAY)
+    labelled = labels.parcels_between(begin.date(), end.date() - _DAY)
     known, parcel = np.unique(looks.parcel_ids, return_inverse=True)
     return History(
         parcels=tuple(axis.refs[parcel_id] for parcel_id in known.tolist()),
@@ -103,6 +113,11 @@ def history_of(session: Session, axis: Axis, season: int, spoiled: Iterable[Spel
         day=_by_scene(looks, [axis.day_of(at) for at in looks.acquired_at]),
         pass_at=_by_scene(looks, [int(at.timestamp()) for at in looks.begun()]),
         values=looks.values.astype(np.float64),
+        shapes=~_within(looks, spoiled),
+        is_known=_within(looks, real),
+        without_label=frozenset(
+            ref for parcel_id, ref in axis.refs.items() if parcel_id not in labelled
+        ),
     )
 
 

@@ -49,6 +49,12 @@ class CropLabels:
         )
         return np.where(is_held, self.crop[held], UNLABELLED)
 
+    def parcels_between(self, first: date, last: date) -> set[int]:
+        """Return the parcels that carry a crop on any day of an interval, both included."""
+        begins = self.key % _DAY_STEP
+        shares = (begins <= last.toordinal()) & (self.until >= first.toordinal())
+        return set((self.key[shares] // _DAY_STEP).tolist())
+
 
 def crop_labels(
     session: Session, parcel_ids: Collection[int], *, since: date | None, until: date
