@@ -193,6 +193,13 @@ KINDS: Final[Mapping[str, Kind]] = {
         title="Already served", page="Another process works on the same data folder."
     ),
     "not-ready": Kind(title="Not ready", page="The service can't work at present."),
+    "rule-not-found": Kind(title="Rule not found", page="No rule has this id."),
+    "notice-not-found": Kind(
+        title="Notice not found", page="No regional notice has this id, or none for this key."
+    ),
+    "entry-not-found": Kind(
+        title="Diary entry not found", page="The parcel's diary has no entry with this id."
+    ),
     "alert-not-found": Kind(title="Alert not found", page="No alert has this id."),
     "alert-state": Kind(
         title="Alert state", page="What was asked for does not fit what has become of the alert."
@@ -200,13 +207,13 @@ KINDS: Final[Mapping[str, Kind]] = {
     "precondition-required": Kind(
         title="Precondition required",
         status=428,
-        page="Changes of an alert carry `If-Match` with its entity tag, so that two people do not "
-        "overwrite each other.",
+        page="Changes of an alert or a rule carry `If-Match` with its entity tag, so that two "
+        "people do not overwrite each other.",
     ),
     "precondition-failed": Kind(
         title="Precondition failed",
         status=412,
-        page="Somebody, or judging, has changed the alert since it was looked at.",
+        page="Somebody, or judging, has changed the alert or rule since it was looked at.",
     ),
     "no-baseline": Kind(
         title="No baseline",

@@ -67,7 +67,7 @@ def _may_open(one: OnePass, judged: NDArray[np.int64], beside: Beside) -> NDArra
         return np.zeros(judged.size, dtype=bool)
     return np.fromiter(
         (
-            (rule.crops is None or one.crops[int(look)] in rule.crops)
+            (rule.crops is None or one.grown[int(look)] in rule.crops)
             and (
                 rule.holdings is None
                 or beside.holdings.get(one.parcels[int(look)]) in rule.holdings
@@ -108,7 +108,7 @@ def _departed(
     return DepartedLook(
         at=microseconds(one.looked_at[look]),
         scene=one.scenes[look],
-        crop=one.crops[look] or "",
+        crop=one.grown[look] or "",
         score=score,
         departs=bool(score >= _limits_of(judgements, look, rule).look),
         index=index,

@@ -7,10 +7,12 @@ from urllib.parse import quote
 
 from sqlalchemy.orm import Session
 
+from service.alerts.alert import CAUTION
 from service.jobs.deliver import Promise, promise_of
 from service.settings import Settings
 from service.store.alerts import document_of
 from service.store.judgements import Happened
+from service.store.notices import OPENED, NoticeTold
 from service.store.tables import Parcel, Scene, Webhook
 from service.store.unseen import Unseen
 from service.store.webhooks import Announcement, announce, announce_to, event_id_of
@@ -38,7 +40,7 @@ def announcement(
         occurred_at=at,
         subject=subject,
         data=data,
-        droppable=("indices", "scenes", "departures"),
+        droppable=("indices", "scenes", "departures", "crops"),
     )
     return Announcement(
         event_id=event_id,
@@ -101,6 +103,35 @@ def announce_alert(
         severity=row.severity,
     )
     return [promise_of(delivery, at=at) for delivery in announce(session, told, at=at)]
+
+
+def announce_notice(
+    session: Session, settings: Settings, told: NoticeTold, *, at: datetime
+) -> list[Promise]:
+    """Tell that a regional notice opened or ended; return the attempts that were promised."""
+    row = told.row
+    closed_at = row.closed_at
+    event = announcement(
+        settings,
+        EventName.REGION_OPENED if told.kind == OPENED else EventName.REGION_CLOSED,
+        key=(row.id, told.kind, row.revision),
+        subject=row.id,
+        data={
+            "id": row.id,
+            "kind": row.kind,
+            # Told in the order in which it happened, even if it is over by now.
+            "state": "open" if told.kind == OPENED else row.state,
+            "opened_at": row.opened_at.isoformat().replace("+00:00", "Z"),
+            "closed_at": closed_at and closed_at.isoformat().replace("+00:00", "Z"),
+            "measure": row.measure,
+            "shift": round(row.shift, 4),
+            "crops": row.crops,
+            "link": f"{settings.public_url}/v1/notices/{row.id}",
+            "caution": CAUTION,
+        },
+        at=at,
+    )
+    return [promise_of(delivery, at=at) for delivery in announce(session, event, at=at)]
 
 
 def announce_unseen(

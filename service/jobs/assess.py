@@ -17,19 +17,22 @@ from dbos import DBOS, SetWorkflowID
 from sqlalchemy.orm import Session
 
 from service.alerts.alert import Alert
-from service.alerts.rules import RULES
-from service.assess import Prepared, State, Step, alerts_after, fold, in_order, prepare
+from service.alerts.explained import Explained
+from service.alerts.notices import Notice
+from service.assess import Prepared, State, prepare
 from service.clock import now
 from service.errors import Unavailable
-from service.jobs.announce import announce_alert
+from service.jobs.announce import announce_alert, announce_notice
 from service.jobs.deliver import enqueue as enqueue_deliveries
 from service.jobs.deliver import fresh_promises
+from service.jobs.folding import Folded, Known, fold_season, known_of, rests_on
 from service.jobs.resources import Resources, resources
 from service.jobs.season_looks import history_of, passes_of
 from service.seasons.history import History
 from service.seasons.judgement import Judgements, OnePass
 from service.store.alert_tables import BaselineRow, SeasonFold
 from service.store.columns import microseconds
+from service.store.crops import labels_in
 from service.store.judgements import JUDGED, JudgedPass, put_alerts, put_judgements
 from service.store.judging import (
     Axis,
@@ -46,10 +49,11 @@ from service.store.judging import (
     unsqueezed,
     wanted_folds,
 )
+from service.store.notices import put_explained, put_notices
 from service.store.sessions import serialise
+from service.store.tuning import told_of
 
 QUEUE: Final = "assess"
-RULE: Final = RULES["default"]
 _TRIES: Final = 5
 _ONE_AT_A_TIME: Final = threading.Lock()
 _log = structlog.get_logger()
@@ -64,9 +68,7 @@ class _Season:
     prepared: Prepared
     fitted_from: str
     baseline_id: int | None
-    judged: Sequence[JudgedPass]
-    alerts: Mapping[str, Alert]
-    state: State
+    folded: Folded
 
 
 def judge_wanted(work: Resources) -> None:
@@ -95,39 +97,44 @@ def _judge_axis(work: Resources, axis: Axis) -> None:
     """Judge the promised seasons of an axis in order of time, and record all of it at once."""
     with work.sessions.reading() as session:
         wanted = {row.season: row.wanted for row in wanted_folds(session) if row.axis == axis.id}
+        known = known_of(session, axis)
         judged: list[_Season] = []
         for season in sorted(wanted):
-            before = judged[-1].state if judged else _state_before(session, axis, season)
-            judged.append(_judge_season(session, axis, season, wanted[season], before))
+            before = judged[-1].folded.states if judged else _states_before(session, axis, season)
+            judged.append(_judge_season(session, axis, season, wanted[season], known, before))
     with work.sessions.writing() as session:
-        _record(session, work, axis, judged, at=now())
+        _record(session, work, axis, judged, known, at=now())
 
 
-def _state_before(session: Session, axis: Axis, season: int) -> State:
+def _states_before(session: Session, axis: Axis, season: int) -> dict[str, State]:
     kept = state_before(session, axis, season)
-    return State.start(RULE, region=axis.id) if kept is None else unsqueezed(kept)
+    return {} if kept is None else unsqueezed(kept)
 
 
-def _judge_season(session: Session, axis: Axis, season: int, wanted: int, before: State) -> _Season:
-    key = history_key(session, axis, season)
+def _judge_season(
+    session: Session,
+    axis: Axis,
+    season: int,
+    wanted: int,
+    known: Known,
+    before: Mapping[str, State],
+) -> _Season:
+    labels = labels_in(session, axis, season)
+    key = history_key(session, axis, season, [*rests_on(known), sorted(labels.items())])
     row = find_baselines(session, axis.id, season)
     is_fitted = row is not None and row.history == key
     prepared = (
         unpacked(row.arrays)
         if row is not None and is_fitted
-        else prepare(_history(session, axis, season), [RULE])
+        else prepare(_history(session, axis, season, labels), known.rules, known.holdings)
     )
-    passes = passes_of(session, axis, season)
-    actions = actions_in(session, axis, season)
-    steps = list(
-        fold(
-            before,
-            passes,
-            actions,
-            baselines=prepared.baselines,
-            rule=RULE,
-            tuned=prepared.tuned.get(RULE.id),
-        )
+    folded = fold_season(
+        known,
+        before,
+        passes_of(session, axis, season, compared=labels),
+        actions_in(session, axis, season),
+        prepared,
+        region=axis.id,
     )
     return _Season(
         season=season,
@@ -135,13 +142,11 @@ def _judge_season(session: Session, axis: Axis, season: int, wanted: int, before
         prepared=prepared,
         fitted_from=key,
         baseline_id=row.id if row is not None and is_fitted else None,
-        judged=_judged_passes(axis, season, passes, steps),
-        alerts=alerts_after(steps),
-        state=steps[-1].state if steps else before,
+        folded=folded,
     )
 
 
-def _history(session: Session, axis: Axis, season: int) -> History:
+def _history(session: Session, axis: Axis, season: int, labels: Mapping[str, str]) -> History:
     begin = axis.begins_at(season)
     return history_of(
         session,
@@ -149,18 +154,8 @@ def _history(session: Session, axis: Axis, season: int) -> History:
         season,
         spoiled=spoiled_looks(session, begin),
         real=real_departures(session, begin),
+        compared=labels,
     )
-
-
-def _judged_passes(
-    axis: Axis, season: int, passes: Sequence[OnePass], steps: Sequence[Step]
-) -> list[JudgedPass]:
-    ids = {ref: parcel_id for parcel_id, ref in axis.refs.items()}
-    judgements = [step.judgements for step in steps if step.judgements is not None]
-    return [
-        _judged_pass(one, judged, season, ids)
-        for one, judged in zip(in_order(passes), judgements, strict=True)
-    ]
 
 
 def _judged_pass(
@@ -173,7 +168,7 @@ def _judged_pass(
         baseline_season=season,
         parcel_ids=np.fromiter((ids[ref] for ref in one.parcels), np.int64, size),
         instants=np.fromiter((instants[at] for at in one.looked_at), np.int64, size),
-        crops=one.crops,
+        crops=one.grown,
         unjudged=[None if reason is None else reason.value for reason in judged.unjudged],
         score=np.where(np.isfinite(judged.score), judged.score, np.nan),
         figures=figures.reshape(size, -1),
@@ -181,7 +176,13 @@ def _judged_pass(
 
 
 def _record(
-    session: Session, work: Resources, axis: Axis, judged: Sequence[_Season], *, at: datetime
+    session: Session,
+    work: Resources,
+    axis: Axis,
+    judged: Sequence[_Season],
+    known: Known,
+    *,
+    at: datetime,
 ) -> None:
     """Record what judging found, unless something changed while it was being worked out."""
     serialise(session, "judging")
@@ -192,26 +193,45 @@ def _record(
     if any(rows[each.season].wanted != each.wanted for each in judged):
         return
     baseline_ids = {each.season: _baseline_id(session, axis, each, at=at) for each in judged}
+    parcels = {ref: parcel_id for parcel_id, ref in axis.refs.items()}
     for each in judged:
         put_judgements(
             session,
             axis.refs,
-            each.judged,
+            [_judged_pass(one, of, each.season, parcels) for one, of in each.folded.judged],
             baseline_ids,
             since=axis.begins_at(each.season),
             until=axis.ends_at(each.season),
             at=at,
         )
         rows[each.season].done = each.wanted
-        rows[each.season].state = squeezed(each.state)
-    alerts, seasons = _all_alerts(axis, judged)
-    parcels = {ref: parcel_id for parcel_id, ref in axis.refs.items()}
-    happened = put_alerts(
-        session, axis.id, seasons, alerts, parcels, [each.season for each in judged], at=at
-    )
-    _log.info("seasons judged", axis=axis.id, seasons=sorted(rows), changes=len(happened))
-    for one in happened:
-        announce_alert(session, work.settings, one, at=at)
+        rows[each.season].state = squeezed(each.folded.states)
+    _put_found(session, work, axis, judged, known, parcels, at=at)
+    _log.info("seasons judged", axis=axis.id, seasons=sorted(rows))
+
+
+def _put_found(
+    session: Session,
+    work: Resources,
+    axis: Axis,
+    judged: Sequence[_Season],
+    known: Known,
+    parcels: Mapping[str, int],
+    *,
+    at: datetime,
+) -> None:
+    """Record alerts, notices and explained departures, and promise what is to be told."""
+    alerts, explained, notices = _found(judged)
+    folded = [each.season for each in judged]
+    seasons = {key: axis.season_of(each.opened_at) for key, each in (alerts | notices).items()}
+    held = {key: axis.season_of(datetime.fromisoformat(e.at)) for key, e in explained.items()}
+    for happened in put_alerts(
+        session, axis.id, seasons, alerts, parcels, folded, rules=known.opening, at=at
+    ):
+        announce_alert(session, work.settings, happened, at=at)
+    for told in put_notices(session, axis.id, seasons, notices, folded, at=at):
+        announce_notice(session, work.settings, told, at=at)
+    put_explained(session, axis.id, held, explained, parcels, folded, at=at)
 
 
 def _baseline_id(session: Session, axis: Axis, judged: _Season, *, at: datetime) -> int:
@@ -224,6 +244,7 @@ def _baseline_id(session: Session, axis: Axis, judged: _Season, *, at: datetime)
         version=judged.prepared.baselines.version,
         measures=list(judged.prepared.baselines.measures),
         arrays=packed(judged.prepared),
+        tuned=told_of(judged.prepared.tuned),
         fitted_at=at,
     )
     session.add(row)
@@ -231,12 +252,18 @@ def _baseline_id(session: Session, axis: Axis, judged: _Season, *, at: datetime)
     return row.id
 
 
-def _all_alerts(axis: Axis, judged: Sequence[_Season]) -> tuple[dict[str, Alert], dict[str, int]]:
-    """Return the alerts of all seasons as they ended, and the season that opened each."""
+def _found(
+    judged: Sequence[_Season],
+) -> tuple[dict[str, Alert], dict[str, Explained], dict[str, Notice]]:
+    """Return what the seasons gave together, as it ended."""
     alerts: dict[str, Alert] = {}
+    explained: dict[str, Explained] = {}
+    notices: dict[str, Notice] = {}
     for each in judged:
-        alerts |= each.alerts
-    return alerts, {key: axis.season_of(alert.opened_at) for key, alert in alerts.items()}
+        alerts |= each.folded.alerts
+        explained |= each.folded.explained
+        notices |= each.folded.notices
+    return alerts, explained, notices
 
 
 @DBOS.workflow(name="assess", max_recovery_attempts=10)

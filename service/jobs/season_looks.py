@@ -1,6 +1,6 @@
 """The looks of a season pass by pass, and those of the seasons before it as history."""
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from datetime import date, datetime, timedelta
 from typing import Any, Final
 
@@ -13,12 +13,17 @@ from service.seasons.history import History
 from service.seasons.judgement import OnePass
 from service.store.columns import microseconds
 from service.store.crop_labels import CropLabels, crop_labels
-from service.store.judging import Axis, Spell
+from service.store.judging import Axis
 from service.store.look_arrays import read_looks
 from service.store.look_choice import Looks
 from service.store.looks import LOOK_SHARE
 
 Numbers = NDArray[np.int64]
+Spell = tuple[int, datetime, datetime]
+"""A parcel, and the first and the last instant of something."""
+
+NOTHING: Final[Mapping[str, str]] = {}
+
 _DAY_US: Final = 86_400_000_000
 _DAY_0: Final = date(1970, 1, 1).toordinal()
 _TICK: Final = timedelta(microseconds=1)
@@ -26,9 +31,17 @@ _DAY: Final = timedelta(days=1)
 
 
 def passes_of(
-    session: Session, axis: Axis, season: int, *, after: datetime | None = None
+    session: Session,
+    axis: Axis,
+    season: int,
+    *,
+    after: datetime | None = None,
+    compared: Mapping[str, str] = NOTHING,
 ) -> list[OnePass]:
-    """Return the judged looks of a season, pass by pass; only those later than `after`."""
+    """Return the judged looks of a season, pass by pass; only those later than `after`.
+
+    `compared` are the labels under which some crops are compared.
+    """
     since = axis.begins_at(season) if after is None else after + _TICK
     until = axis.ends_at(season)
     looks = read_looks(session, axis.refs, LOOK_MEASURES, since=since, until=until, is_judged=True)
@@ -42,23 +55,30 @@ def passes_of(
     order = np.argsort(of_look, kind="stable")
     edges = np.searchsorted(of_look[order], np.arange(len(keys) + 1))
     return [
-        _one_pass(axis, season, at, looks.kept(order[first:last]), labels)
+        _one_pass(axis, season, at, looks.kept(order[first:last]), labels, compared)
         for (at, _), first, last in zip(keys, edges[:-1], edges[1:], strict=True)
     ]
 
 
 def _one_pass(
-    axis: Axis, season: int, acquired_at: datetime, looks: Looks, labels: CropLabels
+    axis: Axis,
+    season: int,
+    acquired_at: datetime,
+    looks: Looks,
+    labels: CropLabels,
+    compared: Mapping[str, str],
 ) -> OnePass:
-    crop = labels.on(looks.parcel_ids, _days(looks))
+    crop = labels.on(looks.parcel_ids, _days(looks)).tolist()
     names = (*labels.crops, None)
+    under = (*(compared.get(name, name) for name in labels.crops), None)
     scene = looks.scene.tolist()
     return OnePass(
         acquired_at=acquired_at,
         season=season,
         day=axis.day_of(acquired_at),
         parcels=[axis.refs[parcel_id] for parcel_id in looks.parcel_ids.tolist()],
-        crops=[names[code] for code in crop.tolist()],
+        crops=[under[code] for code in crop],
+        declared=[names[code] for code in crop],
         scenes=[looks.refs[at] for at in scene],
         looked_at=[looks.acquired_at[at] for at in scene],
         measures=LOOK_MEASURES,
@@ -87,6 +107,7 @@ def history_of(
     *,
     spoiled: Iterable[Spell],
     real: Iterable[Spell],
+    compared: Mapping[str, str] = NOTHING,
 ) -> History:
     """Return the looks of the seasons before one, and which of them shape baselines.
 
@@ -96,12 +117,15 @@ def history_of(
         Looks that must not shape a baseline.
     real
         Looks of which a person said that they had departed indeed.
+    compared
+        Labels under which some crops are compared.
     """
     begin, end = axis.begins_at(season), axis.ends_at(season)
     looks = read_looks(session, axis.refs, BASELINE_MEASURES, since=None, until=begin)
     looks = looks.kept(looks.valid_share >= np.float32(LOOK_SHARE))
     labels = crop_labels(session, axis.refs, since=None, until=end.date() - _DAY)
     labelled = labels.parcels_between(begin.date(), end.date() - _DAY)
+    labels = labels.under(compared)
     known, parcel = np.unique(looks.parcel_ids, return_inverse=True)
     return History(
         parcels=tuple(axis.refs[parcel_id] for parcel_id in known.tolist()),

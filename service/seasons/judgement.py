@@ -47,6 +47,9 @@ class OnePass:
         Means, shape (looks, measures), NaN = unknown.
     valid_share, water
         Shares of the parcel, shape (looks,), NaN = unknown.
+    declared
+        Crops as their users call them, where `crops` are labels under which small ones are
+        compared; None = they are the same.
     """
 
     acquired_at: datetime
@@ -60,6 +63,12 @@ class OnePass:
     values: Figures
     valid_share: Figures
     water: Figures
+    declared: Sequence[str | None] | None = None
+
+    @property
+    def grown(self) -> Sequence[str | None]:
+        """What grows on each parcel in its user's own words."""
+        return self.crops if self.declared is None else self.declared
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

@@ -29,6 +29,7 @@ _COPIED: Final = (
     "low_power",
     "closed_by",
     "crop",
+    "baseline",
 )
 
 
@@ -53,10 +54,17 @@ def document_of(row: AlertRow) -> dict[str, Any]:
         # As told; judging keeps them whole.
         **{name: round(details[name], 4) for name in _FIGURES},
         **{name: round(details[name], 2) for name in _SCORES},
+        "chance": _share(details.get("chance")),
+        "p": _share(details.get("p")),
+        "diary": details.get("diary", []),
         "departures": {name: round(z, 2) + 0.0 for name, z in details["departures"].items()},
         "revision": row.revision,
         "caution": CAUTION,
     }
+
+
+def _share(value: float | None) -> float | None:
+    return None if value is None else float(f"{value:.3g}")
 
 
 def _written(instant: datetime | None) -> str | None:

@@ -1,7 +1,7 @@
 """What grew on many parcels on many days, looked up at once."""
 
-from collections.abc import Collection
-from dataclasses import dataclass
+from collections.abc import Collection, Mapping
+from dataclasses import dataclass, replace
 from datetime import date
 from typing import Final
 
@@ -48,6 +48,15 @@ class CropLabels:
             (place >= 0) & (self.key[held] // _DAY_STEP == parcel_ids) & (self.until[held] >= days)
         )
         return np.where(is_held, self.crop[held], UNLABELLED)
+
+    def under(self, labels: Mapping[str, str]) -> "CropLabels":
+        """Return the same with some crops named otherwise, several perhaps alike."""
+        if not labels:
+            return self
+        named = [labels.get(crop, crop) for crop in self.crops]
+        crops = tuple(sorted(set(named)))
+        code = np.array([crops.index(name) for name in named], dtype=np.int64)
+        return replace(self, crops=crops, crop=code[self.crop] if code.size else self.crop)
 
     def parcels_between(self, first: date, last: date) -> set[int]:
         """Return the parcels that carry a crop on any day of an interval, both included."""

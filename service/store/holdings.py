@@ -1,6 +1,6 @@
 """Holdings: when their crop years begin, and what moves when that changes."""
 
-from collections.abc import Collection, Iterator, Sequence
+from collections.abc import Collection, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 
 from sqlalchemy import delete, func, select
@@ -45,6 +45,12 @@ def parcels_in(session: Session, rows: Sequence[Holding]) -> dict[int, int]:
     )
     counts = {holding_id or 0: count for holding_id, count in session.execute(query)}
     return {row.id: counts.get(row.id, 0) for row in rows}
+
+
+def holdings_of(session: Session, refs: Mapping[int, str]) -> dict[str, str | None]:
+    """Return the holding of parcels, given by id, by their ref."""
+    query = select(Parcel.id, Holding.ref).outerjoin(Holding, Holding.id == Parcel.holding_id)
+    return {refs[parcel]: held for parcel, held in session.execute(query) if parcel in refs}
 
 
 def put_holding(

@@ -226,9 +226,10 @@ def put_alerts(
     parcels: Mapping[str, int],
     folded: Sequence[int],
     *,
+    rules: Collection[str],
     at: datetime,
 ) -> list[Happened]:
-    """Make the alerts of some seasons those that judging found; return what happened.
+    """Make the alerts of some seasons and rules those that judging found; return what happened.
 
     Parameters
     ----------
@@ -239,8 +240,12 @@ def put_alerts(
     folded
         The seasons that were judged: alerts of theirs that judging no longer opens are
         retracted, and kept.
+    rules
+        Those that judged; the alerts of others stay as they are.
     """
-    query = select(AlertRow).where(AlertRow.axis == axis, AlertRow.season.in_(folded))
+    query = select(AlertRow).where(
+        AlertRow.axis == axis, AlertRow.season.in_(folded), AlertRow.rule.in_(list(rules))
+    )
     rows = {row.id: row for row in session.scalars(query)}
     for some in in_batches(sorted(set(alerts) - set(rows))):
         carried = session.scalars(select(AlertRow).where(AlertRow.id.in_(some)))
@@ -305,7 +310,10 @@ def _moved(session: Session, row: AlertRow, alert: Alert, *, at: datetime) -> li
 def _retract(session: Session, row: AlertRow, *, at: datetime) -> Happened:
     before = row.state
     row.state = RETRACTED
-    reason = "Judged anew, after a scene came late or was replaced or withdrawn, it does not open."
+    reason = (
+        "Judged anew, after a scene came late or was replaced or withdrawn, or after crops, the "
+        "diary or a rule were changed, it does not open."
+    )
     return _note(session, row, RETRACTED, {"state": [before, RETRACTED], "reason": reason}, at=at)
 
 

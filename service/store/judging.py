@@ -14,6 +14,7 @@ from sqlalchemy import ColumnElement, func, or_, select
 from sqlalchemy.orm import Session
 
 from service.alerts.actions import Action, ActionKind
+from service.alerts.diary import DAYS_BEFORE
 from service.assess import Prepared, State
 from service.seasons.axis import SeasonStart, season_ending_in, season_holding
 from service.store.alert_tables import AlertChange, AlertRow, BaselineRow, SeasonFold
@@ -130,6 +131,29 @@ def want_judging_of_crops(session: Session, days: Iterable[date], starts: tuple[
         _want_from(session, axis.id, season_holding(first, axis.start)[1].year)
 
 
+def want_judging_of_diary(
+    session: Session, parcel: Parcel, day: date, starts: tuple[str, str]
+) -> None:
+    """Promise judging anew from a day on: what is known of a parcel has changed."""
+    seen = timedelta(days=DAYS_BEFORE)
+    for axis in axes(session, starts):
+        if parcel.id in axis.refs:
+            _want_from(session, axis.id, season_holding(day - seen, axis.start)[1].year)
+
+
+def want_judging_of_rules(session: Session) -> None:
+    """Promise that the newest season of each axis is judged anew, by other rules."""
+    newest = select(SeasonFold.axis, func.max(SeasonFold.season)).group_by(SeasonFold.axis)
+    for axis_id, season in session.execute(newest).all():
+        _want_from(session, axis_id, season)
+
+
+def want_judging_of_everything(session: Session) -> None:
+    """Promise that all that was ever judged is judged anew."""
+    for axis_id in session.scalars(select(SeasonFold.axis).distinct()).all():
+        _want_from(session, axis_id, 0)
+
+
 def _want_from(session: Session, axis_id: str, season: int) -> None:
     query = select(SeasonFold).where(SeasonFold.axis == axis_id, SeasonFold.season >= season)
     for row in session.scalars(query.with_for_update()):
@@ -161,8 +185,8 @@ def axes_of_scene(session: Session, scene: Scene, known: Sequence[Axis]) -> list
     return [axis for axis in known if not parcels.isdisjoint(axis.refs)]
 
 
-def history_key(session: Session, axis: Axis, season: int) -> str:
-    """Return a hash of all that a season's baselines are fitted from."""
+def history_key(session: Session, axis: Axis, season: int, beside: Sequence[object] = ()) -> str:
+    """Return a hash of all that a season's baselines are fitted from; `beside` goes into it."""
     begin = axis.begins_at(season)
     writes = session.execute(
         select(func.count(), func.max(Write.id), func.count(Write.closed_at))
@@ -181,7 +205,7 @@ def history_key(session: Session, axis: Axis, season: int) -> str:
         for p, a, b in spells
     ]
     told = [axis.id, season, len(axis.refs), list(writes), [list(map(str, row)) for row in crops]]
-    return hashlib.sha256(json.dumps([told, spoiled]).encode()).hexdigest()
+    return hashlib.sha256(json.dumps([told, spoiled, beside]).encode()).hexdigest()
 
 
 Spell = tuple[int, datetime, datetime]
@@ -231,14 +255,24 @@ def unpacked(arrays: bytes) -> Prepared:
     return Prepared.from_arrays(_arrays(arrays))
 
 
-def squeezed(state: State) -> bytes:
-    """Return a fold's state as the bytes of an npz file."""
-    return _npz(state.to_arrays())
+def squeezed(states: Mapping[str, State]) -> bytes:
+    """Return the states of folds, by rule, as the bytes of an npz file."""
+    named = {"rules": np.array(list(states), dtype=np.str_)}
+    for at, state in enumerate(states.values()):
+        named |= {f"{at}:{name}": array for name, array in state.to_arrays().items()}
+    return _npz(named)
 
 
-def unsqueezed(state: bytes) -> State:
-    """Return the state that `squeezed` wrote."""
-    return State.from_arrays(_arrays(state))
+def unsqueezed(states: bytes) -> dict[str, State]:
+    """Return the states by rule that `squeezed` wrote."""
+    arrays = _arrays(states)
+    found: dict[int, dict[str, NDArray[Any]]] = {}
+    for name, array in arrays.items():
+        at, _, member = name.partition(":")
+        if member:
+            found.setdefault(int(at), {})[member] = array
+    rules = arrays["rules"].tolist()
+    return {rule: State.from_arrays(found[at]) for at, rule in enumerate(rules)}
 
 
 def _npz(arrays: Mapping[str, NDArray[Any]]) -> bytes:

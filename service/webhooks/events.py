@@ -21,6 +21,8 @@ class EventName(StrEnum):
     ALERT_OPENED = "alert.opened"
     ALERT_CHANGED = "alert.changed"
     ALERT_CLOSED = "alert.closed"
+    REGION_OPENED = "region.opened"
+    REGION_CLOSED = "region.closed"
     PARCEL_UNSEEN = "parcel.unseen"
     SCENE_DONE = "scene.done"
     SCENE_FAILED = "scene.failed"
