@@ -171,6 +171,7 @@ def _judged_pass(
         crops=one.grown,
         unjudged=[None if reason is None else reason.value for reason in judged.unjudged],
         score=np.where(np.isfinite(judged.score), judged.score, np.nan),
+        p=judged.p,
         figures=figures.reshape(size, -1),
     )
 

@@ -25,6 +25,7 @@ _COLUMNS = (
     "baseline_id",
     "crop",
     "score",
+    "p",
     "unjudged",
     "figures",
     "recorded_at",
@@ -40,6 +41,7 @@ def insert_judgements(
     baseline_id: int,
     crops: Sequence[str | None],
     score: NDArray[np.float64],
+    p: NDArray[np.float64],
     unjudged: Sequence[str | None],
     figures: NDArray[np.float32],
     recorded_at: datetime,
@@ -48,23 +50,23 @@ def insert_judgements(
 
     Parameters
     ----------
-    parcel_ids, instants, score, figures
-        Shapes (looks,) and (looks, columns); instants in microseconds since 1970, a score
-        that is not known is NaN.
+    parcel_ids, instants, score, p, figures
+        Shapes (looks,) and (looks, columns); instants in microseconds since 1970, a score or
+        p that is not known is NaN.
     crops, unjudged
         One each; None is null.
     """
     if is_sqlite(session):
-        known = np.isfinite(score).tolist()
         driver_of(session).executemany(
             f"INSERT INTO {table} ({', '.join(_COLUMNS)}) "  # noqa: S608 - constants
-            "VALUES (?, ?, ?, ?, ?, ?, ?, ?)",
+            "VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?)",
             zip(
                 parcel_ids.tolist(),
                 instants.tolist(),
                 repeat(baseline_id),
                 crops,
-                (s if k else None for s, k in zip(score.tolist(), known, strict=True)),
+                _with_nulls(score),
+                _with_nulls(p),
                 unjudged,
                 (row.tobytes() for row in figures.astype("<f4")),
                 repeat(microseconds(recorded_at)),
@@ -77,13 +79,15 @@ def insert_judgements(
         cursor.copy(f"COPY {table} ({', '.join(_COLUMNS)}) FROM STDIN (FORMAT BINARY)") as copy,
     ):
         copy.write(COPY_HEADER)
-        for (crop, reason, is_known), places in _alike(crops, unjudged, score).items():
+        alike = _alike(crops, unjudged, np.isfinite(score), np.isfinite(p))
+        for (crop, reason, has_score, has_p), places in alike.items():
             fields: list[tuple[str, bytes | NDArray[Any] | None]] = [
                 (">i8", parcel_ids[places]),
                 (">i8", instants[places] - POSTGRES_EPOCH_US),
                 (">i8", np.full(len(places), baseline_id)),
                 _text(crop),
-                (">f8", score[places] if is_known else None),
+                (">f8", score[places] if has_score else None),
+                (">f8", p[places] if has_p else None),
                 _text(reason),
                 (">f4", figures[places]),
                 (">i8", np.full(len(places), microseconds(recorded_at) - POSTGRES_EPOCH_US)),
@@ -92,13 +96,26 @@ def insert_judgements(
         copy.write(COPY_TRAILER)
 
 
+def _with_nulls(values: NDArray[np.float64]) -> list[float | None]:
+    known = np.isfinite(values).tolist()
+    return [
+        value if is_known else None for value, is_known in zip(values.tolist(), known, strict=True)
+    ]
+
+
+Alike = tuple[str | None, str | None, bool, bool]
+
+
 def _alike(
-    crops: Sequence[str | None], unjudged: Sequence[str | None], score: NDArray[np.float64]
-) -> dict[tuple[str | None, str | None, bool], list[int]]:
+    crops: Sequence[str | None],
+    unjudged: Sequence[str | None],
+    has_score: NDArray[np.bool_],
+    has_p: NDArray[np.bool_],
+) -> dict[Alike, list[int]]:
     """Return the places of looks whose rows have values of the same widths."""
-    found: dict[tuple[str | None, str | None, bool], list[int]] = {}
-    known = np.isfinite(score).tolist()
-    for at, key in enumerate(zip(crops, unjudged, known, strict=True)):
+    found: dict[Alike, list[int]] = {}
+    keys = zip(crops, unjudged, has_score.tolist(), has_p.tolist(), strict=True)
+    for at, key in enumerate(keys):
         found.setdefault(key, []).append(at)
     return found
 

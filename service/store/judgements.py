@@ -12,6 +12,7 @@ from sqlalchemy.orm import Session
 
 from service.alerts.alert import Alert, AlertState, ChangeKind
 from service.errors import Fault, RejectedInput
+from service.seasons.baseline import basis_of
 from service.store.alert_tables import AlertChange, AlertRow, BaselineRow, Judgement
 from service.store.batches import in_batches
 from service.store.bulk_judgements import insert_judgements
@@ -20,6 +21,7 @@ from service.store.tables import Parcel
 
 JUDGED: Final = ("expected", "low", "high", "shortfall", "departure", "weight")
 """The figures of each measure in a judgement, in this order."""
+_WEIGHT: Final = JUDGED.index("weight")
 RETRACTED: Final = "retracted"
 
 
@@ -35,8 +37,8 @@ class JudgedPass:
         Of each look; acquisition in microseconds since 1970. Shape (looks,).
     crops, unjudged
         Of each look; None for no crop, and for a look that was judged.
-    score
-        NaN where a look was not judged, shape (looks,).
+    score, p
+        NaN where a look was not judged, or the past does not tell, shape (looks,).
     figures
         Shape (looks, measures * len(JUDGED)), a measure's figures side by side.
     """
@@ -47,6 +49,7 @@ class JudgedPass:
     crops: Sequence[str | None]
     unjudged: Sequence[str | None]
     score: NDArray[np.float64]
+    p: NDArray[np.float64]
     figures: NDArray[np.float32]
 
 
@@ -109,6 +112,7 @@ _DELETE_OTHERS: Final = text(
                 AND sent.baseline_id = judgement.baseline_id
                 AND sent.crop IS NOT DISTINCT FROM judgement.crop
                 AND sent.score IS NOT DISTINCT FROM judgement.score
+                AND sent.p IS NOT DISTINCT FROM judgement.p
                 AND sent.unjudged IS NOT DISTINCT FROM judgement.unjudged
                 AND sent.figures = judgement.figures
         )
@@ -146,6 +150,7 @@ def _insert(
             baseline_id=baseline_ids[one.baseline_season],
             crops=one.crops,
             score=one.score,
+            p=one.p,
             unjudged=one.unjudged,
             figures=one.figures,
             recorded_at=at,
@@ -162,43 +167,63 @@ def _bump(session: Session, parcel_ids: Iterable[int]) -> None:
         )
 
 
-Judged = dict[str, dict[str, float | None]]
-"""By measure, the figures that `JUDGED` names, None where unknown."""
+Judged = dict[str, dict[str, float | str | None]]
+"""By measure, the figures that `JUDGED` names, None where unknown; and beside them `p`, the
+`basis` of what was expected, and why the look was not judged (`unjudged`)."""
 
 
 def judgements_of(
-    session: Session, parcel: Parcel, *, as_of: datetime | None
+    session: Session,
+    parcel: Parcel,
+    *,
+    since: datetime | None = None,
+    until: datetime | None = None,
+    as_of: datetime | None = None,
 ) -> dict[datetime, Judged]:
-    """Return what is thought of a parcel's looks, by acquisition.
+    """Return what is thought of a parcel's looks, by acquisition; `until` is not included.
 
     Raises
     ------
     RejectedInput
-        Something was judged anew since `as_of`: what was thought then is not kept.
+        One of them was judged anew since `as_of`: what was thought then is not kept.
     """
     query = (
         select(Judgement, BaselineRow.measures)
         .join(BaselineRow, BaselineRow.id == Judgement.baseline_id)
         .where(Judgement.parcel_id == parcel.id)
     )
+    if since is not None:
+        query = query.where(Judgement.acquired_at >= since)
+    if until is not None:
+        query = query.where(Judgement.acquired_at < until)
     found: dict[datetime, Judged] = {}
     for row, measures in session.execute(query):
         if as_of is not None and row.recorded_at > as_of:
             raise RejectedInput(
                 "not-kept",
                 "Looks of this parcel were judged since then, and what was expected of them at "
-                "that time is not kept. Ask without `with`, or without `as_of`.",
+                "that time is not kept. Ask for an interval that was not, without `with`, or "
+                "without `as_of`.",
                 [Fault(parameter="as_of", detail="Judgements of that time are not kept.")],
             )
         table = row.figures.reshape(len(measures), len(JUDGED))
         found[row.acquired_at] = {
-            measure: {
-                name: None if np.isnan(value) else float(str(value))
-                for name, value in zip(JUDGED, figures, strict=True)
-            }
-            for measure, figures in zip(measures, table, strict=True)
+            measure: _judged(row, figures) for measure, figures in zip(measures, table, strict=True)
         }
     return found
+
+
+def _judged(row: Judgement, figures: NDArray[np.float32]) -> dict[str, float | str | None]:
+    known: dict[str, float | str | None] = {
+        name: None if np.isnan(value) else float(str(value))
+        for name, value in zip(JUDGED, figures, strict=True)
+    }
+    is_expected = known["expected"] is not None
+    return known | {
+        "p": None if row.p is None or known["departure"] is None else float(f"{row.p:.4g}"),
+        "basis": basis_of(float(figures[_WEIGHT])).value if is_expected else None,
+        "unjudged": row.unjudged,
+    }
 
 
 def departures_at(

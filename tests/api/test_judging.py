@@ -95,6 +95,22 @@ def test_baseline_and_departure_stand_beside_the_figures(judged: Service) -> Non
     flooded = [number in (6, 7, 8, 11, 12) for number in range(PASSES)]
     assert [z > 9 for z in columns["departure"]] == flooded
     assert ((mean < low) | (mean > high)).tolist() == flooded
+    # Nothing in the past was as far out, and it is said what is expected rests on.
+    p = np.array(columns["p"])
+    looks = 3 * len(PARCELS) * PASSES
+    assert p[flooded] == pytest.approx(1 / (looks + 1), rel=0.01)
+    assert p[~np.array(flooded)].min() > 2 / (looks + 1)
+    assert set(columns["baseline"]["basis"]) <= {"own", "blended"}
+    assert set(columns["unjudged"]) == {None}
+    csv = judged.call(
+        "GET",
+        f"/v1/parcels/{FLOODED}/series",
+        params={"index": "ndwi", "with": "baseline,departure", "format": "csv", **year},
+    ).text.splitlines()
+    assert csv[0].endswith(
+        "baseline_mid,baseline_low,baseline_high,baseline_basis,shortfall,departure,p,unjudged"
+    )
+    assert len(csv) == PASSES + 1
     # Looks of the past were not judged; only what is asked for is told.
     past = judged.series(FLOODED, **{"with": "departure", "to": f"{RUNNING}-01-01"})
     assert set(past["departure"]) == {None}
