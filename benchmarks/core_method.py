@@ -3,51 +3,70 @@
 For quick experiments: `furrowlight bench validation` asks the running service instead.
 """
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
+from dataclasses import dataclass
 from datetime import datetime
 from typing import Final
 
 import numpy as np
 
-from benchmarks.histories.crops import NAMES, Places
+from benchmarks.histories.crops import Places
 from benchmarks.histories.making import History as Invented
 from benchmarks.histories.optics import MEASURES, Figures
 from benchmarks.scoring import Alarm, Tally, Truth, score
 from service.alerts.alert import ChangeKind
 from service.alerts.rules import RULES, Rule
-from service.assess import BASELINE_MEASURES, State, Step, fold
-from service.seasons.baseline import Baselines, fit_baselines
+from service.assess import BASELINE_MEASURES, Prepared, State, Step, fold, prepare
 from service.seasons.history import History
 from service.seasons.judgement import OnePass
 
 _COLUMNS: Final = [MEASURES.index(measure) for measure in BASELINE_MEASURES]
 
 
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Judged:
+    """What judging a history's last season rests on, and the steps of the fold."""
+
+    prepared: Prepared
+    steps: Sequence[Step]
+
+
 def scored(invented: Invented) -> Tally:
     """Judge a history's last season as the service does, and score it."""
-    return score(Truth.of(invented), alarms_of(invented, judged(invented)))
+    judged = judge(invented)
+    return score(
+        Truth.of(invented),
+        alarms_of(invented, judged.steps),
+        p_values=p_of_looks(invented, judged.steps),
+        notices=notices_of(invented, judged.steps),
+    )
 
 
-def judged(invented: Invented, rule: Rule = RULES["default"]) -> list[Step]:
-    """Return the steps of the fold over the judged season."""
-    baselines = fitted(invented)
-    return list(fold(State.start(rule), passes_of(invented), baselines=baselines, rule=rule))
+def judge(invented: Invented, rule: Rule = RULES["default"]) -> Judged:
+    """Fit, tune and fold, as the service does for one season axis."""
+    prepared = prepare(past_of(invented), [rule])
+    steps = fold(
+        State.start(rule),
+        passes_of(invented),
+        baselines=prepared.baselines,
+        rule=rule,
+        tuned=prepared.tuned[rule.id],
+    )
+    return Judged(prepared=prepared, steps=list(steps))
 
 
-def fitted(invented: Invented) -> Baselines:
-    """Return baselines of the finished seasons."""
+def past_of(invented: Invented) -> History:
+    """Return the looks of the finished seasons."""
     looks = np.flatnonzero(~invented.is_judged & invented.is_look)
-    crops = crops_of(invented, looks)
-    history = History.of_rows(
+    return History.of_rows(
         parcels=[invented.refs[parcel] for parcel in invented.look_parcel[looks]],
-        crops=crops,
+        crops=crops_of(invented, looks),
         seasons=[invented.seasons[season] for season in invented.look_season[looks]],
         days=days_of(invented, looks).tolist(),
-        passes=invented.look_pass[looks].tolist(),
+        passes=[int(invented.passes[one].at.timestamp()) for one in invented.look_pass[looks]],
         measures=BASELINE_MEASURES,
         values=values_of(invented, looks),
     )
-    return fit_baselines(history)
 
 
 def passes_of(invented: Invented) -> list[OnePass]:
@@ -65,11 +84,32 @@ def alarms_of(invented: Invented, steps: Sequence[Step]) -> list[Alarm]:
             parcel=places[change.alert.parcel],
             day=invented.day_of(change.alert.opened_at),
             cause=change.alert.cause.kind,
+            chance=change.alert.chance,
         )
         for step in steps
         for change in step.changes
         if change.kind is ChangeKind.OPENED
     ]
+
+
+def p_of_looks(invented: Invented, steps: Sequence[Step]) -> Figures:
+    """Return the p-value of every judged look, NaN where it has none."""
+    stated = {
+        (ref, step.judgements.acquired_at): float(p)
+        for step in steps
+        if step.judgements is not None
+        for ref, p in zip(step.judgements.parcels, step.judgements.p, strict=True)
+    }
+    looks = np.flatnonzero(invented.is_judged & invented.is_look)
+    names = [invented.refs[parcel] for parcel in invented.look_parcel[looks]]
+    instants = [invented.passes[one].at for one in invented.look_pass[looks]]
+    return np.array([stated[pair] for pair in zip(names, instants, strict=True)], dtype=np.float64)
+
+
+def notices_of(invented: Invented, steps: Sequence[Step]) -> list[int]:
+    """Return the days on which regional notices opened."""
+    opened = {notice.id: notice.opened_at for step in steps for notice in step.notices}
+    return [invented.day_of(at) for at in opened.values()]
 
 
 def crops_of(invented: Invented, looks: Places) -> list[str]:
@@ -117,11 +157,3 @@ def _one_pass(invented: Invented, looks: Places) -> OnePass:
         valid_share=invented.valid_share[looks],
         water=np.full(looks.size, np.nan),
     )
-
-
-def kinds_named(tally: Tally) -> Mapping[str, int]:
-    """Return how often each cause was named."""
-    named: dict[str, int] = {}
-    for (_, cause), times in tally.causes.items():
-        named[cause] = named.get(cause, 0) + times
-    return named

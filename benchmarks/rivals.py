@@ -8,6 +8,7 @@ is scored on, which favours it.
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from math import isnan
 from typing import Final
 
 import numpy as np
@@ -24,6 +25,7 @@ _DROP_DAYS: Final = 30
 _WINDOW_DAYS: Final = 12
 _LOOKS_NEEDED: Final = 5
 _SPREAD_FLOOR: Final = 0.02
+_TWICE: Final = 2
 _THRESHOLDS: Final = np.arange(1.0, 12.01, 0.1)
 _NDVI: Final = MEASURES.index("ndvi")
 
@@ -96,6 +98,7 @@ def calibrated(
     """Return the lowest threshold with at most this rate of false alarms, and its tallies."""
     scores = [scored(history) for history in histories]
     truths = [Truth.of(history) for history in histories]
+    tallies: list[Tally] = []
     for threshold in _THRESHOLDS:
         tallies = [
             score(truth, alarms_of(each, float(threshold)))
@@ -122,7 +125,7 @@ def _alarms(looks: ParcelLooks, threshold: float) -> list[Alarm]:
     low = 0
     is_open = False
     for day, unusual in zip(looks.day.tolist(), looks.unusual.tolist(), strict=True):
-        if unusual != unusual:  # noqa: PLR0124 - NaN: not judged
+        if isnan(unusual):
             continue
         window = [*window[-2:], unusual >= threshold]
         low = low + 1 if unusual < threshold / 2 else 0
@@ -132,6 +135,3 @@ def _alarms(looks: ParcelLooks, threshold: float) -> list[Alarm]:
             is_open = True
             alarms.append(Alarm(parcel=looks.parcel, day=int(day)))
     return alarms
-
-
-_TWICE: Final = 2

@@ -76,8 +76,8 @@ class Truth:
 
     def looks_from(self, parcel: int, day: int) -> Places:
         """Return the days of a parcel's looks from a day on."""
-        days = self.look_day[self.look_parcel == parcel]
-        return days[days >= day]
+        days: Places = self.look_day[(self.look_parcel == parcel) & (self.look_day >= day)]
+        return days
 
     @property
     def is_event_free(self) -> NDArray[np.bool_]:

@@ -107,8 +107,8 @@ def land_of(
         thirst=np.exp(rng.normal(0.0, 0.35, parcels)),
         mowings=np.array(MOWINGS)
         + rng.normal(0.0, 4.0, (1, seasons, 1))
-        + rng.normal(0.0, 4.0, (parcels, 1, 1))
-        + rng.normal(0.0, 3.0, (parcels, seasons, len(MOWINGS))),
+        + rng.normal(0.0, 3.5, (parcels, 1, 1))
+        + rng.normal(0.0, 2.0, (parcels, seasons, len(MOWINGS))),
         litter_left=rng.uniform(0.45, 0.9, (parcels, seasons)),
         tilled_after=rng.uniform(4.0, 45.0, (parcels, seasons)),
         catch_lai=_catch_lai(rng, parcels, seasons),
@@ -223,7 +223,7 @@ def _shifts(rng: np.random.Generator, crop: Places, places: Figures) -> Figures:
     shifts[..., GROWTH] += lasting + 6.0 * region + 0.3 * sown + variety
     shifts[..., RIPENING] += lasting + 5.5 * region + 0.2 * sown + 1.5 * variety
     shifts[..., HARVEST] += (
-        lasting + 5.5 * region + 1.2 * variety + rng.normal(0.0, 3.0, (parcels, seasons))
+        lasting + 5.5 * region + variety + rng.normal(0.0, 2.0, (parcels, seasons))
     )
     return np.clip(shifts, -24.0, 24.0)
 
