@@ -27,8 +27,7 @@ from service.jobs.deliver import enqueue as enqueue_deliveries
 from service.jobs.deliver import fresh_promises
 from service.jobs.folding import Folded, Known, fold_season, known_of, rests_on
 from service.jobs.resources import Resources, resources
-from service.jobs.season_looks import history_of, passes_of
-from service.seasons.history import History
+from service.jobs.season_looks import passes_of, past_of
 from service.seasons.judgement import Judgements, OnePass
 from service.store.alert_tables import BaselineRow, SeasonFold
 from service.store.columns import microseconds
@@ -41,8 +40,6 @@ from service.store.judging import (
     find_baselines,
     history_key,
     packed,
-    real_departures,
-    spoiled_looks,
     squeezed,
     state_before,
     unpacked,
@@ -126,7 +123,7 @@ def _judge_season(
     prepared = (
         unpacked(row.arrays)
         if row is not None and is_fitted
-        else prepare(_history(session, axis, season, labels), known.rules, known.holdings)
+        else prepare(past_of(session, axis, season, labels), known.rules, known.holdings)
     )
     folded = fold_season(
         known,
@@ -143,18 +140,6 @@ def _judge_season(
         fitted_from=key,
         baseline_id=row.id if row is not None and is_fitted else None,
         folded=folded,
-    )
-
-
-def _history(session: Session, axis: Axis, season: int, labels: Mapping[str, str]) -> History:
-    begin = axis.begins_at(season)
-    return history_of(
-        session,
-        axis,
-        season,
-        spoiled=spoiled_looks(session, begin),
-        real=real_departures(session, begin),
-        compared=labels,
     )
 
 

@@ -13,15 +13,12 @@ from service.seasons.history import History
 from service.seasons.judgement import OnePass
 from service.store.columns import microseconds
 from service.store.crop_labels import CropLabels, crop_labels
-from service.store.judging import Axis
+from service.store.judging import Axis, Spell, real_departures, spoiled_looks
 from service.store.look_arrays import read_looks
 from service.store.look_choice import Looks
 from service.store.looks import LOOK_SHARE
 
 Numbers = NDArray[np.int64]
-Spell = tuple[int, datetime, datetime]
-"""A parcel, and the first and the last instant of something."""
-
 NOTHING: Final[Mapping[str, str]] = {}
 
 _DAY_US: Final = 86_400_000_000
@@ -37,14 +34,18 @@ def passes_of(
     *,
     after: datetime | None = None,
     compared: Mapping[str, str] = NOTHING,
+    is_judged: bool | None = True,
 ) -> list[OnePass]:
     """Return the judged looks of a season, pass by pass; only those later than `after`.
 
-    `compared` are the labels under which some crops are compared.
+    `compared` are the labels under which some crops are compared; an `is_judged` of None takes
+    looks that only shape baselines as well.
     """
     since = axis.begins_at(season) if after is None else after + _TICK
     until = axis.ends_at(season)
-    looks = read_looks(session, axis.refs, LOOK_MEASURES, since=since, until=until, is_judged=True)
+    looks = read_looks(
+        session, axis.refs, LOOK_MEASURES, since=since, until=until, is_judged=is_judged
+    )
     labels = crop_labels(session, axis.refs, since=since.date(), until=until.date())
     begun = looks.begun()
     # A pass is one platform's; looks are by parcel and are taken apart by pass.
@@ -98,6 +99,19 @@ def _as_told(shares: NDArray[np.float32]) -> NDArray[np.float64]:
 def _days(looks: Looks) -> Numbers:
     days: Numbers = looks.instants() // _DAY_US + _DAY_0
     return days
+
+
+def past_of(session: Session, axis: Axis, season: int, compared: Mapping[str, str]) -> History:
+    """Return the looks of the seasons before one, with what people said of them."""
+    begin = axis.begins_at(season)
+    return history_of(
+        session,
+        axis,
+        season,
+        spoiled=spoiled_looks(session, begin),
+        real=real_departures(session, begin),
+        compared=compared,
+    )
 
 
 def history_of(
