@@ -75,6 +75,7 @@ def of_parcel(service: Service, parcel: str, **params: Any) -> list[Alert]:
 def told(alerts: Iterable[Alert]) -> list[tuple[Any, ...]]:
     """Return what must not depend on how figures arrived."""
     names = ("id", "parcel", "state", "opened_at", "closed_at", "score", "severity", "looks")
+    names += ("chance", "p", "baseline", "crop")
     return sorted(
         (*(alert[name] for name in names), alert["cause"]["kind"], alert["cause"]["because"])
         for alert in alerts

@@ -238,9 +238,13 @@ def find_baselines(session: Session, axis_id: str, season: int) -> BaselineRow |
     return session.scalar(query.order_by(BaselineRow.id.desc()).limit(1))
 
 
-def find_newest_baselines(session: Session, axis_id: str) -> BaselineRow | None:
-    """Return the baselines in use for the newest season of an axis that is judged."""
+def find_newest_baselines(
+    session: Session, axis_id: str, *, as_of: datetime | None = None
+) -> BaselineRow | None:
+    """Return the baselines in use, now or then, for the newest season that was judged."""
     query = select(BaselineRow).where(BaselineRow.axis == axis_id)
+    if as_of is not None:
+        query = query.where(BaselineRow.fitted_at <= as_of)
     newest = query.order_by(BaselineRow.season.desc(), BaselineRow.id.desc())
     return session.scalar(newest.limit(1))
 

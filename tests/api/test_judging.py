@@ -135,6 +135,11 @@ def test_a_baseline_tells_what_is_expected_by_day_and_on_what_it_rests(judged: S
         if "05-30" <= at[5:10] <= "06-14"
     ]
     assert min(near) - 0.05 < found["mid"][day] < max(near) + 0.05
+    # The crop's usual course, of ten parcels, and what this one adds to it.
+    assert found["usual"][day] == pytest.approx(found["mid"][day], abs=0.03)
+    assert found["usual"][day] != found["mid"][day]
+    assert (found["cohort_parcels"], found["compared_as"]) == (10, "beet")
+    assert set(found["crops"]) == {"beet"}
     # Nothing is known of the winter, and it is not made up.
     winter = found["days"].index(f"{RUNNING}-01-15")
     assert (found["mid"][winter], found["low"][winter], found["high"][winter]) == (None,) * 3
@@ -145,6 +150,22 @@ def test_a_baseline_tells_what_is_expected_by_day_and_on_what_it_rests(judged: S
         assert problem(answer, 422, "invalid-parameter")["errors"][0]["parameter"] == "index"
     limited = judged.key("read", holdings=["north"])
     problem(judged.call("GET", address, key=limited), 404, "parcel-not-found")
+
+
+def test_baselines_of_an_earlier_time_are_kept_and_an_alert_names_its_own(judged: Service) -> None:
+    address = "/v1/parcels/beet-5/baseline"
+    before = judged.get(address)
+    then = stamp(now())
+    assert {alert["baseline"] for alert in alerts_of(judged)} == {before["version"]}
+    past = stamp(at_pass(5, RUNNING - 1))
+    send(judged, [f"beet-5,ndvi,{past},0.31111,archive-sensor,archive\n"], assess=False)
+    judge_all(judged)
+    after = judged.get(address)
+    assert after["version"] != before["version"]
+    assert judged.get(address, params={"as_of": then}) == before
+    assert {alert["baseline"] for alert in alerts_of(judged)} == {after["version"]}
+    answer = judged.call("GET", address, params={"as_of": f"{RUNNING}-01-01"})
+    problem(answer, 404, "no-baseline")
 
 
 def test_what_was_thought_before_judging_anew_is_not_kept(judged: Service) -> None:
