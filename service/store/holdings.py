@@ -3,12 +3,13 @@
 from collections.abc import Collection, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 
-from sqlalchemy import delete, func, select
+from sqlalchemy import delete, func, select, update
 from sqlalchemy.orm import Session
 
 from service.errors import NotFound
-from service.store.alert_tables import AlertRow, SeasonFold
+from service.store.alert_tables import AlertRow, NoticeRow, SeasonFold
 from service.store.batches import in_batches
+from service.store.judgements import RETRACTED
 from service.store.judging import Axis, axes, want_judging
 from service.store.sessions import serialise
 from service.store.tables import Holding, Observation, Parcel, Scene, Write
@@ -109,6 +110,9 @@ def _leave(session: Session, axis_id: str, *, is_empty: bool) -> None:
     """Promise the seasons of an axis without those that left it; drop one that has nobody."""
     if is_empty:
         session.execute(delete(SeasonFold).where(SeasonFold.axis == axis_id))
+        # Nobody is left whom a notice could be about, and who would see it close.
+        unended = (NoticeRow.axis == axis_id, NoticeRow.state == "open")
+        session.execute(update(NoticeRow).where(*unended).values(state=RETRACTED))
         return
     query = select(SeasonFold).where(SeasonFold.axis == axis_id).with_for_update()
     for row in session.scalars(query):
