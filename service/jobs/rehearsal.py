@@ -10,10 +10,13 @@ from sqlalchemy.orm import Session
 from service.alerts.alert import Alert
 from service.alerts.rules import Rule
 from service.assess import Prepared, State, prepare
-from service.jobs.folding import Folded, Known, fold_season, known_of, rests_on
+from service.jobs.folding import Folded, Known, Start, fold_season, known_of, rests_on
+from service.jobs.season_judging import states_before
 from service.jobs.season_looks import passes_of, past_of
 from service.seasons.axis import season_ending_in
 from service.seasons.judgement import OnePass
+from service.store.alert_tables import BaselineRow
+from service.store.columns import microseconds
 from service.store.crops import labels_in
 from service.store.judging import (
     Axis,
@@ -21,13 +24,12 @@ from service.store.judging import (
     axes,
     find_baselines,
     history_key,
-    state_before,
+    past_alerts,
     unpacked,
-    unsqueezed,
 )
 
 _DAYS_A_WEEK = 7.0
-_SECONDS_A_DAY = 86_400.0
+_MICROSECONDS_A_DAY = 86_400e6
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -110,7 +112,7 @@ def _seasons(
     session: Session, axis: Axis, rule: Rule, since: datetime, until: datetime
 ) -> Iterator[_One]:
     everything = known_of(session, axis)
-    standing = next((each for each in everything.rules if each == rule), None)
+    is_standing = rule in everything.rules
     known = replace(everything, rules=[rule])
     states: Mapping[str, State] | None = None
     for season in range(axis.season_of(since), axis.season_of(until) + 1):
@@ -119,10 +121,11 @@ def _seasons(
         passes = judged or passes_of(session, axis, season, compared=labels, is_judged=None)
         if not passes or axis.begins_at(season) >= until:
             continue
-        if states is None:
-            kept = state_before(session, axis, season) if standing else None
-            states = {} if kept is None else unsqueezed(kept)
         prepared = _prepared(session, axis, season, labels, known, everything)
+        if states is None:
+            states = {}
+            if is_standing:
+                states = states_before(session, axis, season, known, prepared)
         folded = _folded(session, axis, season, known, states, passes, prepared)
         states = folded.states
         yield _One(
@@ -140,7 +143,9 @@ def _folded(
     prepared: Prepared,
 ) -> Folded:
     actions = actions_in(session, axis, season)
-    return fold_season(known, states, passes, actions, prepared, region=axis.id)
+    return fold_season(
+        known, Start(states=states), passes, actions, prepared, axis=axis, season=season
+    )
 
 
 def _prepared(
@@ -153,16 +158,19 @@ def _prepared(
 ) -> Prepared:
     """Return baselines of a season and the rule's tuning on them, those that are kept if any."""
     (rule,) = known.rules
-    row = find_baselines(session, axis.id, season)
-    key = history_key(session, axis, season, [*rests_on(everything), sorted(labels.items())])
-    if row is not None and row.history == key:
-        kept = unpacked(row.arrays)
+    alerts = past_alerts(session, axis, axis.begins_at(season))
+    beside = [*rests_on(everything), sorted(labels.items())]
+    history = history_key(session, axis, season, alerts, beside)
+    number = find_baselines(session, axis.id, season, history)
+    if number is not None:
+        kept = unpacked(session.get_one(BaselineRow, number).arrays)
         if rule in everything.rules:
             return kept
         if not rule.is_auto:
             # What tuning says there is of other rules.
             return replace(kept, tuned={})
-    return prepare(past_of(session, axis, season, labels), known.rules, known.holdings)
+    past = past_of(session, axis, season, labels, alerts=alerts)
+    return prepare(past, known.rules, known.holdings)
 
 
 def _told(
@@ -185,14 +193,13 @@ def _told(
 
 def _weeks(folded: Folded, since: datetime, until: datetime) -> float:
     """Return for how many weeks parcels were watched within an interval."""
-    spans: dict[str, tuple[datetime, datetime]] = {}
-    for one, judgements in folded.judged:
-        for place in np.flatnonzero(np.isfinite(judgements.score)).tolist():
-            at, parcel = one.looked_at[place], one.parcels[place]
-            if since <= at < until:
-                first, last = spans.get(parcel, (at, at))
-                spans[parcel] = (min(first, at), max(last, at))
-    days = sum(
-        (last - first).total_seconds() / _SECONDS_A_DAY + 1 for first, last in spans.values()
-    )
+    first, last = microseconds(since), microseconds(until)
+    spans: dict[int, tuple[int, int]] = {}
+    for one in folded.passes:
+        is_watched = np.isfinite(one.score) & (one.instants >= first) & (one.instants < last)
+        parcels, instants = one.parcel_ids[is_watched], one.instants[is_watched]
+        for parcel, at in zip(parcels.tolist(), instants.tolist(), strict=True):
+            begun, ended = spans.get(parcel, (at, at))
+            spans[parcel] = (min(begun, at), max(ended, at))
+    days = sum((ended - begun) / _MICROSECONDS_A_DAY + 1 for begun, ended in spans.values())
     return days / _DAYS_A_WEEK

@@ -13,7 +13,7 @@ from service.seasons.history import History
 from service.seasons.judgement import OnePass
 from service.store.columns import microseconds
 from service.store.crop_labels import CropLabels, crop_labels
-from service.store.judging import Axis, Spell, real_departures, spoiled_looks
+from service.store.judging import Axis, PastAlert, Spell, past_alerts
 from service.store.look_arrays import read_looks
 from service.store.look_choice import Looks
 from service.store.looks import LOOK_SHARE
@@ -101,15 +101,26 @@ def _days(looks: Looks) -> Numbers:
     return days
 
 
-def past_of(session: Session, axis: Axis, season: int, compared: Mapping[str, str]) -> History:
-    """Return the looks of the seasons before one, with what people said of them."""
-    begin = axis.begins_at(season)
+def past_of(
+    session: Session,
+    axis: Axis,
+    season: int,
+    compared: Mapping[str, str] = NOTHING,
+    *,
+    alerts: Sequence[PastAlert] | None = None,
+) -> History:
+    """Return the looks of the seasons before one, with what alerts and people said of them.
+
+    Without `alerts` those that are kept.
+    """
+    if alerts is None:
+        alerts = past_alerts(session, axis, axis.begins_at(season))
     return history_of(
         session,
         axis,
         season,
-        spoiled=spoiled_looks(session, begin),
-        real=real_departures(session, begin),
+        spoiled=[each.spell for each in alerts if each.is_spoiled],
+        real=[each.spell for each in alerts if each.is_real],
         compared=compared,
     )
 

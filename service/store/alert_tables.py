@@ -5,7 +5,16 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import JSON, BigInteger, Float, ForeignKey, Index, LargeBinary, String
+from sqlalchemy import (
+    JSON,
+    BigInteger,
+    Float,
+    ForeignKey,
+    ForeignKeyConstraint,
+    Index,
+    LargeBinary,
+    String,
+)
 from sqlalchemy.orm import Mapped, mapped_column, relationship
 
 from service.store.columns import Figures
@@ -36,8 +45,8 @@ class BaselineRow(Base):
 class SeasonFold(Base):
     """How far the looks of a season on an axis are judged.
 
-    `wanted` above `done` is the promise of judging; `state` is what the fold remembers at
-    its end, from which the next season begins.
+    `wanted` above `done` is the promise of judging, from `wanted_from` on; null is the start
+    of the season.
     """
 
     __tablename__ = "season_fold"
@@ -46,7 +55,30 @@ class SeasonFold(Base):
     season: Mapped[int] = mapped_column(primary_key=True, autoincrement=False)
     wanted: Mapped[int]
     done: Mapped[int]
-    state: Mapped[bytes | None] = mapped_column(LargeBinary)
+    wanted_from: Mapped[datetime | None]
+
+
+class FoldState(Base):
+    """What the fold of a season remembers after a pass: judging may go on from there.
+
+    All looks up to `seen_until` are in it, and none behind. The pass began at `pass_at` and is
+    the season's so many-th; `basis` is a hash of what else it rests on.
+    """
+
+    __tablename__ = "fold_state"
+    __table_args__ = (
+        ForeignKeyConstraint(
+            ["axis", "season"], ["season_fold.axis", "season_fold.season"], ondelete="CASCADE"
+        ),
+    )
+
+    axis: Mapped[str] = mapped_column(String(5), primary_key=True)
+    season: Mapped[int] = mapped_column(primary_key=True, autoincrement=False)
+    seen_until: Mapped[datetime] = mapped_column(primary_key=True)
+    pass_at: Mapped[datetime]
+    number: Mapped[int]
+    basis: Mapped[str] = mapped_column(String(64))
+    state: Mapped[bytes] = mapped_column(LargeBinary)
 
 
 class Judgement(Base):

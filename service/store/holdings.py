@@ -9,6 +9,7 @@ from sqlalchemy.orm import Session
 from service.errors import NotFound
 from service.store.alert_tables import AlertRow, NoticeRow, SeasonFold
 from service.store.batches import in_batches
+from service.store.folds import want_known
 from service.store.judgements import RETRACTED
 from service.store.judging import Axis, axes, want_judging
 from service.store.sessions import serialise
@@ -114,7 +115,6 @@ def _leave(session: Session, axis_id: str, *, is_empty: bool) -> None:
         unended = (NoticeRow.axis == axis_id, NoticeRow.state == "open")
         session.execute(update(NoticeRow).where(*unended).values(state=RETRACTED))
         return
-    query = select(SeasonFold).where(SeasonFold.axis == axis_id).with_for_update()
-    for row in session.scalars(query):
-        row.wanted += 1
-    session.flush()
+    first = session.scalar(select(func.min(SeasonFold.season)).where(SeasonFold.axis == axis_id))
+    if first is not None:
+        want_known(session, axis_id, first)

@@ -7,8 +7,8 @@ from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import bindparam, select, text, update
-from sqlalchemy.orm import Session
+from sqlalchemy import ColumnElement, and_, bindparam, or_, select, text, update
+from sqlalchemy.orm import InstrumentedAttribute, Session
 
 from service.alerts.alert import Alert, AlertState, ChangeKind
 from service.errors import Fault, RejectedInput
@@ -249,7 +249,7 @@ def put_alerts(
     seasons: Mapping[str, int],
     alerts: Mapping[str, Alert],
     parcels: Mapping[str, int],
-    folded: Sequence[int],
+    judged: Mapping[int, datetime | None],
     *,
     rules: Collection[str],
     at: datetime,
@@ -262,14 +262,16 @@ def put_alerts(
         Alert → the season in which it opened.
     parcels
         Parcel ref → id.
-    folded
-        The seasons that were judged: alerts of theirs that judging no longer opens are
-        retracted, and kept.
+    judged
+        Season → behind which instant it was judged (None: from its start). Alerts opened
+        there that judging no longer opens are retracted, and kept.
     rules
         Those that judged; the alerts of others stay as they are.
     """
     query = select(AlertRow).where(
-        AlertRow.axis == axis, AlertRow.season.in_(folded), AlertRow.rule.in_(list(rules))
+        AlertRow.axis == axis,
+        AlertRow.rule.in_(list(rules)),
+        since_judged(AlertRow.season, AlertRow.opened_at, judged),
     )
     rows = {row.id: row for row in session.scalars(query)}
     for some in in_batches(sorted(set(alerts) - set(rows))):
@@ -291,6 +293,20 @@ def put_alerts(
         if row.state != RETRACTED:
             happened.append(_retract(session, row, at=at))
     return happened
+
+
+def since_judged(
+    season: InstrumentedAttribute[int],
+    at: InstrumentedAttribute[datetime],
+    judged: Mapping[int, datetime | None],
+) -> ColumnElement[bool]:
+    """Whether something of a season lies where that was judged (`put_alerts`)."""
+    return or_(
+        *(
+            season == each if after is None else and_(season == each, at > after)
+            for each, after in judged.items()
+        )
+    )
 
 
 def _row(axis: str, season: int, parcel_id: int, alert: Alert, *, at: datetime) -> AlertRow:

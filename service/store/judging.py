@@ -3,6 +3,7 @@
 import hashlib
 import io
 import json
+import zlib
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, date, datetime, time, timedelta
@@ -10,17 +11,19 @@ from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import ColumnElement, func, or_, select
+from sqlalchemy import func, select
 from sqlalchemy.orm import Session
 
 from service.alerts.actions import Action, ActionKind
 from service.alerts.diary import DAYS_BEFORE
 from service.assess import Prepared, State
 from service.seasons.axis import SeasonStart, season_ending_in, season_holding
+from service.seasons.baseline import METHOD
 from service.store.alert_tables import AlertChange, AlertRow, BaselineRow, SeasonFold
+from service.store.folds import want, want_known, want_later
+from service.store.looks import PASS_GAP
 from service.store.tables import (
     Boundary,
-    CropSeason,
     Holding,
     Observation,
     Parcel,
@@ -32,6 +35,10 @@ SPOILED: Final = ("confirmed", "bad_data")
 """Verdicts that take an alert's looks out of the baselines; no verdict does so too."""
 REAL: Final = ("confirmed", "expected")
 """Verdicts by which a replayed alarm is no false one."""
+
+
+Spell = tuple[int, datetime, datetime]
+"""A parcel, and first and last instant of some of its looks."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -87,18 +94,15 @@ def axes(session: Session, starts: tuple[str, str]) -> list[Axis]:
 
 
 def want_judging(session: Session, axis: Axis, season: int) -> None:
-    """Promise that a season's looks are judged, and those of later seasons that were."""
-    row = session.get(SeasonFold, (axis.id, season), with_for_update=True)
-    if row is None:
-        row = SeasonFold(axis=axis.id, season=season, wanted=0, done=0, state=None)
-        session.add(row)
-    row.wanted += 1
-    _want_from(session, axis.id, season + 1)
+    """Promise that all looks of a season are judged, and those of later seasons that were."""
+    want(session, axis.id, season)
 
 
 def want_judging_of(session: Session, alert: AlertRow) -> None:
-    """Promise that what a person did with an alert is taken up, in its season and later ones."""
-    _want_from(session, alert.axis, alert.season)
+    """Promise that what a person did with an alert is taken up, at the last look it rests on."""
+    at = alert.last_observed_at
+    season = season_holding(at.date(), SeasonStart.parse(alert.axis))[1].year
+    want_known(session, alert.axis, season, since=at)
 
 
 def want_judging_of_scenes(
@@ -109,17 +113,17 @@ def want_judging_of_scenes(
     A scene that only shapes baselines makes later seasons be judged anew, not its own.
     """
     known = axes(session, starts)
-    wanted: dict[tuple[str, int], bool] = {}
+    touched: dict[tuple[str, int], list[Scene]] = {}
     for scene in scenes:
         for axis in axes_of_scene(session, scene, known):
-            key = (axis.id, axis.season_of(scene.acquired_at))
-            wanted[key] = wanted.get(key, False) or scene.is_judged
-    by_id = {axis.id: axis for axis in known}
-    for (axis_id, season), is_judged in sorted(wanted.items()):
-        if is_judged:
-            want_judging(session, by_id[axis_id], season)
+            touched.setdefault((axis.id, axis.season_of(scene.acquired_at)), []).append(scene)
+    for (axis_id, season), some in sorted(touched.items(), key=lambda item: item[0]):
+        judged = [scene.acquired_at for scene in some if scene.is_judged]
+        if judged:
+            # Another scene of the pass may have been the look until now.
+            want(session, axis_id, season, since=min(judged) - PASS_GAP)
         else:
-            _want_from(session, axis_id, season + 1)
+            want_later(session, axis_id, season)
 
 
 def want_judging_of_crops(session: Session, days: Iterable[date], starts: tuple[str, str]) -> None:
@@ -128,37 +132,31 @@ def want_judging_of_crops(session: Session, days: Iterable[date], starts: tuple[
     if first is None:
         return
     for axis in axes(session, starts):
-        _want_from(session, axis.id, season_holding(first, axis.start)[1].year)
+        want_known(session, axis.id, season_holding(first, axis.start)[1].year)
 
 
 def want_judging_of_diary(
     session: Session, parcel: Parcel, day: date, starts: tuple[str, str]
 ) -> None:
     """Promise judging anew from a day on: what is known of a parcel has changed."""
-    seen = timedelta(days=DAYS_BEFORE)
+    since = _midnight(day - timedelta(days=DAYS_BEFORE))
     for axis in axes(session, starts):
         if parcel.id in axis.refs:
-            _want_from(session, axis.id, season_holding(day - seen, axis.start)[1].year)
+            want_known(session, axis.id, axis.season_of(since), since=since)
 
 
 def want_judging_of_rules(session: Session) -> None:
     """Promise that the newest season of each axis is judged anew, by other rules."""
     newest = select(SeasonFold.axis, func.max(SeasonFold.season)).group_by(SeasonFold.axis)
     for axis_id, season in session.execute(newest).all():
-        _want_from(session, axis_id, season)
+        want_known(session, axis_id, season)
 
 
 def want_judging_of_everything(session: Session) -> None:
     """Promise that all that was ever judged is judged anew."""
-    for axis_id in session.scalars(select(SeasonFold.axis).distinct()).all():
-        _want_from(session, axis_id, 0)
-
-
-def _want_from(session: Session, axis_id: str, season: int) -> None:
-    query = select(SeasonFold).where(SeasonFold.axis == axis_id, SeasonFold.season >= season)
-    for row in session.scalars(query.with_for_update()):
-        row.wanted += 1
-    session.flush()
+    oldest = select(SeasonFold.axis, func.min(SeasonFold.season)).group_by(SeasonFold.axis)
+    for axis_id, season in session.execute(oldest).all():
+        want_known(session, axis_id, season)
 
 
 def wanted_folds(session: Session) -> Sequence[SeasonFold]:
@@ -185,57 +183,89 @@ def axes_of_scene(session: Session, scene: Scene, known: Sequence[Axis]) -> list
     return [axis for axis in known if not parcels.isdisjoint(axis.refs)]
 
 
-def history_key(session: Session, axis: Axis, season: int, beside: Sequence[object] = ()) -> str:
-    """Return a hash of all that a season's baselines are fitted from; `beside` goes into it."""
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PastAlert:
+    """An alert as far as it matters for the baselines of later seasons.
+
+    Its looks are those of the parcel from `first` to `last`.
+    """
+
+    id: str
+    parcel_id: int
+    opened_at: datetime
+    first: datetime
+    last: datetime
+    verdict: str | None
+
+    @property
+    def is_spoiled(self) -> bool:
+        """Whether its looks must not shape a baseline."""
+        return self.verdict is None or self.verdict in SPOILED
+
+    @property
+    def is_real(self) -> bool:
+        """Whether a person said that its looks had departed indeed."""
+        return self.verdict in REAL
+
+    @property
+    def spell(self) -> Spell:
+        """Its parcel, and the first and the last of its looks."""
+        return self.parcel_id, self.first, self.last
+
+
+def past_alerts(session: Session, axis: Axis, until: datetime) -> list[PastAlert]:
+    """Return the alerts of parcels whose first departed look was before an instant."""
+    query = select(AlertRow).where(
+        AlertRow.state != "retracted", AlertRow.first_departure_at < until
+    )
+    return [
+        PastAlert(
+            id=row.id,
+            parcel_id=row.parcel_id,
+            opened_at=row.opened_at,
+            first=row.first_departure_at,
+            last=min(row.closed_at or until, until),
+            verdict=row.verdict,
+        )
+        for row in session.scalars(query.order_by(AlertRow.id))
+        if row.parcel_id in axis.refs
+    ]
+
+
+def history_key(
+    session: Session,
+    axis: Axis,
+    season: int,
+    alerts: Iterable[PastAlert],
+    beside: Sequence[object],
+) -> str:
+    """Return a hash of what a season's baselines are fitted from.
+
+    Crops are not in it: where labels change, the baselines are outdated there and then
+    (`folds.want_known`). `beside` is what else counts, plain members.
+    """
     begin = axis.begins_at(season)
     writes = session.execute(
         select(func.count(), func.max(Write.id), func.count(Write.closed_at))
         .join(Scene, Scene.id == Write.scene_id)
         .where(Scene.acquired_at < begin)
     ).one()
-    first = season_ending_in(season, axis.start)[0]
-    crops = session.execute(
-        select(CropSeason.parcel_id, CropSeason.crop, CropSeason.from_on, CropSeason.until_on)
-        .where(CropSeason.from_on < first)
-        .order_by(CropSeason.parcel_id, CropSeason.from_on)
-    ).all()
-    spoiled = [
-        (p, a.isoformat(), b.isoformat())
-        for spells in (spoiled_looks(session, begin), real_departures(session, begin))
-        for p, a, b in spells
+    spells = [
+        (each.parcel_id, each.first.isoformat(), each.last.isoformat(), each.is_spoiled)
+        for each in alerts
+        if each.is_spoiled or each.is_real
     ]
-    told = [axis.id, season, len(axis.refs), list(writes), [list(map(str, row)) for row in crops]]
-    return hashlib.sha256(json.dumps([told, spoiled, beside]).encode()).hexdigest()
+    told = [METHOD, *beside, axis.id, season, list(writes), sorted(spells)]
+    return hashlib.sha256(json.dumps(told).encode()).hexdigest()
 
 
-Spell = tuple[int, datetime, datetime]
-"""A parcel, and first and last instant of some of its looks."""
-
-
-def spoiled_looks(session: Session, until: datetime) -> list[Spell]:
-    """Return the looks that must not shape a baseline."""
-    return _spells(session, until, or_(AlertRow.verdict.is_(None), AlertRow.verdict.in_(SPOILED)))
-
-
-def real_departures(session: Session, until: datetime) -> list[Spell]:
-    """Return the looks of which a person said that they had departed indeed."""
-    return _spells(session, until, AlertRow.verdict.in_(REAL))
-
-
-def _spells(session: Session, until: datetime, condition: ColumnElement[bool]) -> list[Spell]:
-    query = select(AlertRow).where(
-        AlertRow.state != "retracted", AlertRow.first_departure_at < until, condition
+def find_baselines(session: Session, axis_id: str, season: int, history: str) -> int | None:
+    """Return the number of the baselines in use for a season, if fitted from a history."""
+    query = select(BaselineRow.id, BaselineRow.history).where(
+        BaselineRow.axis == axis_id, BaselineRow.season == season
     )
-    return [
-        (row.parcel_id, row.first_departure_at, row.closed_at or until)
-        for row in session.scalars(query.order_by(AlertRow.id))
-    ]
-
-
-def find_baselines(session: Session, axis_id: str, season: int) -> BaselineRow | None:
-    """Return the baselines in use for a season."""
-    query = select(BaselineRow).where(BaselineRow.axis == axis_id, BaselineRow.season == season)
-    return session.scalar(query.order_by(BaselineRow.id.desc()).limit(1))
+    row = session.execute(query.order_by(BaselineRow.id.desc()).limit(1)).first()
+    return row.id if row is not None and row.history == history else None
 
 
 def find_newest_baselines(
@@ -250,7 +280,7 @@ def find_newest_baselines(
 
 
 def packed(prepared: Prepared) -> bytes:
-    """Return baselines and what replaying the past says as the bytes of an npz file."""
+    """Return baselines and what replaying the past says as the bytes of a compressed npz file."""
     return _npz(prepared.to_arrays())
 
 
@@ -260,7 +290,7 @@ def unpacked(arrays: bytes) -> Prepared:
 
 
 def squeezed(states: Mapping[str, State]) -> bytes:
-    """Return the states of folds, by rule, as the bytes of an npz file."""
+    """Return the states of folds, by rule, as the bytes of a compressed npz file."""
     named = {"rules": np.array(list(states), dtype=np.str_)}
     for at, state in enumerate(states.values()):
         named |= {f"{at}:{name}": array for name, array in state.to_arrays().items()}
@@ -281,36 +311,30 @@ def unsqueezed(states: bytes) -> dict[str, State]:
 
 def _npz(arrays: Mapping[str, NDArray[Any]]) -> bytes:
     file = io.BytesIO()
-    np.savez_compressed(file, **arrays)  # type: ignore[arg-type]
-    return file.getvalue()
+    np.savez(file, **arrays)  # type: ignore[arg-type]
+    # What little more a higher level saves would take several times as long.
+    return zlib.compress(file.getbuffer(), 1)
 
 
 def _arrays(npz: bytes) -> dict[str, NDArray[Any]]:
-    with np.load(io.BytesIO(npz), allow_pickle=False) as file:
+    with np.load(io.BytesIO(zlib.decompress(npz)), allow_pickle=False) as file:
         return dict(file)
 
 
-def state_before(session: Session, axis: Axis, season: int) -> bytes | None:
-    """Return what the last judged season before one remembers at its end."""
-    query = (
-        select(SeasonFold.state)
-        .where(
-            SeasonFold.axis == axis.id, SeasonFold.season < season, SeasonFold.state.is_not(None)
-        )
-        .order_by(SeasonFold.season.desc())
-    )
-    return session.scalar(query.limit(1))
+def actions_in(
+    session: Session, axis: Axis, season: int, *, since: datetime | None = None
+) -> list[Action]:
+    """Return what people did with alerts in a season, in the order in which they did it.
 
-
-def actions_in(session: Session, axis: Axis, season: int) -> list[Action]:
-    """Return what people did with alerts in a season, in the order in which they did it."""
+    With `since` only at looks from then on.
+    """
     query = (
         select(AlertChange, AlertRow)
         .join(AlertRow, AlertRow.id == AlertChange.alert_id)
         .where(
             AlertRow.axis == axis.id,
             AlertChange.who.is_not(None),
-            AlertChange.look_at >= axis.begins_at(season),
+            AlertChange.look_at >= (since or axis.begins_at(season)),
             AlertChange.look_at < axis.ends_at(season),
         )
         .order_by(AlertChange.recorded_at, AlertChange.alert_id, AlertChange.number)

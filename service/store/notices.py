@@ -12,7 +12,7 @@ from service.alerts.explained import Explained
 from service.alerts.notices import Notice
 from service.errors import NotFound
 from service.store.alert_tables import ExplainedRow, NoticeRow
-from service.store.judgements import RETRACTED
+from service.store.judgements import RETRACTED, since_judged
 from service.store.tables import Parcel
 
 OPENED: Final = "opened"
@@ -32,7 +32,7 @@ def put_notices(
     axis: str,
     seasons: Mapping[str, int],
     notices: Mapping[str, Notice],
-    folded: Sequence[int],
+    judged: Mapping[int, datetime | None],
     *,
     at: datetime,
 ) -> list[NoticeTold]:
@@ -42,15 +42,17 @@ def put_notices(
     ----------
     seasons
         Notice → the season in which it opened.
-    folded
-        The seasons that were judged: notices of theirs that judging no longer opens are
-        retracted, and kept.
+    judged
+        Season → behind which instant it was judged (None: from its start). Notices opened
+        there that judging no longer opens are retracted, and kept.
     """
-    query = select(NoticeRow).where(NoticeRow.axis == axis, NoticeRow.season.in_(folded))
+    query = select(NoticeRow).where(
+        NoticeRow.axis == axis, since_judged(NoticeRow.season, NoticeRow.opened_at, judged)
+    )
     rows = {row.id: row for row in session.scalars(query)}
     told: list[NoticeTold] = []
     for notice_id, notice in sorted(notices.items()):
-        row = rows.pop(notice_id, None)
+        row = rows.pop(notice_id, None) or session.get(NoticeRow, notice_id)
         before = None if row is None or row.state == RETRACTED else row.state
         if row is None:
             row = NoticeRow(id=notice_id, axis=axis, recorded_at=at, revision=0)
@@ -134,12 +136,15 @@ def put_explained(
     seasons: Mapping[str, int],
     explained: Mapping[str, Explained],
     parcels: Mapping[str, int],
-    folded: Sequence[int],
+    judged: Mapping[int, datetime | None],
     *,
     at: datetime,
 ) -> None:
-    """Make the explained departures of some seasons those that judging found."""
-    query = select(ExplainedRow).where(ExplainedRow.axis == axis, ExplainedRow.season.in_(folded))
+    """Make the explained departures of some seasons, where judged, those that judging found."""
+    query = select(ExplainedRow).where(
+        ExplainedRow.axis == axis,
+        since_judged(ExplainedRow.season, ExplainedRow.departed_at, judged),
+    )
     rows = {row.alert_id: row for row in session.scalars(query)}
     for alert_id, each in sorted(explained.items()):
         row = rows.pop(alert_id, None) or session.get(ExplainedRow, alert_id)
