@@ -1,9 +1,9 @@
 """What a method must beat: two plain ones on the same looks, with the same persistence.
 
-Both see NDVI alone. A z-score compares a look with the parcel's own looks of past seasons
-near that day of the season; a fixed threshold with the parcel's own newest looks. The
-z-score's threshold is the one that gives a stated rate of false alarms on the very seasons it
-is scored on, which favours it.
+Both see NDVI alone. A z-score compares a look with the parcel's own looks of past seasons near
+that day of the season, of the same crop if it can; a fixed threshold with the parcel's own
+newest looks. The z-score's threshold is the one that gives a stated rate of false alarms on the
+very seasons it is scored on, which favours it.
 """
 
 from collections.abc import Callable, Sequence
@@ -12,6 +12,7 @@ from math import isnan
 from typing import Final
 
 import numpy as np
+from numpy.typing import NDArray
 
 from benchmarks.histories.making import History
 from benchmarks.histories.optics import MEASURES, Figures
@@ -22,11 +23,11 @@ FALSE_ALARM_RATE: Final = 2.0
 DROP: Final = 0.15
 """Fall of NDVI below the parcel's highest of the past 30 days that the fixed threshold takes."""
 _DROP_DAYS: Final = 30
-_WINDOW_DAYS: Final = 12
+_WINDOW_DAYS: Final = 20
 _LOOKS_NEEDED: Final = 5
-_SPREAD_FLOOR: Final = 0.02
+_SPREAD_FLOOR: Final = 0.05
 _TWICE: Final = 2
-_THRESHOLDS: Final = np.arange(1.0, 12.01, 0.1)
+_THRESHOLDS: Final = np.concatenate([np.arange(1.0, 12.0, 0.1), np.arange(12.0, 60.5, 0.5)])
 _NDVI: Final = MEASURES.index("ndvi")
 
 
@@ -45,25 +46,39 @@ Scores = Sequence[ParcelLooks]
 def z_scores(history: History) -> list[ParcelLooks]:
     """Return how far NDVI lies below the parcel's own past, in its standard deviations.
 
-    Past looks within 12 days of the same day of the season count, of all past seasons; with
-    fewer than 5 of them a look is not judged (NaN).
+    Past looks within 20 days of the same day of the season count: those of the same crop where
+    there are at least 5 of them, else those of all past seasons; with fewer a look is not
+    judged (NaN). Width and floor are those with which it does best.
     """
     day = _days(history)
     of_season = day - history.season_starts[history.look_season]
+    crop = history.crop[history.look_parcel, history.look_season]
     ndvi = history.values[:, _NDVI]
     found = []
     for parcel in range(len(history.refs)):
         mine = np.flatnonzero((history.look_parcel == parcel) & history.is_look)
         past, judged = mine[~history.is_judged[mine]], mine[history.is_judged[mine]]
         near = np.abs(of_season[judged][:, None] - of_season[past]) <= _WINDOW_DAYS
-        count = near.sum(axis=1)
-        known = np.maximum(count, 1)
-        mean = (near * ndvi[past]).sum(axis=1) / known
-        spread = np.sqrt((near * (ndvi[past] - mean[:, None]) ** 2).sum(axis=1) / known)
-        z = (mean - ndvi[judged]) / np.maximum(spread, _SPREAD_FLOOR)
-        z = np.where(count >= _LOOKS_NEEDED, z, np.nan)
-        found.append(ParcelLooks(parcel=parcel, day=day[judged].astype(np.float64), unusual=z))
+        alike = near & (crop[judged][:, None] == crop[past])
+        near = np.where(alike.sum(axis=1, keepdims=True) >= _LOOKS_NEEDED, alike, near)
+        found.append(
+            ParcelLooks(
+                parcel=parcel,
+                day=day[judged].astype(np.float64),
+                unusual=_below(ndvi[judged], ndvi[past], near),
+            )
+        )
     return found
+
+
+def _below(seen: Figures, past: Figures, counts: NDArray[np.bool_]) -> Figures:
+    """Return how far looks lie below the past ones that count (looks, past), in deviations."""
+    count = counts.sum(axis=1)
+    known = np.maximum(count, 1)
+    mean = (counts * past).sum(axis=1) / known
+    spread = np.sqrt((counts * (past - mean[:, None]) ** 2).sum(axis=1) / known)
+    z = (mean - seen) / np.maximum(spread, _SPREAD_FLOOR)
+    return np.where(count >= _LOOKS_NEEDED, z, np.nan)
 
 
 def drops(history: History) -> list[ParcelLooks]:

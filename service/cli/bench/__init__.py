@@ -5,6 +5,8 @@ A benchmark is one command of this group; `bench list` names whatever stands her
 
 import typer
 
+from service.cli.bench import validation
+
 app = typer.Typer(no_args_is_help=True, help="Measure how right and how fast the service is.")
 
 
@@ -15,3 +17,6 @@ def list_all() -> None:
         if command.callback is not None and command.name != "list":
             says = (command.callback.__doc__ or "").strip().splitlines()
             typer.echo("\t".join((command.name or command.callback.__name__, *says[:1])))
+
+
+app.command("validation")(validation.validation)
