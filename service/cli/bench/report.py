@@ -54,7 +54,8 @@ def tables_of(compared: Sequence[Compared]) -> list[Table]:
     for each in compared:
         tables.append(_figures(each))
         tables.append(_by_kind(each))
-        tables.append(_causes(each))
+        if any(tally.causes for tally in each.own):
+            tables.append(_causes(each))
         if any(tally.chances for tally in each.own):
             tables.append(_reliability(each))
     return tables
