@@ -7,7 +7,7 @@ from typing import Final
 
 import typer
 
-from service.cli import alerts, bench, demo, keys, parcels, serve
+from service.cli import alerts, bench, demo, diary, keys, parcels, rules, serve
 from service.errors import (
     Conflict,
     FurrowlightError,
@@ -41,6 +41,8 @@ app.command("serve")(serve.serve)
 app.add_typer(keys.app, name="keys")
 app.add_typer(alerts.app, name="alerts")
 app.add_typer(parcels.app, name="parcels")
+app.add_typer(diary.app, name="diary")
+app.add_typer(rules.app, name="rules")
 app.add_typer(bench.app, name="bench")
 
 
