@@ -28,7 +28,8 @@ from service.jobs.resources import Resources, resources
 from service.jobs.season_judging import JudgedSeason, judge_season
 from service.store.alert_tables import BaselineRow, SeasonFold
 from service.store.folds import Kept, keep_states
-from service.store.judgements import put_alerts, put_judgements
+from service.store.judged_looks import put_judgements
+from service.store.judgements import put_alerts
 from service.store.judging import Axis, axes, packed, squeezed, wanted_folds
 from service.store.notices import put_explained, put_notices
 from service.store.sessions import serialise

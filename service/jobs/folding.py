@@ -19,7 +19,7 @@ from service.store.columns import microseconds
 from service.store.diary import entries_of
 from service.store.folds import is_worth_keeping
 from service.store.holdings import holdings_of
-from service.store.judgements import JUDGED, JudgedPass
+from service.store.judged_looks import JUDGED, JudgedPass
 from service.store.judging import Axis
 from service.store.looks import PASS_GAP
 from service.store.rules import digest_of, judged_rules
