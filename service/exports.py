@@ -14,8 +14,9 @@ Column = Sequence[Any]
 class MeasureSeries:
     """One measure of one parcel in time order, by column.
 
-    `stats` are by name, None where unknown; instants are written as RFC 3339 in UTC. A name
-    with a point, ``baseline.mid``, is a column of a group.
+    `stats` are by name, None where unknown; what judging says in words stands among them.
+    Instants are written as RFC 3339 in UTC. A name with a point, ``baseline.mid``, is a column
+    of a group.
     """
 
     measure: str
@@ -23,7 +24,7 @@ class MeasureSeries:
     scene: Sequence[str]
     sensor: Sequence[str]
     crop: Sequence[str | None]
-    stats: Mapping[str, Sequence[float | None]]
+    stats: Mapping[str, Sequence[float | str | None]]
 
     def columns(self) -> dict[str, Column]:
         """Return all columns by name, in the order of the contract."""

@@ -67,6 +67,12 @@ class Settings(BaseSettings):
         pattern=r"^(0[1-9]|1[0-2])-(0[1-9]|1\d|2[0-8])$",
         description="First day of the crop year (MM-DD) for parcels south of the equator.",
     )
+    unseen_days: int = Field(
+        default=20,
+        ge=1,
+        le=366,
+        description="Days without a look, though passes came, after which `parcel.unseen` is told.",
+    )
     event_prefix: str = Field(
         default="app.furrowlight",
         pattern=r"^[a-z][a-z0-9-]*(\.[a-z0-9-]+)+$",

@@ -2,10 +2,13 @@
 
 from collections.abc import Mapping, Sequence
 from datetime import UTC, datetime, timedelta
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from service.alerts.alert import Change
+from service.alerts.explained import Known
 from service.alerts.instants import microseconds
 from service.alerts.looks import DepartedLook
 from service.alerts.persistence import Scored, watch_pass
@@ -56,6 +59,7 @@ def scored(
             basis="own",
             is_new_crop=False,
             is_weak=is_weak,
+            low_power=False,
             baseline="v1",
         )
 
@@ -63,12 +67,15 @@ def scored(
     size = len(parcels)
     return Scored(
         opening=on(day),
+        day=200 + day,
         parcels=parcels,
         at=np.full(size, microseconds(on(day))),
         score=values,
         threshold=np.full(size, rule.thresholds.look),
         single_look=np.full(size, np.inf if is_weak else rule.thresholds.single_look),
         cause_from=np.full(size, rule.thresholds.cause),
+        may_open=np.ones(size, dtype=bool),
+        cover=0.8 + np.array([short(at).get("ndvi", np.nan) for at in range(size)]),
         shortfalls=np.array([[short(at).get(n, np.nan) for n in names] for at in range(size)]),
         describe=describe,
     )
@@ -81,12 +88,24 @@ def watched(
     first_day: int = 0,
     is_weak: bool = False,
     rule: Rule = RULE,
+    known: Known | None = None,
 ) -> tuple[Watch, list[Change]]:
     """Return the memory of parcel A, and all changes, after looks every five days."""
     watch = watch or Watch.nothing(rule)
     changes: list[Change] = []
     for at, score in enumerate(scores):
         looks = scored(first_day + at * 5, {"A": score}, is_weak=is_weak, rule=rule)
-        watch, new = watch_pass(watch, looks, rule)
-        changes += new
+        after = watch_pass(watch, looks, rule, known or Known())
+        watch = after.watch
+        changes += after.changes
     return watch, changes
+
+
+def is_same(first: Mapping[str, NDArray[Any]], second: Mapping[str, NDArray[Any]]) -> bool:
+    """Whether two memories hold the same, name by name and bit by bit."""
+    return first.keys() == second.keys() and all(
+        array.dtype == second[name].dtype
+        and array.shape == second[name].shape
+        and array.tobytes() == second[name].tobytes()
+        for name, array in first.items()
+    )

@@ -7,7 +7,8 @@ from datetime import datetime
 from enum import StrEnum
 from typing import Any, Final
 
-from service.alerts.causes import Cause, attribute, evidence_of, keeps_label
+from service.alerts.causes import Cause, attribute, keeps_label
+from service.alerts.evidence import evidence_of
 from service.alerts.instants import instant
 from service.alerts.looks import DepartedLook
 from service.alerts.rules import Rule
@@ -42,8 +43,10 @@ class Alert:
     `score`, `severity`, `basis` and `baseline` (a version) are those of the worst look so
     far, taken at `worst_at`; `looks` counts those that reached the threshold since
     `first_departure_at`, and `scenes` names theirs. All instants are acquisition times of
-    looks. `closed_by` is ``return`` when the parcel came back, ``person`` when a person
-    closed it.
+    looks. `strength` and `chance`, the odds of being a false one, are those at opening, `p`
+    that of the worst look. `diary` tells what people wrote down for the time of it, which
+    does not explain it. `closed_by` is ``return`` when the parcel came back, ``person`` when
+    a person closed it.
     """
 
     id: str
@@ -76,6 +79,10 @@ class Alert:
     low_power: bool
     closed_by: str | None
     verdict: str | None
+    strength: float = 0.0
+    chance: float | None = None
+    p: float | None = None
+    diary: tuple[str, ...] = ()
 
     @property
     def is_closed(self) -> bool:
@@ -92,6 +99,7 @@ class Alert:
             "cause": self.cause.as_dict(),
             "departures": dict(self.departures),
             "scenes": list(self.scenes),
+            "diary": list(self.diary),
         }
 
     @classmethod
@@ -103,6 +111,7 @@ class Alert:
         read["state"] = AlertState(read["state"])
         read["cause"] = Cause.from_dict(read["cause"])
         read["scenes"] = tuple(read["scenes"])
+        read["diary"] = tuple(read.get("diary", ()))
         return cls(**read)
 
 
@@ -132,6 +141,7 @@ def opened(
     rule: Rule,
     opening: datetime,
     suddenness: float | None,
+    strength: float,
 ) -> Alert:
     """Return the alert that departed looks open, the last of them being the opening one.
 
@@ -143,6 +153,8 @@ def opened(
         Acquisition time of the pass of the last one.
     suddenness
         Share of the leading shortfall that came with the first departing look.
+    strength
+        Of the alert, by its last three looks.
     """
     departing = [look for look in looks if look.departs]
     worst = max(departing, key=lambda look: look.score)
@@ -160,9 +172,9 @@ def opened(
         suddenness=suddenness,
         looks=len(departing),
         scenes=tuple(look.scene for look in departing),
-        low_power=False,
         closed_by=None,
         verdict=None,
+        strength=strength,
         **_figures(worst, rule),
     )
 
@@ -208,6 +220,8 @@ def _figures(look: DepartedLook, rule: Rule) -> dict[str, Any]:
         "baseline": look.baseline,
         "is_new_crop": look.is_new_crop,
         "is_weak": look.is_weak,
+        "low_power": look.low_power,
+        "p": look.p,
     }
 
 

@@ -1,64 +1,34 @@
 """Why a parcel may have departed: the first cause whose rule fits, and the next candidates.
 
-A cause is one entry in `CAUSES`; their order is the order in which they are tried. Rules
-after Gao 1996 (moisture), Key and Benson 2006 (burn) and McFeeters 1996 (water); their
-limits were set on simulated histories.
+A cause is one entry in `CAUSES`; their order is the order in which they are tried. The
+published works name the measures that tell the causes apart; the limits are those of the
+method's design, set on simulated histories.
 """
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Mapping
 from dataclasses import asdict, dataclass
-from math import nan
 from typing import Any, Final
 
-from service.alerts.looks import DepartedLook
-
-SUDDEN: Final = 0.5
-"""Share of a shortfall that came with its first look, from which on it is sudden."""
-WATER_SHARE: Final = 0.5
-"""Share of cells classed as water that speaks for a flood."""
-_LOOKS: Final = 2
-_WORDS: Final = {
-    "ndvi": "NDVI",
-    "ndmi": "NDMI",
-    "nbr": "NBR",
-    "ndwi": "NDWI",
-    "nir": "near-infrared",
-    "swir16": "short-wave infrared",
-    "swir22": "short-wave infrared at 2.2 µm",
-}
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Evidence:
-    """Mean figures of the last one or two departed looks; unknown measures are missing.
-
-    `suddenness` is the share of the leading shortfall that came with the first departing
-    look, None where that is unknown; `water` the share of cells classed as water.
-    """
-
-    observed: Mapping[str, float]
-    shortfall: Mapping[str, float]
-    departures: Mapping[str, float]
-    water: float | None
-    suddenness: float | None
-
-    def short(self, measure: str) -> float:
-        """Return the mean shortfall of a measure, NaN where unknown: no limit holds then."""
-        return self.shortfall.get(measure, nan)
-
-    def seen(self, measure: str) -> float:
-        """Return the mean observed value of a measure, NaN where unknown."""
-        return self.observed.get(measure, nan)
-
-    @property
-    def may_be_sudden(self) -> bool:
-        """Whether the departure was sudden, or it is unknown whether it was."""
-        return self.suddenness is None or self.suddenness >= SUDDEN
+from service.alerts.evidence import HAZE, Evidence
+from service.alerts.reasons import (
+    because_burn,
+    because_decline,
+    because_flood,
+    because_haze,
+    because_late_growth,
+    because_moisture_stress,
+    because_partial_loss,
+    because_removal,
+    because_shadow,
+    because_snow,
+    because_unclear,
+    because_undetermined,
+)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class CauseEntry:
-    """A kind of cause: when it fits, and how to say why.
+    """One way of telling a kind of cause: when it fits, and how to say why.
 
     `keeps_label` = once an alert carries it, later looks do not revise it: what follows a
     flood or a fire no longer looks like one.
@@ -91,28 +61,14 @@ class Cause:
         )
 
 
-def evidence_of(looks: Sequence[DepartedLook], suddenness: float | None) -> Evidence:
-    """Return the evidence of the last one or two of some departed looks, in order of time."""
-    last = looks[-_LOOKS:]
-    water = [look.water for look in last if look.water is not None]
-    return Evidence(
-        observed=_means([look.observed for look in last]),
-        shortfall=_means([look.shortfall for look in last]),
-        departures=_means([look.departures for look in last]),
-        water=sum(water) / len(water) if water else None,
-        suddenness=suddenness,
-    )
-
-
 def attribute(evidence: Evidence) -> Cause:
     """Return the first cause that fits; the others that fit too are the next candidates."""
     fitting = [entry for entry in CAUSES if entry.fits(evidence)]
     chosen = fitting[0] if fitting else UNDETERMINED
-    return Cause(
-        kind=chosen.kind,
-        because=chosen.because(evidence),
-        others=tuple(entry.kind for entry in fitting[1:]),
-    )
+    others = dict.fromkeys(entry.kind for entry in fitting[1:])
+    others.pop(chosen.kind, None)
+    others.pop(UNDETERMINED.kind, None)
+    return Cause(kind=chosen.kind, because=chosen.because(evidence), others=tuple(others))
 
 
 def keeps_label(kind: str) -> bool:
@@ -120,9 +76,14 @@ def keeps_label(kind: str) -> bool:
     return any(entry.keeps_label for entry in CAUSES if entry.kind == kind)
 
 
-def _means(figures: Sequence[Mapping[str, float]]) -> dict[str, float]:
-    known = {name: [each[name] for each in figures if name in each] for name in figures[-1]}
-    return {name: sum(values) / len(values) for name, values in known.items()}
+def _fits_snow(evidence: Evidence) -> bool:
+    return evidence.snow_index > 0.15 and evidence.seen("green") > 0.18
+
+
+def _fits_haze(evidence: Evidence) -> bool:
+    haze = evidence.short(HAZE)
+    is_dark = evidence.short("nir") < -0.04 and evidence.short("swir16") < -0.04
+    return haze > 0.02 and not (is_dark and haze < 0.06)
 
 
 def _fits_flood(evidence: Evidence) -> bool:
@@ -130,6 +91,16 @@ def _fits_flood(evidence: Evidence) -> bool:
         return False
     moisture = evidence.short("ndmi")
     return moisture > 0.03 or (evidence.short("nir") < -0.04 and moisture > -0.06)
+
+
+def _fits_shadow(evidence: Evidence) -> bool:
+    return (
+        evidence.short("nir") < -0.03
+        and evidence.short("swir16") < -0.03
+        and abs(evidence.short("ndvi")) < 0.05
+        and abs(evidence.short("ndmi")) < 0.05
+        and evidence.short("green") < -0.01
+    )
 
 
 def _fits_burn(evidence: Evidence) -> bool:
@@ -140,6 +111,16 @@ def _fits_burn(evidence: Evidence) -> bool:
         and evidence.short("swir16") < 0.012
         and burn < 1.25 * min(evidence.short("ndvi"), 0.0)
         and evidence.may_be_sudden
+    )
+
+
+def _fits_late_growth(evidence: Evidence) -> bool:
+    if evidence.rising is None or evidence.best is None:
+        return False
+    return (
+        evidence.short("ndvi") < -0.08
+        and evidence.rising > 0.04
+        and evidence.seen("ndvi") >= evidence.best - 0.08
     )
 
 
@@ -161,84 +142,95 @@ def _fits_moisture_stress(evidence: Evidence) -> bool:
     )
 
 
-def _change(evidence: Evidence, measure: str) -> str:
-    size = evidence.short(measure)
-    side = "below" if size < 0 else "above"
-    return f"{_WORDS.get(measure, measure)} is {abs(size):.2f} {side} what was expected"
+def _is_unclear(evidence: Evidence) -> bool:
+    return evidence.suddenness is None and evidence.short("ndvi") > -0.10
 
 
-def _because_flood(evidence: Evidence) -> str:
-    fell = [_change(evidence, band) for band in ("nir", "swir16") if evidence.short(band) < 0]
-    said = f"{_joined(fell)}, while {_change(evidence, 'ndwi')}"
-    if evidence.water is not None and evidence.water > WATER_SHARE:
-        said += f"; {evidence.water:.0%} of the cells are classed as water"
-    return said
-
-
-def _because_burn(evidence: Evidence) -> str:
+def _fits_partial_loss(evidence: Evidence) -> bool:
     return (
-        f"{_change(evidence, 'nbr')}, more than NDVI ({evidence.short('ndvi'):+.2f}); "
-        f"{_change(evidence, 'nir')}, and short-wave infrared did not rise with it "
-        f"({evidence.short('swir16'):+.2f})"
+        evidence.short("ndvi") < -0.04
+        and evidence.suddenness is not None
+        and evidence.suddenness > 0.6
     )
 
 
-def _because_removal(evidence: Evidence) -> str:
-    came = "at once" if evidence.suddenness is not None else "in a gap between looks"
-    return (
-        f"{_change(evidence, 'ndvi')} and came down to {evidence.seen('ndvi'):.2f}, {came}: "
-        "the green cover is gone"
-    )
-
-
-def _because_moisture_stress(evidence: Evidence) -> str:
-    return (
-        f"{_change(evidence, 'ndmi')} and {_change(evidence, 'swir16')}, while the cover is "
-        f"still green (NDVI {evidence.seen('ndvi'):.2f}, {evidence.short('ndvi'):+.2f})"
-    )
-
-
-def _because_undetermined(evidence: Evidence) -> str:
-    known = sorted(evidence.departures, key=lambda name: -abs(evidence.departures[name]))
-    told = _joined([_change(evidence, name) for name in known[:_LOOKS]])
-    return f"{told}; this fits none of the known causes"
-
-
-def _joined(parts: Sequence[str]) -> str:
-    return " and ".join(parts)
+def _fits_decline(evidence: Evidence) -> bool:
+    return evidence.short("ndvi") < -0.04
 
 
 CAUSES: Final = (
     CauseEntry(
+        kind="snow",
+        fits=_fits_snow,
+        because=because_snow,
+        source="Hall et al. 1995, Remote Sensing of Environment 54, 127-140",
+    ),
+    CauseEntry(
+        kind="residual_cloud",
+        fits=_fits_haze,
+        because=because_haze,
+        source="Zhang, Guindon and Cihlar 2002, Remote Sensing of Environment 82, 173-187",
+    ),
+    CauseEntry(
         kind="flood",
         fits=_fits_flood,
-        because=_because_flood,
+        because=because_flood,
         source="McFeeters 1996, Int. J. Remote Sensing 17, 1425-1432",
         keeps_label=True,
     ),
     CauseEntry(
+        kind="residual_cloud",
+        fits=_fits_shadow,
+        because=because_shadow,
+        source="a shadow darkens all bands and leaves their ratios, common practice",
+    ),
+    CauseEntry(
         kind="burn",
         fits=_fits_burn,
-        because=_because_burn,
+        because=because_burn,
         source="Key and Benson 2006, FIREMON, RMRS-GTR-164",
         keeps_label=True,
     ),
     CauseEntry(
+        kind="late_growth",
+        fits=_fits_late_growth,
+        because=because_late_growth,
+        source="a parcel that lost nothing while its crop grows on, common practice",
+    ),
+    CauseEntry(
         kind="removal",
         fits=_fits_removal,
-        because=_because_removal,
+        because=because_removal,
         source="NDVI of soil and residue, common practice",
     ),
     CauseEntry(
         kind="moisture_stress",
         fits=_fits_moisture_stress,
-        because=_because_moisture_stress,
+        because=because_moisture_stress,
         source="Gao 1996, Remote Sensing of Environment 58, 257-266",
+    ),
+    CauseEntry(
+        kind="undetermined",
+        fits=_is_unclear,
+        because=because_unclear,
+        source="a small change after a gap tells nothing of its cause, common practice",
+    ),
+    CauseEntry(
+        kind="partial_loss",
+        fits=_fits_partial_loss,
+        because=because_partial_loss,
+        source="part of the cover lost from one look to the next, common practice",
+    ),
+    CauseEntry(
+        kind="decline",
+        fits=_fits_decline,
+        because=because_decline,
+        source="cover lost little by little, common practice",
     ),
 )
 UNDETERMINED: Final = CauseEntry(
     kind="undetermined",
     fits=lambda _evidence: True,
-    because=_because_undetermined,
+    because=because_undetermined,
     source="what is left when no other cause fits",
 )

@@ -23,8 +23,16 @@ class DepartedLook:
         By measure of the rule, with the sign of the shortfall.
     water
         Share of the parcel's cells classed as water; None = unknown.
+    rising
+        By how much the expected NDVI rose over the past 20 days; None = unknown.
+    best
+        Highest NDVI of the parcel's looks in the 25 days before; None = there was none.
+    p
+        Share of past looks that were as far out; None = unknown.
     is_weak
         Whether the cohort was too small to vouch for a single look.
+    low_power
+        Whether the look has no crop to be compared with.
     """
 
     at: int
@@ -41,7 +49,11 @@ class DepartedLook:
     basis: str
     is_new_crop: bool
     is_weak: bool
+    low_power: bool
     baseline: str
+    rising: float | None = None
+    best: float | None = None
+    p: float | None = None
 
     def as_dict(self) -> dict[str, Any]:
         """Return plain members, fit for JSON."""

@@ -47,7 +47,12 @@ class ChangeOut(BaseModel):
 
 
 class AlertOut(BaseModel):
-    """A parcel's departure from its baseline."""
+    """A parcel's departure from its baseline.
+
+    `chance` is the odds that it is a false one, null without a past to tell; `p` how rare a
+    look as far out as its worst one was in the past; `baseline` the version it was judged by;
+    `diary` what was written down for its time without explaining it.
+    """
 
     id: str
     state: str
@@ -69,10 +74,14 @@ class AlertOut(BaseModel):
     departures: dict[str, float]
     score: float
     severity: str
+    chance: float | None
+    p: float | None
     cause: CauseOut
     looks: int
     scenes: list[str]
+    diary: list[str]
     basis: str
+    baseline: str
     is_new_crop: bool
     is_weak: bool
     low_power: bool

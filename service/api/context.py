@@ -31,6 +31,9 @@ class Queue(Protocol):
     def promise_import(self, job_id: str) -> None:
         """Take up an import of parcels."""
 
+    def promise_rehearsal(self, job_id: str) -> None:
+        """Take up a rehearsal."""
+
     def promise_judging(self) -> None:
         """Take up whatever judging is promised."""
 
@@ -43,8 +46,8 @@ class Context:
     """The running service, as the handlers see it.
 
     Handlers open their own sessions, so that a write is committed before its answer is made.
-    The queue takes committed promises of scenes, of deliveries, of imports and of judging;
-    the assets of STAC Items are fetched through `assets`.
+    The queue takes committed promises of scenes, deliveries, imports, rehearsals and
+    judging; the assets of STAC Items are fetched through `assets`.
     """
 
     work: Resources
@@ -62,6 +65,10 @@ class Context:
     def promise_import(self, job_id: str) -> None:
         """Hand a promised import of parcels to the queue."""
         self.queue.promise_import(job_id)
+
+    def promise_rehearsal(self, job_id: str) -> None:
+        """Hand a promised rehearsal to the queue."""
+        self.queue.promise_rehearsal(job_id)
 
     def promise_judging(self) -> None:
         """Hand promised judging to the queue."""

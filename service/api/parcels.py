@@ -1,11 +1,13 @@
 """Parcels: inserted, updated, listed, retired; their boundary versions."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
+from datetime import datetime, timedelta
 from typing import Annotated, Any
 
 from fastapi import Query, Request, Response
 from pydantic import BaseModel, Field
 from sqlalchemy import select
+from sqlalchemy.orm import Session
 
 from service.api.batches import model_of
 from service.api.bodies import Bulk, BulkBody, unsupported_media_type
@@ -13,7 +15,7 @@ from service.api.context import Context, Ctx, Reader, Steward
 from service.api.features import GEOJSON, GeoJson, features_of, geometry_of
 from service.api.paging import Cursor, Limit, link_next, place_in
 from service.api.routes import contract_router, takes
-from service.api.wire import Instant, InstantOut, LongText, QueryBox, Ref, Sent, Text
+from service.api.wire import Instant, InstantOut, LongText, QueryBox, Ref, Sent, Text, written
 from service.clock import now
 from service.errors import Fault, RejectedInput, pointer_of
 from service.store.parcel_batches import Limits, ParcelBatch, Places, keep_parcels
@@ -27,6 +29,7 @@ from service.store.parcels import (
     visible,
 )
 from service.store.tables import Boundary, CropSeason, Holding, Parcel, ParcelTag
+from service.store.unseen import not_seen_since, unseen_passes
 from service.streams import json_items, json_members
 from service.zonal.boundary import outline_from_geojson
 
@@ -162,30 +165,60 @@ def get_parcels(
     holding: Annotated[Ref | None, Query()] = None,
     crop: Annotated[Text | None, Query(description="Crop of the season that holds today.")] = None,
     tag: Annotated[Text | None, Query()] = None,
+    unseen_days: Annotated[
+        int | None, Query(ge=1, le=3660, description="Without a look in so many days.")
+    ] = None,
     limit: Limit = 100,
     cursor: Cursor = None,
 ) -> Response:
-    """List parcels that are not retired, as GeoJSON."""
+    """List parcels that are not retired, as GeoJSON.
+
+    With `unseen_days` those without a look in so many days up to now; `unseen` then says when
+    the last one was, how many passes came since the days began, and what hid the parcel.
+    """
     place = place_in(cursor, int)
     at = now()
+    since = None if unseen_days is None else at - timedelta(days=unseen_days)
     query = visible(select(Parcel), caller.holdings).order_by(Parcel.id)
     query = query.where(Parcel.id > (place[0] if place else 0))
-    if holding is not None:
-        query = query.where(Parcel.holding_id.in_(select(Holding.id).where(Holding.ref == holding)))
+    conditions = (
+        (holding, Parcel.holding_id.in_(select(Holding.id).where(Holding.ref == holding))),
+        (crop, Parcel.id.in_(_growing(crop or ""))),
+        (tag, Parcel.id.in_(_tagged(tag or ""))),
+        (since, not_seen_since(since or at)),
+    )
+    query = query.where(*(condition for asked, condition in conditions if asked is not None))
     if bbox is not None:
         met = select(Boundary.parcel_id).where(in_force(at), intersects(bbox))
         query = query.where(Parcel.id.in_(met))
-    if crop is not None:
-        query = query.where(Parcel.id.in_(_growing(crop)))
-    if tag is not None:
-        query = query.where(Parcel.id.in_(_tagged(tag)))
     with context.sessions.reading() as session:
         rows = session.scalars(query.limit(limit + 1)).all()
         features = features_of(session, rows[:limit])
+        if since is not None:
+            _add_unseen(session, features, rows, since, at)
     answer = GeoJson({"type": "FeatureCollection", "features": features})
     if len(rows) > limit:
         link_next(request, answer, rows[limit - 1].id)
     return answer
+
+
+def _add_unseen(
+    session: Session,
+    features: Sequence[dict[str, Any]],
+    rows: Sequence[Parcel],
+    since: datetime,
+    until: datetime,
+) -> None:
+    """Say of features, which are the first of the rows, since when and why they are unseen."""
+    shown = rows[: len(features)]
+    found = unseen_passes(session, dict.fromkeys((row.id for row in shown), since), until=until)
+    for feature, row in zip(features, shown, strict=True):
+        unseen = found[row.id]
+        feature["properties"]["unseen"] = {
+            "last_look_at": written(unseen.last_look_at) if unseen.last_look_at else None,
+            "passes": unseen.passes,
+            "reasons": dict(unseen.reasons),
+        }
 
 
 def _growing(crop: str) -> Any:

@@ -190,7 +190,7 @@ def _resolved(
             faults.add(item, Fault(pointer=f"{pointer}/parcel", detail=detail))
             continue
         latitude = (outlines[row.id].south + outlines[row.id].north) / 2
-        start = season_start(latitude, context.settings.season_starts)
+        start = season_start(row, latitude, context.settings.season_starts)
         resolved = faults.collect(item, lambda: _interval(season, row, start, pointer))  # noqa: B023
         if resolved is not None:
             yield item, resolved, by_parcel.setdefault(row.id, [])

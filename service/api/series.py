@@ -47,7 +47,12 @@ def get_series(
     ] = None,
     format: Annotated[str | None, Query(description="json or csv.")] = None,  # noqa: A002 - the contract's name
 ) -> Response:
-    """Answer a parcel's series: one look a pass, as JSON by column or as CSV."""
+    """Answer a parcel's series: one look a pass, as JSON by column or as CSV.
+
+    With `baseline` what was expected, the band that nine looks in ten should lie in, and what
+    it rests on (`own`, `blended`, `cohort`). With `departure` the shortfall, the same in
+    spreads, how rare so high a score was in the past (`p`), and why a look was not judged.
+    """
     measures = measures_in(index)
     stats = stats_in(stat, measures)
     judged = _judged_columns(beside)
@@ -63,7 +68,9 @@ def get_series(
             return not_modified(tag)
         rows = _rows(session, parcel, since, until, sensor=sensor, as_of=as_of)
         seasons = seasons_of(session, [parcel.id]).get(parcel.id, [])
-        thought = judgements_of(session, parcel, as_of=as_of) if judged else {}
+        thought = (
+            judgements_of(session, parcel, since=since, until=until, as_of=as_of) if judged else {}
+        )
     series = ParcelSeries(
         parcel=parcel.ref,
         stats=[*stats, *judged],
@@ -106,8 +113,18 @@ def _rows(
 
 
 _JUDGED: Final[Mapping[str, Mapping[str, str]]] = {
-    "baseline": {"baseline.mid": "expected", "baseline.low": "low", "baseline.high": "high"},
-    "departure": {"shortfall": "shortfall", "departure": "departure"},
+    "baseline": {
+        "baseline.mid": "expected",
+        "baseline.low": "low",
+        "baseline.high": "high",
+        "baseline.basis": "basis",
+    },
+    "departure": {
+        "shortfall": "shortfall",
+        "departure": "departure",
+        "p": "p",
+        "unjudged": "unjudged",
+    },
 }
 """What `with` names: the columns it adds, and the figures of a judgement that are in them."""
 

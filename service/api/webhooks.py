@@ -36,7 +36,12 @@ from service.webhooks.signing import OLD_SECRET_HOLDS, SECRET_BYTES, secret_of
 
 router = contract_router("", "webhooks")
 Severity = Literal["low", "medium", "high"]
-_OF_ALL_HOLDINGS = (EventName.SCENE_DONE, EventName.SCENE_FAILED)
+_OF_ALL_HOLDINGS = (
+    EventName.SCENE_DONE,
+    EventName.SCENE_FAILED,
+    EventName.REGION_OPENED,
+    EventName.REGION_CLOSED,
+)
 
 
 class WebhookSent(Sent):
@@ -159,7 +164,9 @@ def _holdings_of(sent: WebhookSent, caller: Caller) -> list[str] | None:
             raise RejectedInput.at("/holdings", "Your own key is limited; name its holdings only.")
     if holdings is not None and set(sent.events) & set(_OF_ALL_HOLDINGS):
         raise RejectedInput.at(
-            "/events", "Scenes concern all holdings; a webhook limited to some is not told of them."
+            "/events",
+            "Scenes and regional notices concern all holdings; a webhook limited to some is not "
+            "told of them.",
         )
     return holdings
 

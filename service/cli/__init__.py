@@ -29,7 +29,7 @@ EXIT_CODES: Final[Mapping[type[FurrowlightError], int]] = {
 
 EXIT_BUG: Final = 70
 
-COMMANDS: Final = ("demo", "serve", "push", "keys", "alerts", "parcels")
+COMMANDS: Final = ("demo", "serve", "push", "keys", "alerts", "diary", "rules", "parcels", "bench")
 """A command is a function, and a group of them an ``app``, in the module of its name."""
 
 

@@ -97,21 +97,35 @@ def _told(alert: dict[str, Any]) -> str:
         f"departing since {alert['first_departure_at']}, last look {alert['last_observed_at']}",
         f"  {alert['index']} {alert['observed']:.3f}, expected {alert['expected']:.3f}, "
         f"{abs(alert['departure']):.1f} spreads {alert['direction']}; score {alert['score']:.1f} "
-        f"over {alert['looks']} looks, basis {alert['basis']}",
+        f"over {alert['looks']} looks, basis {alert['basis']}, {_odds(alert['chance'])}",
         f"  likely cause: {alert['cause']['kind']}, because {alert['cause']['because']}",
         f"  next candidates: {others}",
         f"  scenes: {', '.join(alert['scenes'])}",
+        *(f"  diary: {entry}" for entry in alert["diary"]),
         *(_change(change) for change in alert["history"]),
         f"  {alert['caution']}",
     ]
     return "\n".join(lines)
 
 
+def _odds(chance: float | None) -> str:
+    return "odds unknown" if chance is None else f"odds of a false alert {chance:.2f}"
+
+
 def _change(change: dict[str, Any]) -> str:
     who = f" by {change['who']}" if change["who"] else ""
     verdict = f", verdict {change['verdict']}" if change["verdict"] else ""
     note = f": {change['note']}" if change["note"] else ""
-    return f"  {change['recorded_at']} {change['kind']}{who}{verdict}{note}"
+    return f"  {change['recorded_at']} {change['kind']}{_what(change['what'])}{who}{verdict}{note}"
+
+
+def _what(what: dict[str, Any]) -> str:
+    """Return what changed, from what to what, and why where that is said."""
+    moved = [
+        f"{name} from {value[0]} to {value[1]}" if isinstance(value, list) else str(value)
+        for name, value in what.items()
+    ]
+    return f" ({'; '.join(moved)})" if moved else ""
 
 
 @app.command()

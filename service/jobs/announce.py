@@ -7,11 +7,14 @@ from urllib.parse import quote
 
 from sqlalchemy.orm import Session
 
+from service.alerts.alert import CAUTION
 from service.jobs.deliver import Promise, promise_of
 from service.settings import Settings
 from service.store.alerts import document_of
 from service.store.judgements import Happened
-from service.store.tables import Scene, Webhook
+from service.store.notices import OPENED, NoticeTold
+from service.store.tables import Parcel, Scene, Webhook
+from service.store.unseen import Unseen
 from service.store.webhooks import Announcement, announce, announce_to, event_id_of
 from service.webhooks.events import EventName, event_body
 
@@ -37,7 +40,7 @@ def announcement(
         occurred_at=at,
         subject=subject,
         data=data,
-        droppable=("indices", "scenes", "departures"),
+        droppable=("indices", "scenes", "departures", "crops"),
     )
     return Announcement(
         event_id=event_id,
@@ -98,6 +101,59 @@ def announce_alert(
         at=at,
         holding=holding,
         severity=row.severity,
+    )
+    return [promise_of(delivery, at=at) for delivery in announce(session, told, at=at)]
+
+
+def announce_notice(
+    session: Session, settings: Settings, told: NoticeTold, *, at: datetime
+) -> list[Promise]:
+    """Tell that a regional notice opened or ended; return the attempts that were promised."""
+    row = told.row
+    closed_at = row.closed_at
+    event = announcement(
+        settings,
+        EventName.REGION_OPENED if told.kind == OPENED else EventName.REGION_CLOSED,
+        key=(row.id, told.kind, row.revision),
+        subject=row.id,
+        data={
+            "id": row.id,
+            "kind": row.kind,
+            # Told in the order in which it happened, even if it is over by now.
+            "state": "open" if told.kind == OPENED else row.state,
+            "opened_at": row.opened_at.isoformat().replace("+00:00", "Z"),
+            "closed_at": closed_at and closed_at.isoformat().replace("+00:00", "Z"),
+            "measure": row.measure,
+            "shift": round(row.shift, 4),
+            "crops": row.crops,
+            "link": f"{settings.public_url}/v1/notices/{row.id}",
+            "caution": CAUTION,
+        },
+        at=at,
+    )
+    return [promise_of(delivery, at=at) for delivery in announce(session, event, at=at)]
+
+
+def announce_unseen(
+    session: Session, settings: Settings, parcel: Parcel, unseen: Unseen, *, at: datetime
+) -> list[Promise]:
+    """Tell that nobody has seen a parcel for a while; return the attempts that were promised."""
+    last = unseen.last_look_at
+    told = announcement(
+        settings,
+        EventName.PARCEL_UNSEEN,
+        key=(parcel.ref, last),
+        subject=parcel.ref,
+        data={
+            "parcel": parcel.ref,
+            "holding": parcel.holding.ref if parcel.holding else None,
+            "last_look_at": last and last.isoformat().replace("+00:00", "Z"),
+            "passes": unseen.passes,
+            "reasons": dict(unseen.reasons),
+            "link": f"{settings.public_url}/v1/parcels/{quote(parcel.ref, safe='')}",
+        },
+        at=at,
+        holding=parcel.holding.ref if parcel.holding else None,
     )
     return [promise_of(delivery, at=at) for delivery in announce(session, told, at=at)]
 

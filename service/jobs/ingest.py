@@ -12,6 +12,7 @@ from service.jobs.announce import announce_scene
 from service.jobs.assess import enqueue_fresh_deliveries, judge
 from service.jobs.measuring import measure_scene
 from service.jobs.resources import resources
+from service.jobs.unseen import tell_of_unseen
 from service.store.alerts import count_opened_by
 from service.store.scenes import SceneState, lock_scene
 
@@ -80,6 +81,7 @@ def finish(scene_id: int, generation: int) -> str:
         row.progress = 1.0
         row.changed_at = now()
         row.report = {**(row.report or {}), "alerts_opened": count_opened_by(session, row)}
+        tell_of_unseen(session, work.settings, row, at=row.changed_at)
         announce_scene(session, work.settings, row, at=row.changed_at)
     _log.info("scene done")
     return "done"

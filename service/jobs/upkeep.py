@@ -9,7 +9,7 @@ import structlog
 from dbos import DBOS
 
 from service.clock import now
-from service.jobs import assess, deliver, ingest, parcel_import
+from service.jobs import assess, deliver, ingest, parcel_import, rehearsal_job
 from service.jobs.resources import Resources
 from service.store.answers import forget_old_answers
 from service.store.batches import in_batches
@@ -29,6 +29,7 @@ _PURGE_BATCH: Final = 500
 _UNKNOWN: Final = "unknown"
 _CRASHED: Final = "MAX_RECOVERY_ATTEMPTS_EXCEEDED"
 _ENDED: Final = frozenset({"SUCCESS", "ERROR", "CANCELLED"})
+_JOBS: Final = {parcel_import.KIND: parcel_import, rehearsal_job.KIND: rehearsal_job}
 _log = structlog.get_logger()
 
 
@@ -105,16 +106,16 @@ def _sweep_deliveries(work: Resources) -> None:
 def _sweep_jobs(work: Resources) -> None:
     """Enqueue jobs that the queue does not know, and fail those that it gave up."""
     with work.sessions.reading() as session:
-        jobs = [row.public_id for row in unfinished_jobs(session)]
-    states = _workflow_states([parcel_import.workflow_id(job) for job in jobs])
-    for job in jobs:
-        state = states.get(parcel_import.workflow_id(job), _UNKNOWN)
+        jobs = [(row.public_id, _JOBS[row.kind]) for row in unfinished_jobs(session)]
+    states = _workflow_states([module.workflow_id(job) for job, module in jobs])
+    for job, module in jobs:
+        state = states.get(module.workflow_id(job), _UNKNOWN)
         if state == _UNKNOWN:
-            parcel_import.enqueue(job)
+            module.enqueue(job)
         elif state == _CRASHED:
-            parcel_import.fail(job, parcel_import.CRASHED_FAILURE)
+            module.fail(job, module.CRASHED_FAILURE)
         elif state in _ENDED:
-            parcel_import.fail(job, parcel_import.INTERNAL_FAILURE)
+            module.fail(job, module.INTERNAL_FAILURE)
 
 
 def _workflow_states(ids: Sequence[str]) -> dict[str, str]:

@@ -10,7 +10,7 @@ from dbos import DBOS, DBOSConfig, DBOSPortableJSONSerializer
 from sqlalchemy import Engine, create_engine, event, make_url
 
 from service.errors import Unavailable
-from service.jobs import assess, deliver, ingest, parcel_import
+from service.jobs import assess, deliver, ingest, parcel_import, rehearsal_job
 from service.jobs.resources import Resources, lend
 from service.jobs.upkeep import Upkeep
 from service.store.sessions import hold_database
@@ -72,21 +72,12 @@ class Worker:
             )
         )
         DBOS.launch()
-        DBOS.register_queue(
-            ingest.QUEUE,
-            worker_concurrency=1,
-            polling_interval_sec=settings.queue_polling_seconds,
-        )
-        DBOS.register_queue(
-            assess.QUEUE,
-            worker_concurrency=1,
-            polling_interval_sec=settings.queue_polling_seconds,
-        )
-        DBOS.register_queue(
-            parcel_import.QUEUE,
-            worker_concurrency=1,
-            polling_interval_sec=settings.queue_polling_seconds,
-        )
+        for module in (ingest, assess, parcel_import, rehearsal_job):
+            DBOS.register_queue(
+                module.QUEUE,
+                worker_concurrency=1,
+                polling_interval_sec=settings.queue_polling_seconds,
+            )
         # A slow receiver holds up only itself.
         DBOS.register_queue(
             deliver.QUEUE,
@@ -108,6 +99,10 @@ class Worker:
     def promise_import(self, job_id: str) -> None:
         """Hand a promised import to the queue at once; if that fails, the sweep will."""
         self._hand(lambda: parcel_import.enqueue(job_id))
+
+    def promise_rehearsal(self, job_id: str) -> None:
+        """Hand a promised rehearsal to the queue at once; if that fails, the sweep will."""
+        self._hand(lambda: rehearsal_job.enqueue(job_id))
 
     def promise_judging(self) -> None:
         """Hand promised judging to the queue at once; if that fails, the sweep will."""

@@ -1,27 +1,24 @@
-"""What to expect of every parcel on every day of season, fitted from finished seasons."""
+"""What to expect of every parcel on every day of season."""
 
 import hashlib
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from enum import StrEnum
 from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
 
-from service.seasons.cohort import past_levels
-from service.seasons.history import History
-from service.seasons.medians import SPREAD_OF_MEDIAN, Counts, Figures, medians
-from service.seasons.offsets import OWN_WEIGHT, OwnLooks, offsets_without_own_season
-from service.seasons.spread import spreads
-from service.seasons.usual import DAYS, usual_course
+from service.seasons.medians import Figures
+from service.seasons.offsets import OWN_WEIGHT, OwnLooks
+from service.seasons.ranks import Ranks
+from service.seasons.usual import DAYS
 
-METHOD: Final = "own-offset-against-cohort/1"
+METHOD: Final = "own-offset-against-cohort/2"
 """Name of the method; part of a baseline's version."""
 BAND: Final = 1.645
 """Half width of the band drawn about an expected value, in spreads: nine looks in ten lie in
 it if they are normally distributed (the 5 % and 95 % points of the normal distribution)."""
-WINSOR: Final = 3.0
 
 
 class Basis(StrEnum):
@@ -53,6 +50,8 @@ class Baselines:
         Crop → the seasons that its course rests on.
     own
         What past looks leave when the crop's level is taken off.
+    ranks
+        Past scores, by which a look's p is told.
     version
         Hash of method and content: two baselines of one version expect the same.
     """
@@ -62,7 +61,31 @@ class Baselines:
     spread: Mapping[str, Figures]
     seasons: Mapping[str, tuple[int, ...]]
     own: OwnLooks
+    ranks: Ranks
     version: str
+
+    @classmethod
+    def of(
+        cls,
+        *,
+        measures: tuple[str, ...],
+        usual: Mapping[str, Figures],
+        spread: Mapping[str, Figures],
+        seasons: Mapping[str, tuple[int, ...]],
+        own: OwnLooks,
+        ranks: Ranks,
+    ) -> "Baselines":
+        """Return baselines with their version worked out."""
+        unnamed = cls(
+            measures=measures,
+            usual=usual,
+            spread=spread,
+            seasons=seasons,
+            own=own,
+            ranks=ranks,
+            version="",
+        )
+        return replace(unnamed, version=_version(unnamed.to_arrays()))
 
     def knows(self, crop: str, day: int) -> bool:
         """Whether the crop has history at this time of the season, in any measure."""
@@ -71,7 +94,25 @@ class Baselines:
 
     def to_arrays(self) -> dict[str, NDArray[Any]]:
         """Return plain arrays, fit for one npz file, that `from_arrays` reads."""
-        return _arrays(self.measures, self.usual, self.spread, self.seasons, self.own)
+        nothing = np.empty((0, DAYS, len(self.measures)))
+        crops = list(self.usual)
+        counts = [len(self.seasons[crop]) for crop in crops]
+        every_season = [season for crop in crops for season in self.seasons[crop]]
+        return {
+            "measures": np.array(self.measures, dtype=np.str_),
+            "crops": np.array(crops, dtype=np.str_),
+            "crop_season_counts": np.array(counts, dtype=np.int64),
+            "crop_seasons": np.array(every_season, dtype=np.int64),
+            "usual": np.stack(list(self.usual.values())) if crops else nothing,
+            "spread": np.stack(list(self.spread.values())) if crops else nothing,
+            "pair_parcels": np.array([parcel for parcel, _ in self.own.pairs], dtype=np.str_),
+            "pair_crops": np.array([crop for _, crop in self.own.pairs], dtype=np.str_),
+            "own_pair": self.own.pair,
+            "own_day": self.own.day,
+            "own_season": self.own.season,
+            "own_residuals": self.own.residuals,
+            **self.ranks.to_arrays(),
+        }
 
     @classmethod
     def from_arrays(cls, arrays: Mapping[str, NDArray[Any]]) -> "Baselines":
@@ -83,68 +124,22 @@ class Baselines:
         for crop, last in spans:
             seasons[crop] = tuple(int(season) for season in arrays["crop_seasons"][first:last])
             first = last
-        pairs = zip(arrays["pair_parcels"], arrays["pair_crops"], strict=True)
+        pairs = zip(arrays["pair_parcels"].tolist(), arrays["pair_crops"].tolist(), strict=True)
         return cls(
             measures=tuple(str(measure) for measure in arrays["measures"]),
             usual=dict(zip(crops, arrays["usual"], strict=True)),
             spread=dict(zip(crops, arrays["spread"], strict=True)),
             seasons=seasons,
             own=OwnLooks(
-                pairs={(str(parcel), str(crop)): at for at, (parcel, crop) in enumerate(pairs)},
+                pairs={pair: at for at, pair in enumerate(pairs)},
                 pair=arrays["own_pair"],
                 day=arrays["own_day"],
                 season=arrays["own_season"],
                 residuals=arrays["own_residuals"],
             ),
+            ranks=Ranks.from_arrays(arrays),
             version=_version(arrays),
         )
-
-
-def fit_baselines(history: History) -> Baselines:
-    """Fit the baselines of a season axis from its finished seasons.
-
-    Parameters
-    ----------
-    history
-        Looks, one per parcel and pass, without those that must not shape a baseline.
-
-    Returns
-    -------
-    Baselines
-        The same looks in any order give the same baselines, to the last bit.
-    """
-    looks = history.arranged()
-    values = np.ascontiguousarray(looks.values.T)
-    usual = np.stack(_usual(looks, values)) if looks.crops else _no_courses(looks)
-    residuals = values - usual[looks.crop, looks.day].T
-    residuals -= _levels(looks, residuals)
-    kept = _winsorised(looks, residuals)
-    pair_names, pair = _pairs(looks)
-    shortfalls = residuals - offsets_without_own_season(pair, looks.season, looks.day, kept)
-    spread = spreads(looks.crop, looks.day, shortfalls, crops=len(looks.crops))
-    by_day = np.argsort(looks.day, kind="stable")
-    own = OwnLooks(
-        pairs={name: at for at, name in enumerate(pair_names)},
-        pair=pair[by_day].astype(np.int32),
-        day=looks.day[by_day].astype(np.int32),
-        season=looks.season[by_day].astype(np.int32),
-        residuals=np.ascontiguousarray(kept.T[by_day]).astype(np.float32),
-    )
-    seasons = {
-        crop: tuple(int(each) for each in np.unique(looks.season[looks.crop == at]))
-        for at, crop in enumerate(looks.crops)
-    }
-    courses = dict(zip(looks.crops, usual, strict=True))
-    spread_by_crop = dict(zip(looks.crops, spread, strict=True))
-    arrays = _arrays(looks.measures, courses, spread_by_crop, seasons, own)
-    return Baselines(
-        measures=looks.measures,
-        usual=courses,
-        spread=spread_by_crop,
-        seasons=seasons,
-        own=own,
-        version=_version(arrays),
-    )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -193,79 +188,6 @@ def expected_at(
         seasons=own.seasons(),
         crop_seasons=baselines.seasons[crop],
     )
-
-
-def _no_courses(looks: History) -> Figures:
-    return np.empty((0, DAYS, len(looks.measures)))
-
-
-def _usual(looks: History, values: Figures) -> list[Figures]:
-    courses = []
-    for crop in range(len(looks.crops)):
-        of_crop = np.flatnonzero(looks.crop == crop)
-        by_day = of_crop[np.argsort(looks.day[of_crop], kind="stable")]
-        courses.append(usual_course(looks.day[by_day], values[:, by_day]))
-    return courses
-
-
-def _levels(looks: History, shifts: Figures) -> Figures:
-    """Return the level of its crop in its pass for every look, shape (measures, looks)."""
-    if looks.crop.size == 0:
-        return np.zeros_like(shifts)
-    is_first = np.ones(looks.crop.size, dtype=bool)
-    is_first[1:] = (
-        (np.diff(looks.crop) != 0) | (np.diff(looks.season) != 0) | (np.diff(looks.pass_at) != 0)
-    )
-    starts = np.flatnonzero(is_first)
-    _, segment = np.unique(
-        np.stack([looks.crop[starts], looks.season[starts]]), axis=1, return_inverse=True
-    )
-    levels = past_levels(segment, starts, shifts)
-    return levels[:, np.cumsum(is_first) - 1]
-
-
-def _winsorised(looks: History, residuals: Figures) -> Figures:
-    kept = np.empty_like(residuals)
-    for crop in range(len(looks.crops)):
-        of_crop = looks.crop == crop
-        some = residuals[:, of_crop]
-        typical, _ = medians(np.abs(some))
-        limit = (WINSOR * SPREAD_OF_MEDIAN * typical)[:, None]
-        kept[:, of_crop] = np.clip(some, -limit, limit)
-    return kept
-
-
-def _pairs(looks: History) -> tuple[list[tuple[str, str]], Counts]:
-    """Return (parcel, crop) by code, and the code of each look."""
-    number = looks.parcel * max(len(looks.crops), 1) + looks.crop
-    known, code = np.unique(number, return_inverse=True)
-    parcel, crop = np.divmod(known, max(len(looks.crops), 1))
-    return [(looks.parcels[p], looks.crops[c]) for p, c in zip(parcel, crop, strict=True)], code
-
-
-def _arrays(
-    measures: tuple[str, ...],
-    usual: Mapping[str, Figures],
-    spread: Mapping[str, Figures],
-    seasons: Mapping[str, tuple[int, ...]],
-    own: OwnLooks,
-) -> dict[str, NDArray[Any]]:
-    nothing = np.empty((0, DAYS, len(measures)))
-    every_season = [season for crop in usual for season in seasons[crop]]
-    return {
-        "measures": np.array(measures, dtype=np.str_),
-        "crops": np.array(list(usual), dtype=np.str_),
-        "crop_season_counts": np.array([len(seasons[crop]) for crop in usual], dtype=np.int64),
-        "crop_seasons": np.array(every_season, dtype=np.int64),
-        "usual": np.stack(list(usual.values())) if usual else nothing,
-        "spread": np.stack(list(spread.values())) if usual else nothing,
-        "pair_parcels": np.array([parcel for parcel, _ in own.pairs], dtype=np.str_),
-        "pair_crops": np.array([crop for _, crop in own.pairs], dtype=np.str_),
-        "own_pair": own.pair,
-        "own_day": own.day,
-        "own_season": own.season,
-        "own_residuals": own.residuals,
-    }
 
 
 def _version(arrays: Mapping[str, NDArray[Any]]) -> str:

@@ -7,7 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from service.seasons.medians import Counts, Figures, grouped_medians, medians
-from service.seasons.usual import Course, change_nearby
+from service.seasons.usual import YEAR_DAYS, Course, change_nearby
 
 PRIOR_LOOKS: Final = 3.0
 """A cohort of this many looks counts as much as what it did in the pass before."""
@@ -22,6 +22,8 @@ NEW_CROP_DAYS: Final = 1.7
 """How many days parcels of a crop without history are ahead or behind each other."""
 LATER_DAYS: Final = 5
 EARLIER_DAYS: Final = 3
+RISE_DAYS: Final = 20
+"""Over how many past days the rise of the usual value is told."""
 """How far a parcel may be ahead of or behind its baseline without having departed."""
 
 
@@ -58,6 +60,8 @@ class Cohort:
         Spread of looks about what is expected of them.
     lower, higher
         By how much the usual value gets lower, and higher, 5 days later or 3 earlier.
+    rising
+        By how much the usual value rose over the past 20 days.
     looks
         Looks of the crop in the pass.
     is_new
@@ -69,6 +73,7 @@ class Cohort:
     spread: Figures
     lower: Figures
     higher: Figures
+    rising: Figures
     looks: int
     is_new: bool
 
@@ -114,6 +119,7 @@ def known_crop(
         spread=spread[day],
         lower=lower,
         higher=higher,
+        rising=course[day] - course[(day - RISE_DAYS) % YEAR_DAYS],
         looks=len(values),
         is_new=False,
     )
@@ -128,15 +134,17 @@ def new_crop(values: Figures, *, day: int, carried: Carried) -> tuple[Cohort, Ca
     pass before, and is 0 in the first one. S² = 0.03² + (1.7 days · dμ/dτ)².
     """
     median, _ = medians(values.T)
-    slope = np.zeros_like(median)
+    rate = np.full_like(median, np.nan)
     if carried.day is not None and day > carried.day:
-        slope = np.nan_to_num((median - carried.median) / (day - carried.day))
+        rate = (median - carried.median) / (day - carried.day)
+    slope = np.nan_to_num(rate)
     cohort = Cohort(
         usual=median,
         level=np.zeros_like(median),
         spread=np.hypot(NEW_CROP_SPREAD, NEW_CROP_DAYS * slope),
         lower=np.maximum(0.0, np.maximum(-LATER_DAYS * slope, EARLIER_DAYS * slope)),
         higher=np.maximum(0.0, np.maximum(LATER_DAYS * slope, -EARLIER_DAYS * slope)),
+        rising=RISE_DAYS * rate,
         looks=len(values),
         is_new=True,
     )

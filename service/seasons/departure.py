@@ -12,6 +12,8 @@ from service.seasons.cohort import Carried, Cohort, known_crop, new_crop
 from service.seasons.history import HAZE
 from service.seasons.medians import Figures
 
+WORSE: Final[Mapping[str, float]] = {"ndvi": -1.0, "ndmi": -1.0, "nbr": -1.0, "ndwi": 1.0}
+"""The measures by which a look is ranked among those of the past: -1 where lower is worse."""
 HAZE_LIMIT: Final = 0.02
 """Haze above its expected value by more than this makes a look suspect."""
 WATER_HAZE_LIMIT: Final = 0.06
@@ -37,6 +39,8 @@ class Departures:
         S, the spread of looks about e.
     lower, higher
         By how much the crop's usual value gets lower, and higher, within a few days.
+    rising
+        By how much it rose over the past 20 days.
     weight
         ΣK: how much the own offset rests on.
     cohorts
@@ -51,9 +55,14 @@ class Departures:
     spread: Figures
     lower: Figures
     higher: Figures
+    rising: Figures
     weight: Figures
     cohorts: Mapping[str, Cohort]
     carried: Mapping[str, Carried]
+
+    def plain(self, signs: Figures) -> tuple[Figures, Figures]:
+        """Return what `adverse` does, without the tolerance in time."""
+        return signs * self.shortfall / self.spread, signs * self.own_shortfall / self.spread
 
     def adverse(self, signs: Figures) -> tuple[Figures, Figures]:
         """Return the departure towards the worse side, and by the parcel's own calendar.
@@ -132,6 +141,7 @@ def departures_in(
         spread=filled["spread"],
         lower=filled["lower"],
         higher=filled["higher"],
+        rising=filled["rising"],
         weight=weight,
         cohorts=cohorts,
         carried=handed_on,
@@ -187,7 +197,7 @@ def suspect_looks(shortfall: Figures, measures: Sequence[str]) -> NDArray[np.boo
     return suspect
 
 
-_OF_COHORT: Final = ("usual", "level", "spread", "lower", "higher")
+_OF_COHORT: Final = ("usual", "level", "spread", "lower", "higher", "rising")
 
 
 def _cohort(

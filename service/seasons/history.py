@@ -1,6 +1,6 @@
 """The looks of finished seasons, as one flat table."""
 
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass, replace
 from typing import Final
 
@@ -11,6 +11,9 @@ from service.seasons.medians import Counts, Figures
 
 HAZE: Final = "hot"
 """Measure of haze: blue - 0.5 red (after Zhang, Guindon and Cihlar 2002)."""
+UNLABELLED: Final = ""
+"""The crop of looks that carry none: compared with the parcel's own past alone."""
+Flags = NDArray[np.bool_]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -22,7 +25,7 @@ class History:
     parcels, crops, measures
         Names that the codes and columns stand for.
     parcel, crop
-        Codes into the names, shape (looks,); crop -1 = unlabelled, which no baseline uses.
+        Codes into the names, shape (looks,); crop -1 = unlabelled.
     season
         Crop year by the year it ends in, shape (looks,).
     day
@@ -32,6 +35,15 @@ class History:
         such as seconds since 1970; shape (looks,).
     values
         Means of the measures, shape (looks, measures), NaN = unknown.
+    shapes
+        Whether a look shapes baselines; where it does not, something was wrong then, shape
+        (looks,).
+    is_known
+        Whether a person said that the departure of a look was real: alarms of a replay do
+        not count there, shape (looks,).
+    without_label
+        Parcels whose looks also make the baseline that a look without a crop is compared
+        with.
     """
 
     parcels: tuple[str, ...]
@@ -43,6 +55,9 @@ class History:
     day: Counts
     pass_at: Counts
     values: Figures
+    shapes: Flags
+    is_known: Flags
+    without_label: frozenset[str] = frozenset()
 
     @classmethod
     def of_rows(
@@ -55,6 +70,9 @@ class History:
         passes: Sequence[int],
         measures: Sequence[str],
         values: Figures,
+        shapes: Sequence[bool] | Flags | None = None,
+        is_known: Sequence[bool] | Flags | None = None,
+        without_label: Collection[str] = (),
     ) -> "History":
         """Return the table of looks given by name; a crop of None is unlabelled."""
         parcel_names, parcel = _coded(parcels)
@@ -69,6 +87,9 @@ class History:
             day=np.asarray(days, dtype=np.int64),
             pass_at=np.asarray(passes, dtype=np.int64),
             values=np.asarray(values, dtype=np.float64).reshape(len(parcel), len(measures)),
+            shapes=_flags(shapes, len(parcel), default=True),
+            is_known=_flags(is_known, len(parcel), default=False),
+            without_label=frozenset(without_label),
         )
 
     @classmethod
@@ -85,28 +106,41 @@ class History:
         )
 
     def arranged(self) -> "History":
-        """Return the labelled looks by crop, season, pass and parcel, names sorted, haze added.
+        """Return the looks by crop, season, pass and parcel, names sorted, haze added.
 
-        The same looks in another order, under other codes, give the same table: sums over it
-        round alike.
+        Looks without a crop carry `UNLABELLED`, as does a second copy of all labelled looks
+        of the parcels `without_label`. The same looks in another order, under other codes,
+        give the same table: sums over it round alike.
         """
         parcel_names, parcel = _sorted_names(self.parcels, self.parcel)
         crop_names, crop = _sorted_names(self.crops, self.crop)
-        order = np.lexsort((parcel, self.pass_at, self.season, crop))
-        order = order[crop[order] >= 0]
+        row = np.arange(crop.size)
+        again = np.flatnonzero(np.isin(parcel, self._codes_without(parcel_names)) & (crop >= 0))
+        if again.size or (crop < 0).any():
+            # The empty name comes before all others.
+            crop_names = (UNLABELLED, *crop_names)
+            crop = np.concatenate([crop + 1, np.zeros(again.size, dtype=np.int64)])
+            row = np.concatenate([row, again])
+        order = np.lexsort((parcel[row], self.pass_at[row], self.season[row], crop))
+        row = row[order]
         measures, values = with_haze(self.measures, self.values)
         return replace(
             self,
             parcels=parcel_names,
             crops=crop_names,
             measures=measures,
-            parcel=parcel[order],
+            parcel=parcel[row],
             crop=crop[order],
-            season=self.season[order],
-            day=self.day[order],
-            pass_at=self.pass_at[order],
-            values=values[order],
+            season=self.season[row],
+            day=self.day[row],
+            pass_at=self.pass_at[row],
+            values=values[row],
+            shapes=self.shapes[row],
+            is_known=self.is_known[row],
         )
+
+    def _codes_without(self, names: Sequence[str]) -> list[int]:
+        return [code for code, name in enumerate(names) if name in self.without_label]
 
 
 def with_haze(measures: Sequence[str], values: Figures) -> tuple[tuple[str, ...], Figures]:
@@ -135,3 +169,7 @@ def _sorted_names(names: tuple[str, ...], codes: Counts) -> tuple[tuple[str, ...
     place[order] = np.arange(len(names))
     # Code -1 takes the last place, which stays -1.
     return tuple(names[at] for at in order), place[codes]
+
+
+def _flags(given: Sequence[bool] | Flags | None, size: int, *, default: bool) -> Flags:
+    return np.full(size, default) if given is None else np.asarray(given, dtype=bool)

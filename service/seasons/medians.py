@@ -6,13 +6,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 Figures = NDArray[np.float64]
+Rows = NDArray[np.floating]
+"""Rows of looks, in either width: half the bytes sort in half the time."""
 Counts = NDArray[np.int64]
 
 SPREAD_OF_MEDIAN: Final = 1.4826
 """Median absolute deviation → standard deviation of a normal distribution (1 / Φ⁻¹(3/4))."""
 
 
-def medians(values: Figures) -> tuple[Figures, Counts]:
+def medians(values: Rows) -> tuple[Figures, Counts]:
     """Return the median of each row and how many numbers it rests on.
 
     Parameters
@@ -29,13 +31,13 @@ def medians(values: Figures) -> tuple[Figures, Counts]:
     if values.shape[1] == 0:
         return np.full(values.shape[0], np.nan), count
     if count.min() == values.shape[1]:
-        return np.median(values, axis=1), count
+        return np.median(values, axis=1).astype(np.float64), count
     # Sorting puts NaN last, so the numbers of a row stand in front.
     return _middle(np.sort(values, axis=1), np.zeros_like(count), count), count
 
 
 def windowed_medians(
-    day: Counts, values: Figures, *, centres: Counts, reach: int
+    day: Counts, values: Rows, *, centres: Counts, reach: int
 ) -> tuple[Figures, Counts]:
     """Return medians of the looks within `reach` days of each centre.
 
@@ -87,9 +89,9 @@ def grouped_medians(starts: Counts, values: Figures) -> tuple[Figures, Counts]:
     return found, counts
 
 
-def _middle(ranked: Figures, starts: Counts, count: Counts) -> Figures:
+def _middle(ranked: Rows, starts: Counts, count: Counts) -> Figures:
     """Return the middle of `count` ascending numbers from each start on; NaN for none."""
     rows = np.arange(count.size) if ranked.shape[0] > 1 else np.zeros(count.size, dtype=np.int64)
     below = ranked[rows, starts + np.maximum(count - 1, 0) // 2]
     above = ranked[rows, starts + np.where(count > 0, count // 2, 0)]
-    return np.where(count > 0, 0.5 * (below + above), np.nan)
+    return np.where(count > 0, 0.5 * (below + above), np.nan).astype(np.float64)

@@ -3,8 +3,16 @@
 from typing import Final
 
 import numpy as np
+from numpy.typing import NDArray
 
-from service.seasons.medians import SPREAD_OF_MEDIAN, Counts, Figures, medians, windowed_medians
+from service.seasons.medians import (
+    SPREAD_OF_MEDIAN,
+    Counts,
+    Figures,
+    Rows,
+    medians,
+    windowed_medians,
+)
 from service.seasons.usual import KNOTS, Course, daily
 
 REACH_DAYS: Final = 14
@@ -13,7 +21,13 @@ PRIOR_LOOKS: Final = 15.0
 FLOOR: Final = 0.015
 
 
-def spreads(crop: Counts, day: Counts, shortfalls: Figures, *, crops: int) -> list[Course]:
+def spreads(
+    crop: Counts,
+    day: Counts,
+    shortfalls: Rows,
+    *,
+    is_pooled: NDArray[np.bool_],
+) -> list[Course]:
     """Return the spread of each crop over the season.
 
     Parameters
@@ -21,10 +35,10 @@ def spreads(crop: Counts, day: Counts, shortfalls: Figures, *, crops: int) -> li
     crop, day
         Of each past look, shape (looks,).
     shortfalls
-        Observed minus expected with the look's own season left out of its parcel's offset,
-        shape (measures, looks), NaN = unknown.
-    crops
-        How many crops there are.
+        Observed minus expected with the look's own season left out of its baseline, shape
+        (measures, looks), NaN = unknown.
+    is_pooled
+        Whether a crop counts among all crops, shape (crops,).
 
     Returns
     -------
@@ -36,13 +50,16 @@ def spreads(crop: Counts, day: Counts, shortfalls: Figures, *, crops: int) -> li
     """
     order = np.argsort(day, kind="stable")
     crop, day, size = crop[order], day[order], np.abs(shortfalls[:, order])
-    whole, _ = medians(size)
-    pooled, _ = windowed_medians(day, size, centres=KNOTS, reach=REACH_DAYS)
+    of_all = is_pooled[crop] if is_pooled.any() else np.ones(crop.size, dtype=bool)
+    whole, _ = medians(size[:, of_all])
+    pooled, _ = windowed_medians(day[of_all], size[:, of_all], centres=KNOTS, reach=REACH_DAYS)
     pooled = np.where(np.isfinite(pooled), pooled, whole)
-    return [_of_crop(day[crop == each], size[:, crop == each], pooled) for each in range(crops)]
+    return [
+        _of_crop(day[crop == each], size[:, crop == each], pooled) for each in range(is_pooled.size)
+    ]
 
 
-def _of_crop(day: Counts, size: Figures, pooled: Figures) -> Course:
+def _of_crop(day: Counts, size: Rows, pooled: Figures) -> Course:
     own, looks = windowed_medians(day, size, centres=KNOTS, reach=REACH_DAYS)
     weight = looks / (looks + PRIOR_LOOKS)
     squared = weight * np.nan_to_num(own) ** 2 + (1.0 - weight) * pooled**2

@@ -4,7 +4,7 @@ from typing import Final
 
 import numpy as np
 
-from service.seasons.medians import Counts, Figures, windowed_medians
+from service.seasons.medians import Counts, Figures, Rows, windowed_medians
 
 YEAR_DAYS: Final = 365
 DAYS: Final = YEAR_DAYS + 1
@@ -18,7 +18,7 @@ Course = Figures
 """A value for every day of season and measure, shape (DAYS, measures), NaN = unknown."""
 
 
-def usual_course(day: Counts, values: Figures) -> Course:
+def usual_course(day: Counts, values: Rows) -> Course:
     """Return the usual course of one crop.
 
     Parameters

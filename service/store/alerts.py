@@ -29,6 +29,7 @@ _COPIED: Final = (
     "low_power",
     "closed_by",
     "crop",
+    "baseline",
 )
 
 
@@ -53,10 +54,17 @@ def document_of(row: AlertRow) -> dict[str, Any]:
         # As told; judging keeps them whole.
         **{name: round(details[name], 4) for name in _FIGURES},
         **{name: round(details[name], 2) for name in _SCORES},
+        "chance": _share(details.get("chance")),
+        "p": _share(details.get("p")),
+        "diary": details.get("diary", []),
         "departures": {name: round(z, 2) + 0.0 for name, z in details["departures"].items()},
         "revision": row.revision,
         "caution": CAUTION,
     }
+
+
+def _share(value: float | None) -> float | None:
+    return None if value is None else float(f"{value:.3g}")
 
 
 def _written(instant: datetime | None) -> str | None:
@@ -107,8 +115,8 @@ def list_alerts(
         (states, AlertRow.state.in_(list(states or ()))),
         (parcel, Parcel.ref == parcel),
         (since, AlertRow.opened_at >= (since or _EARLIEST)),
-        (holdings, _held_by(holdings or ())),
-        (holding, _held_by([holding] if holding else ())),
+        (holdings, held_by(holdings or ())),
+        (holding, held_by([holding] if holding else ())),
     )
     query = query.where(*(condition for asked, condition in conditions if asked is not None))
     if after is not None:
@@ -137,7 +145,8 @@ def open_alerts(session: Session, at: datetime) -> dict[int, list[str]]:
     return found
 
 
-def _held_by(holdings: Collection[str]) -> ColumnElement[bool]:
+def held_by(holdings: Collection[str]) -> ColumnElement[bool]:
+    """Return the condition that a parcel belongs to one of some holdings."""
     return Parcel.holding_id.in_(select(Holding.id).where(Holding.ref.in_(list(holdings))))
 
 

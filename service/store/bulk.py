@@ -21,11 +21,11 @@ LatestRow = tuple[str, int, datetime, int, float | None, float]
 
 _OBSERVATION: Final = "observation (bucket, parcel_id, acquired_at, write_id, boundary_id, figures)"
 _LATEST: Final = "latest (measure, parcel_id, acquired_at, write_id, value, valid_share)"
-_COPY_HEADER: Final = b"PGCOPY\n\xff\r\n\0" + bytes(8)
-_COPY_TRAILER: Final = b"\xff\xff"
-_FLOAT4_OID: Final = 700
+COPY_HEADER: Final = b"PGCOPY\n\xff\r\n\0" + bytes(8)
+COPY_TRAILER: Final = b"\xff\xff"
+FLOAT4_OID: Final = 700
 # PostgreSQL counts binary instants from here.
-_POSTGRES_EPOCH_US: Final = microseconds(datetime(2000, 1, 1, tzinfo=UTC))
+POSTGRES_EPOCH_US: Final = microseconds(datetime(2000, 1, 1, tzinfo=UTC))
 
 
 def is_sqlite(session: Session) -> bool:
@@ -53,7 +53,7 @@ def insert_observations(
     instant = microseconds(acquired_at)
     if is_sqlite(session):
         packed = figures.astype("<f4")
-        _driver(session).executemany(
+        driver_of(session).executemany(
             f"INSERT INTO {_OBSERVATION} VALUES (?, ?, ?, ?, ?, ?)",  # noqa: S608 - constants
             zip(
                 repeat(bucket),
@@ -70,17 +70,17 @@ def insert_observations(
     for field, value in (
         ("bucket", bucket),
         ("parcel_id", parcel_ids),
-        ("acquired_at", instant - _POSTGRES_EPOCH_US),
+        ("acquired_at", instant - POSTGRES_EPOCH_US),
         ("write_id", write_id),
         ("boundary_id", boundary_ids),
     ):
         rows[field]["value"] = value
     rows["figures"]["value"] = figures
     with (
-        _driver(session).cursor() as cursor,
+        driver_of(session).cursor() as cursor,
         cursor.copy(f"COPY {_OBSERVATION} FROM STDIN (FORMAT BINARY)") as copy,
     ):
-        copy.write(_COPY_HEADER + rows.tobytes() + _COPY_TRAILER)
+        copy.write(COPY_HEADER + rows.tobytes() + COPY_TRAILER)
 
 
 def _copied_rows(shape: tuple[int, ...]) -> NDArray[Any]:
@@ -113,7 +113,7 @@ def _copied_rows(shape: tuple[int, ...]) -> NDArray[Any]:
     rows["bucket"]["length"] = 4
     for name in ("parcel_id", "acquired_at", "write_id", "boundary_id"):
         rows[name]["length"] = 8
-    rows["head"] = (20 + 8 * columns, 1, 0, _FLOAT4_OID, columns, 1)
+    rows["head"] = (20 + 8 * columns, 1, 0, FLOAT4_OID, columns, 1)
     rows["figures"]["length"] = 4
     return rows
 
@@ -194,7 +194,7 @@ def insert_latest(session: Session, rows: Iterable[LatestRow]) -> None:
         _upsert_latest_sqlite(session, ordered)
         return
     with (
-        _driver(session).cursor() as cursor,
+        driver_of(session).cursor() as cursor,
         cursor.copy(f"COPY {_LATEST} FROM STDIN (FORMAT BINARY)") as copy,
     ):
         copy.set_types(["varchar", "int8", "timestamptz", "int8", "float4", "float4"])
@@ -210,7 +210,7 @@ def _upsert_latest_sqlite(session: Session, rows: Iterable[LatestRow]) -> None:
             instants[instant] = microseconds(instant)
         return instants[instant]
 
-    _driver(session).executemany(
+    driver_of(session).executemany(
         _UPSERT_LATEST,
         (
             (measure, parcel_id, stored(acquired_at), write_id, value, share)
@@ -227,7 +227,7 @@ def _known(values: NDArray[np.float32]) -> list[float | None]:
     return found
 
 
-def _driver(session: Session) -> Any:
+def driver_of(session: Session) -> Any:
     """Return the driver's own connection, in the session's transaction."""
     driver = session.connection().connection.driver_connection
     assert driver is not None  # noqa: S101 - a session in a transaction has a connection

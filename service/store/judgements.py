@@ -1,37 +1,25 @@
 """Writing what judging found: judgements look by look, alerts and what happened to them."""
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 from datetime import datetime
 from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import delete, insert, select, update
-from sqlalchemy.orm import Session
+from sqlalchemy import ColumnElement, and_, or_, select
+from sqlalchemy.orm import InstrumentedAttribute, Session
 
 from service.alerts.alert import Alert, AlertState, ChangeKind
 from service.errors import Fault, RejectedInput
+from service.seasons.baseline import basis_of
 from service.store.alert_tables import AlertChange, AlertRow, BaselineRow, Judgement
 from service.store.batches import in_batches
+from service.store.judged_looks import JUDGED
 from service.store.tables import Parcel
 
-JUDGED: Final = ("expected", "low", "high", "shortfall", "departure", "weight")
-"""The figures of each measure in a judgement, in this order."""
+_WEIGHT: Final = JUDGED.index("weight")
 RETRACTED: Final = "retracted"
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class JudgedLook:
-    """What is thought of one look; `figures` has shape (measures, len(JUDGED))."""
-
-    parcel_id: int
-    acquired_at: datetime
-    season: int
-    crop: str | None
-    score: float | None
-    unjudged: str | None
-    figures: NDArray[np.float32]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -43,113 +31,63 @@ class Happened:
     number: int
 
 
-def put_judgements(
-    session: Session,
-    parcel_ids: Sequence[int],
-    looks: Iterable[JudgedLook],
-    baseline_ids: Mapping[int, int],
-    *,
-    since: datetime,
-    until: datetime,
-    at: datetime,
-) -> None:
-    """Make the judgements of an interval these; rows that say the same stay as they are."""
-    wanted = {(look.parcel_id, look.acquired_at): look for look in looks}
-    touched: set[int] = set()
-    for some in in_batches(parcel_ids):
-        query = select(Judgement).where(
-            Judgement.parcel_id.in_(some),
-            Judgement.acquired_at >= since,
-            Judgement.acquired_at < until,
-        )
-        for row in session.scalars(query):
-            look = wanted.get((row.parcel_id, row.acquired_at))
-            if look is not None and _is_same(row, look, baseline_ids[look.season]):
-                del wanted[row.parcel_id, row.acquired_at]
-                continue
-            touched.add(row.parcel_id)
-            session.expunge(row)
-            session.execute(
-                delete(Judgement)
-                .where(
-                    Judgement.parcel_id == row.parcel_id, Judgement.acquired_at == row.acquired_at
-                )
-                .execution_options(synchronize_session=False)
-            )
-    if wanted:
-        session.execute(
-            insert(Judgement),
-            [
-                {
-                    "parcel_id": look.parcel_id,
-                    "acquired_at": look.acquired_at,
-                    "baseline_id": baseline_ids[look.season],
-                    "crop": look.crop,
-                    "score": look.score,
-                    "unjudged": look.unjudged,
-                    "figures": look.figures.ravel(),
-                    "recorded_at": at,
-                }
-                for _, look in sorted(wanted.items())
-            ],
-        )
-    _bump(session, touched | {parcel_id for parcel_id, _ in wanted})
-
-
-def _is_same(row: Judgement, look: JudgedLook, baseline_id: int) -> bool:
-    said = (row.baseline_id, row.crop, row.score, row.unjudged)
-    return said == (baseline_id, look.crop, look.score, look.unjudged) and np.array_equal(
-        row.figures, look.figures.ravel(), equal_nan=True
-    )
-
-
-def _bump(session: Session, parcel_ids: Iterable[int]) -> None:
-    for some in in_batches(sorted(parcel_ids)):
-        session.execute(
-            update(Parcel)
-            .where(Parcel.id.in_(some))
-            .values(revision=Parcel.revision + 1)
-            .execution_options(synchronize_session=False)
-        )
-
-
-Judged = dict[str, dict[str, float | None]]
-"""By measure, the figures that `JUDGED` names, None where unknown."""
+Judged = dict[str, dict[str, float | str | None]]
+"""By measure, the figures that `JUDGED` names, None where unknown; and beside them `p`, the
+`basis` of what was expected, and why the look was not judged (`unjudged`)."""
 
 
 def judgements_of(
-    session: Session, parcel: Parcel, *, as_of: datetime | None
+    session: Session,
+    parcel: Parcel,
+    *,
+    since: datetime | None = None,
+    until: datetime | None = None,
+    as_of: datetime | None = None,
 ) -> dict[datetime, Judged]:
-    """Return what is thought of a parcel's looks, by acquisition.
+    """Return what is thought of a parcel's looks, by acquisition; `until` is not included.
 
     Raises
     ------
     RejectedInput
-        Something was judged anew since `as_of`: what was thought then is not kept.
+        One of them was judged anew since `as_of`: what was thought then is not kept.
     """
     query = (
         select(Judgement, BaselineRow.measures)
         .join(BaselineRow, BaselineRow.id == Judgement.baseline_id)
         .where(Judgement.parcel_id == parcel.id)
     )
+    if since is not None:
+        query = query.where(Judgement.acquired_at >= since)
+    if until is not None:
+        query = query.where(Judgement.acquired_at < until)
     found: dict[datetime, Judged] = {}
     for row, measures in session.execute(query):
         if as_of is not None and row.recorded_at > as_of:
             raise RejectedInput(
                 "not-kept",
                 "Looks of this parcel were judged since then, and what was expected of them at "
-                "that time is not kept. Ask without `with`, or without `as_of`.",
+                "that time is not kept. Ask for an interval that was not, without `with`, or "
+                "without `as_of`.",
                 [Fault(parameter="as_of", detail="Judgements of that time are not kept.")],
             )
         table = row.figures.reshape(len(measures), len(JUDGED))
         found[row.acquired_at] = {
-            measure: {
-                name: None if np.isnan(value) else float(str(value))
-                for name, value in zip(JUDGED, figures, strict=True)
-            }
-            for measure, figures in zip(measures, table, strict=True)
+            measure: _judged(row, figures) for measure, figures in zip(measures, table, strict=True)
         }
     return found
+
+
+def _judged(row: Judgement, figures: NDArray[np.float32]) -> dict[str, float | str | None]:
+    known: dict[str, float | str | None] = {
+        name: None if np.isnan(value) else float(str(value))
+        for name, value in zip(JUDGED, figures, strict=True)
+    }
+    is_expected = known["expected"] is not None
+    return known | {
+        "p": None if row.p is None or known["departure"] is None else float(f"{row.p:.4g}"),
+        "basis": basis_of(float(figures[_WEIGHT])).value if is_expected else None,
+        "unjudged": row.unjudged,
+    }
 
 
 def departures_at(
@@ -175,11 +113,12 @@ def put_alerts(
     seasons: Mapping[str, int],
     alerts: Mapping[str, Alert],
     parcels: Mapping[str, int],
-    folded: Sequence[int],
+    judged: Mapping[int, datetime | None],
     *,
+    rules: Collection[str],
     at: datetime,
 ) -> list[Happened]:
-    """Make the alerts of some seasons those that judging found; return what happened.
+    """Make the alerts of some seasons and rules those that judging found; return what happened.
 
     Parameters
     ----------
@@ -187,11 +126,17 @@ def put_alerts(
         Alert → the season in which it opened.
     parcels
         Parcel ref → id.
-    folded
-        The seasons that were judged: alerts of theirs that judging no longer opens are
-        retracted, and kept.
+    judged
+        Season → behind which instant it was judged (None: from its start). Alerts opened
+        there that judging no longer opens are retracted, and kept.
+    rules
+        Those that judged; the alerts of others stay as they are.
     """
-    query = select(AlertRow).where(AlertRow.axis == axis, AlertRow.season.in_(folded))
+    query = select(AlertRow).where(
+        AlertRow.axis == axis,
+        AlertRow.rule.in_(list(rules)),
+        since_judged(AlertRow.season, AlertRow.opened_at, judged),
+    )
     rows = {row.id: row for row in session.scalars(query)}
     for some in in_batches(sorted(set(alerts) - set(rows))):
         carried = session.scalars(select(AlertRow).where(AlertRow.id.in_(some)))
@@ -212,6 +157,20 @@ def put_alerts(
         if row.state != RETRACTED:
             happened.append(_retract(session, row, at=at))
     return happened
+
+
+def since_judged(
+    season: InstrumentedAttribute[int],
+    at: InstrumentedAttribute[datetime],
+    judged: Mapping[int, datetime | None],
+) -> ColumnElement[bool]:
+    """Whether something of a season lies where that was judged (`put_alerts`)."""
+    return or_(
+        *(
+            season == each if after is None else and_(season == each, at > after)
+            for each, after in judged.items()
+        )
+    )
 
 
 def _row(axis: str, season: int, parcel_id: int, alert: Alert, *, at: datetime) -> AlertRow:
@@ -256,7 +215,10 @@ def _moved(session: Session, row: AlertRow, alert: Alert, *, at: datetime) -> li
 def _retract(session: Session, row: AlertRow, *, at: datetime) -> Happened:
     before = row.state
     row.state = RETRACTED
-    reason = "Judged anew, after a scene came late or was replaced or withdrawn, it does not open."
+    reason = (
+        "Judged anew, after a scene came late or was replaced or withdrawn, or after crops, the "
+        "diary or a rule were changed, it does not open."
+    )
     return _note(session, row, RETRACTED, {"state": [before, RETRACTED], "reason": reason}, at=at)
 
 

@@ -4,25 +4,41 @@ import hashlib
 import io
 import json
 import zlib
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, date, datetime, time, timedelta
-from itertools import groupby
 from typing import Any, Final
 
 import numpy as np
-from sqlalchemy import func, or_, select
+from numpy.typing import NDArray
+from sqlalchemy import func, select
 from sqlalchemy.orm import Session
 
 from service.alerts.actions import Action, ActionKind
+from service.alerts.diary import DAYS_BEFORE
+from service.assess import Prepared, State
 from service.seasons.axis import SeasonStart, season_ending_in, season_holding
-from service.seasons.baseline import Baselines
+from service.seasons.baseline import METHOD
 from service.store.alert_tables import AlertChange, AlertRow, BaselineRow, SeasonFold
-from service.store.looks import PASS_GAP, Observed, observations, one_per_pass
-from service.store.tables import Boundary, CropSeason, Observation, Parcel, Scene, Write
+from service.store.folds import want, want_known, want_later
+from service.store.looks import PASS_GAP
+from service.store.tables import (
+    Boundary,
+    Holding,
+    Observation,
+    Parcel,
+    Scene,
+    Write,
+)
 
 SPOILED: Final = ("confirmed", "bad_data")
 """Verdicts that take an alert's looks out of the baselines; no verdict does so too."""
+REAL: Final = ("confirmed", "expected")
+"""Verdicts by which a replayed alarm is no false one."""
+
+
+Spell = tuple[int, datetime, datetime]
+"""A parcel, and first and last instant of some of its looks."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -55,17 +71,21 @@ def _midnight(day: date) -> datetime:
 
 
 def axes(session: Session, starts: tuple[str, str]) -> list[Axis]:
-    """Return the season axes that have parcels; `starts` are north and south of the equator."""
+    """Return the season axes that have parcels; `starts` are north and south of the equator.
+
+    A holding that has a start of its own is on the axis of that day.
+    """
     latitude = func.max(Boundary.south + Boundary.north)
     query = (
-        select(Parcel.id, Parcel.ref, latitude)
+        select(Parcel.id, Parcel.ref, latitude, Holding.season_start)
         .join(Boundary, Boundary.parcel_id == Parcel.id)
+        .outerjoin(Holding, Holding.id == Parcel.holding_id)
         .where(Boundary.closed_at.is_(None))
-        .group_by(Parcel.id, Parcel.ref)
+        .group_by(Parcel.id, Parcel.ref, Holding.season_start)
     )
     refs: dict[str, dict[int, str]] = {}
-    for parcel_id, ref, twice_latitude in session.execute(query):
-        start = starts[0] if twice_latitude >= 0 else starts[1]
+    for parcel_id, ref, twice_latitude, own in session.execute(query):
+        start = own or (starts[0] if twice_latitude >= 0 else starts[1])
         refs.setdefault(start, {})[parcel_id] = ref
     return [
         Axis(id=start, start=SeasonStart.parse(start), refs=of_axis)
@@ -74,18 +94,15 @@ def axes(session: Session, starts: tuple[str, str]) -> list[Axis]:
 
 
 def want_judging(session: Session, axis: Axis, season: int) -> None:
-    """Promise that a season's looks are judged, and those of later seasons that were."""
-    row = session.get(SeasonFold, (axis.id, season), with_for_update=True)
-    if row is None:
-        row = SeasonFold(axis=axis.id, season=season, wanted=0, done=0, state=None)
-        session.add(row)
-    row.wanted += 1
-    _want_from(session, axis.id, season + 1)
+    """Promise that all looks of a season are judged, and those of later seasons that were."""
+    want(session, axis.id, season)
 
 
 def want_judging_of(session: Session, alert: AlertRow) -> None:
-    """Promise that what a person did with an alert is taken up, in its season and later ones."""
-    _want_from(session, alert.axis, alert.season)
+    """Promise that what a person did with an alert is taken up, at the last look it rests on."""
+    at = alert.last_observed_at
+    season = season_holding(at.date(), SeasonStart.parse(alert.axis))[1].year
+    want_known(session, alert.axis, season, since=at)
 
 
 def want_judging_of_scenes(
@@ -96,17 +113,17 @@ def want_judging_of_scenes(
     A scene that only shapes baselines makes later seasons be judged anew, not its own.
     """
     known = axes(session, starts)
-    wanted: dict[tuple[str, int], bool] = {}
+    touched: dict[tuple[str, int], list[Scene]] = {}
     for scene in scenes:
         for axis in axes_of_scene(session, scene, known):
-            key = (axis.id, axis.season_of(scene.acquired_at))
-            wanted[key] = wanted.get(key, False) or scene.is_judged
-    by_id = {axis.id: axis for axis in known}
-    for (axis_id, season), is_judged in sorted(wanted.items()):
-        if is_judged:
-            want_judging(session, by_id[axis_id], season)
+            touched.setdefault((axis.id, axis.season_of(scene.acquired_at)), []).append(scene)
+    for (axis_id, season), some in sorted(touched.items(), key=lambda item: item[0]):
+        judged = [scene.acquired_at for scene in some if scene.is_judged]
+        if judged:
+            # Another scene of the pass may have been the look until now.
+            want(session, axis_id, season, since=min(judged) - PASS_GAP)
         else:
-            _want_from(session, axis_id, season + 1)
+            want_later(session, axis_id, season)
 
 
 def want_judging_of_crops(session: Session, days: Iterable[date], starts: tuple[str, str]) -> None:
@@ -115,14 +132,31 @@ def want_judging_of_crops(session: Session, days: Iterable[date], starts: tuple[
     if first is None:
         return
     for axis in axes(session, starts):
-        _want_from(session, axis.id, season_holding(first, axis.start)[1].year)
+        want_known(session, axis.id, season_holding(first, axis.start)[1].year)
 
 
-def _want_from(session: Session, axis_id: str, season: int) -> None:
-    query = select(SeasonFold).where(SeasonFold.axis == axis_id, SeasonFold.season >= season)
-    for row in session.scalars(query.with_for_update()):
-        row.wanted += 1
-    session.flush()
+def want_judging_of_diary(
+    session: Session, parcel: Parcel, day: date, starts: tuple[str, str]
+) -> None:
+    """Promise judging anew from a day on: what is known of a parcel has changed."""
+    since = _midnight(day - timedelta(days=DAYS_BEFORE))
+    for axis in axes(session, starts):
+        if parcel.id in axis.refs:
+            want_known(session, axis.id, axis.season_of(since), since=since)
+
+
+def want_judging_of_rules(session: Session) -> None:
+    """Promise that the newest season of each axis is judged anew, by other rules."""
+    newest = select(SeasonFold.axis, func.max(SeasonFold.season)).group_by(SeasonFold.axis)
+    for axis_id, season in session.execute(newest).all():
+        want_known(session, axis_id, season)
+
+
+def want_judging_of_everything(session: Session) -> None:
+    """Promise that all that was ever judged is judged anew."""
+    oldest = select(SeasonFold.axis, func.min(SeasonFold.season)).group_by(SeasonFold.axis)
+    for axis_id, season in session.execute(oldest).all():
+        want_known(session, axis_id, season)
 
 
 def wanted_folds(session: Session) -> Sequence[SeasonFold]:
@@ -149,156 +183,158 @@ def axes_of_scene(session: Session, scene: Scene, known: Sequence[Axis]) -> list
     return [axis for axis in known if not parcels.isdisjoint(axis.refs)]
 
 
-Look = tuple[Observed, dict[str, float]]
-"""The observation that a look rests on, and its figures by measure."""
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PastAlert:
+    """An alert as far as it matters for the baselines of later seasons.
+
+    Its looks are those of the parcel from `first` to `last`.
+    """
+
+    id: str
+    parcel_id: int
+    opened_at: datetime
+    first: datetime
+    last: datetime
+    verdict: str | None
+
+    @property
+    def is_spoiled(self) -> bool:
+        """Whether its looks must not shape a baseline."""
+        return self.verdict is None or self.verdict in SPOILED
+
+    @property
+    def is_real(self) -> bool:
+        """Whether a person said that its looks had departed indeed."""
+        return self.verdict in REAL
+
+    @property
+    def spell(self) -> Spell:
+        """Its parcel, and the first and the last of its looks."""
+        return self.parcel_id, self.first, self.last
 
 
-def looks_of(
+def past_alerts(session: Session, axis: Axis, until: datetime) -> list[PastAlert]:
+    """Return the alerts of parcels whose first departed look was before an instant."""
+    query = select(AlertRow).where(
+        AlertRow.state != "retracted", AlertRow.first_departure_at < until
+    )
+    return [
+        PastAlert(
+            id=row.id,
+            parcel_id=row.parcel_id,
+            opened_at=row.opened_at,
+            first=row.first_departure_at,
+            last=min(row.closed_at or until, until),
+            verdict=row.verdict,
+        )
+        for row in session.scalars(query.order_by(AlertRow.id))
+        if row.parcel_id in axis.refs
+    ]
+
+
+def history_key(
     session: Session,
     axis: Axis,
-    measures: Sequence[str],
-    *,
-    since: datetime | None,
-    until: datetime,
-    is_judged: bool | None = None,
-) -> Iterator[tuple[int, list[Look]]]:
-    """Yield each parcel with its looks from `since` until before `until`, one per pass.
+    season: int,
+    alerts: Iterable[PastAlert],
+    beside: Sequence[object],
+) -> str:
+    """Return a hash of what a season's baselines are fitted from.
 
-    A look's figures are those of its scene: of each measure the newest write that has it.
+    Crops are not in it: where labels change, the baselines are outdated there and then
+    (`folds.want_known`). `beside` is what else counts, plain members.
     """
-    rows = observations(
-        session,
-        sorted(axis.refs),
-        since=since - PASS_GAP if since else None,
-        until=until + PASS_GAP,
-        is_judged=is_judged,
-    )
-    for parcel_id, of_parcel in groupby(rows, key=lambda row: row.parcel_id):
-        known = list(of_parcel)
-        by_scene: dict[int, list[Observed]] = {}
-        for row in known:
-            by_scene.setdefault(row.scene_id, []).append(row)
-        looks = [
-            (look, _figures(by_scene[look.scene_id], measures))
-            for look in one_per_pass(_telling(rows) for rows in by_scene.values())
-            if (since is None or look.acquired_at >= since) and look.acquired_at < until
-        ]
-        yield parcel_id, looks
-
-
-def _telling(rows: Sequence[Observed]) -> Observed:
-    """Return the observation that tells of a parcel in a scene.
-
-    Of those whose figures count the one with the least valid share: measures may have been
-    sent with different shares, and which came last must not matter.
-    """
-    if len(rows) == 1:
-        return rows[0]
-    in_order = sorted(rows, key=lambda row: row.write_id)
-    counting = {measure: row for row in in_order for measure in row.places.measures}
-    return min(counting.values(), key=lambda row: row.of_look("valid_share"), default=in_order[-1])
-
-
-def _figures(rows: Sequence[Observed], measures: Sequence[str]) -> dict[str, float]:
-    found: dict[str, float] = {}
-    for row in sorted(rows, key=lambda row: row.write_id):
-        for measure in measures:
-            if row.places.has(measure):
-                value = row.figure(f"{measure}.mean")
-                found[measure] = np.nan if value is None else value
-    return found
-
-
-def history_key(session: Session, axis: Axis, season: int) -> str:
-    """Return a hash of all that a season's baselines are fitted from."""
     begin = axis.begins_at(season)
     writes = session.execute(
         select(func.count(), func.max(Write.id), func.count(Write.closed_at))
         .join(Scene, Scene.id == Write.scene_id)
         .where(Scene.acquired_at < begin)
     ).one()
-    first = season_ending_in(season, axis.start)[0]
-    crops = session.execute(
-        select(CropSeason.parcel_id, CropSeason.crop, CropSeason.from_on, CropSeason.until_on)
-        .where(CropSeason.from_on < first)
-        .order_by(CropSeason.parcel_id, CropSeason.from_on)
-    ).all()
-    spoiled = [(p, a.isoformat(), b.isoformat()) for p, a, b in spoiled_looks(session, begin)]
-    told = [axis.id, season, len(axis.refs), list(writes), [list(map(str, row)) for row in crops]]
-    return hashlib.sha256(json.dumps([told, spoiled]).encode()).hexdigest()
-
-
-def spoiled_looks(session: Session, until: datetime) -> list[tuple[int, datetime, datetime]]:
-    """Return (parcel, first, last instant) of looks that must not shape a baseline."""
-    query = select(AlertRow).where(
-        AlertRow.state != "retracted",
-        AlertRow.first_departure_at < until,
-        or_(AlertRow.verdict.is_(None), AlertRow.verdict.in_(SPOILED)),
-    )
-    return [
-        (row.parcel_id, row.first_departure_at, row.closed_at or until)
-        for row in session.scalars(query.order_by(AlertRow.id))
+    spells = [
+        (each.parcel_id, each.first.isoformat(), each.last.isoformat(), each.is_spoiled)
+        for each in alerts
+        if each.is_spoiled or each.is_real
     ]
+    told = [METHOD, *beside, axis.id, season, list(writes), sorted(spells)]
+    return hashlib.sha256(json.dumps(told).encode()).hexdigest()
 
 
-def find_baselines(session: Session, axis_id: str, season: int) -> BaselineRow | None:
-    """Return the baselines in use for a season."""
-    query = select(BaselineRow).where(BaselineRow.axis == axis_id, BaselineRow.season == season)
-    return session.scalar(query.order_by(BaselineRow.id.desc()).limit(1))
+def find_baselines(session: Session, axis_id: str, season: int, history: str) -> int | None:
+    """Return the number of the baselines in use for a season, if fitted from a history."""
+    query = select(BaselineRow.id, BaselineRow.history).where(
+        BaselineRow.axis == axis_id, BaselineRow.season == season
+    )
+    row = session.execute(query.order_by(BaselineRow.id.desc()).limit(1)).first()
+    return row.id if row is not None and row.history == history else None
 
 
-def find_newest_baselines(session: Session, axis_id: str) -> BaselineRow | None:
-    """Return the baselines in use for the newest season of an axis that is judged."""
+def find_newest_baselines(
+    session: Session, axis_id: str, *, as_of: datetime | None = None
+) -> BaselineRow | None:
+    """Return the baselines in use, now or then, for the newest season that was judged."""
     query = select(BaselineRow).where(BaselineRow.axis == axis_id)
+    if as_of is not None:
+        query = query.where(BaselineRow.fitted_at <= as_of)
     newest = query.order_by(BaselineRow.season.desc(), BaselineRow.id.desc())
     return session.scalar(newest.limit(1))
 
 
-def packed(baselines: Baselines) -> bytes:
-    """Return baselines as the bytes of an npz file."""
+def packed(prepared: Prepared) -> bytes:
+    """Return baselines and what replaying the past says as the bytes of a compressed npz file."""
+    return _npz(prepared.to_arrays())
+
+
+def unpacked(arrays: bytes) -> Prepared:
+    """Return what `packed` wrote."""
+    return Prepared.from_arrays(_arrays(arrays))
+
+
+def squeezed(states: Mapping[str, State]) -> bytes:
+    """Return the states of folds, by rule, as the bytes of a compressed npz file."""
+    named = {"rules": np.array(list(states), dtype=np.str_)}
+    for at, state in enumerate(states.values()):
+        named |= {f"{at}:{name}": array for name, array in state.to_arrays().items()}
+    return _npz(named)
+
+
+def unsqueezed(states: bytes) -> dict[str, State]:
+    """Return the states by rule that `squeezed` wrote."""
+    arrays = _arrays(states)
+    found: dict[int, dict[str, NDArray[Any]]] = {}
+    for name, array in arrays.items():
+        at, _, member = name.partition(":")
+        if member:
+            found.setdefault(int(at), {})[member] = array
+    rules = arrays["rules"].tolist()
+    return {rule: State.from_arrays(found[at]) for at, rule in enumerate(rules)}
+
+
+def _npz(arrays: Mapping[str, NDArray[Any]]) -> bytes:
     file = io.BytesIO()
-    np.savez_compressed(file, **baselines.to_arrays())  # type: ignore[arg-type]
-    return file.getvalue()
+    np.savez(file, **arrays)  # type: ignore[arg-type]
+    # What little more a higher level saves would take several times as long.
+    return zlib.compress(file.getbuffer(), 1)
 
 
-def unpacked(arrays: bytes) -> Baselines:
-    """Return the baselines that `packed` wrote."""
-    with np.load(io.BytesIO(arrays), allow_pickle=False) as file:
-        return Baselines.from_arrays(dict(file))
+def _arrays(npz: bytes) -> dict[str, NDArray[Any]]:
+    with np.load(io.BytesIO(zlib.decompress(npz)), allow_pickle=False) as file:
+        return dict(file)
 
 
-def squeezed(state: Mapping[str, Any]) -> bytes:
-    """Return a fold's state as compressed JSON."""
-    return zlib.compress(json.dumps(state, separators=(",", ":")).encode(), 1)
+def actions_in(
+    session: Session, axis: Axis, season: int, *, since: datetime | None = None
+) -> list[Action]:
+    """Return what people did with alerts in a season, in the order in which they did it.
 
-
-def unsqueezed(state: bytes) -> dict[str, Any]:
-    """Return the state that `squeezed` wrote."""
-    members: dict[str, Any] = json.loads(zlib.decompress(state))
-    return members
-
-
-def state_before(session: Session, axis: Axis, season: int) -> bytes | None:
-    """Return what the last judged season before one remembers at its end."""
-    query = (
-        select(SeasonFold.state)
-        .where(
-            SeasonFold.axis == axis.id, SeasonFold.season < season, SeasonFold.state.is_not(None)
-        )
-        .order_by(SeasonFold.season.desc())
-    )
-    return session.scalar(query.limit(1))
-
-
-def actions_in(session: Session, axis: Axis, season: int) -> list[Action]:
-    """Return what people did with alerts in a season, in the order in which they did it."""
+    With `since` only at looks from then on.
+    """
     query = (
         select(AlertChange, AlertRow)
         .join(AlertRow, AlertRow.id == AlertChange.alert_id)
         .where(
             AlertRow.axis == axis.id,
             AlertChange.who.is_not(None),
-            AlertChange.look_at >= axis.begins_at(season),
+            AlertChange.look_at >= (since or axis.begins_at(season)),
             AlertChange.look_at < axis.ends_at(season),
         )
         .order_by(AlertChange.recorded_at, AlertChange.alert_id, AlertChange.number)
@@ -313,11 +349,3 @@ def actions_in(session: Session, axis: Axis, season: int) -> list[Action]:
         )
         for change, row in session.execute(query)
     ]
-
-
-def crops_on(
-    seasons: Mapping[int, Sequence[CropSeason]], parcel_id: int, days: Iterable[date]
-) -> list[str | None]:
-    """Return what grew on a parcel on some days."""
-    own = seasons.get(parcel_id, ())
-    return [next((s.crop for s in own if s.from_on <= d <= s.until_on), None) for d in days]

@@ -187,7 +187,7 @@ def _buckets(session: Session, since: datetime | None, until: datetime | None) -
 def _unpacked(session: Session, query: Rows, layouts: dict[int, Places]) -> Iterator[Observed]:
     for row in session.execute(query.execution_options(yield_per=2_000)):
         if row.layout_id not in layouts:
-            layouts[row.layout_id] = _places(session.get_one(Layout, row.layout_id))
+            layouts[row.layout_id] = places_of(session.get_one(Layout, row.layout_id))
         yield Observed(
             parcel_id=row.parcel_id,
             acquired_at=row.acquired_at,
@@ -202,7 +202,8 @@ def _unpacked(session: Session, query: Rows, layouts: dict[int, Places]) -> Iter
         )
 
 
-def _places(layout: Layout) -> Places:
+def places_of(layout: Layout) -> Places:
+    """Return where each figure stands in observations of a layout."""
     return Places(
         by_column={column: place for place, column in enumerate(layout.columns)},
         rule=layout.recipe["rule"],
@@ -297,7 +298,7 @@ def _oldest(session: Session, measures: Sequence[str] | None) -> dict[str, datet
     )
     oldest: dict[str, datetime] = {}
     for layout_id, since in session.execute(query):
-        for measure in _places(session.get_one(Layout, layout_id)).measures:
+        for measure in places_of(session.get_one(Layout, layout_id)).measures:
             oldest[measure] = min(since, oldest.get(measure, since))
     return oldest if measures is None else {m: oldest[m] for m in measures if m in oldest}
 

@@ -5,6 +5,7 @@ the same.
 """
 
 from collections.abc import Callable, Collection, Mapping
+from contextlib import nullcontext
 from dataclasses import dataclass, field
 from datetime import datetime
 from typing import Any, Final
@@ -13,6 +14,7 @@ import shapely
 from sqlalchemy.orm import Session
 
 from service.errors import MAX_ERRORS, Fault, Faults, RejectedInput, pointer_of
+from service.store.holdings import moving_axes
 from service.store.judging import want_judging_of_crops
 from service.store.overlaps import overlap_warnings
 from service.store.parcels import (
@@ -162,7 +164,11 @@ def keep_parcels(
     _check_holdings(session, batch, holdings)
     batch.faults.refuse(unless_lenient=is_lenient)
     kept = batch.kept()
-    result = upsert_parcels(session, list(kept.values()), at=at)
+    changes = list(kept.values())
+    # Another holding may have another start of its crop year.
+    is_moving = any("holding" in change.given for change in changes)
+    with moving_axes(session, season_starts) if is_moving else nullcontext():
+        result = upsert_parcels(session, changes, at=at)
     _put_crops(session, kept.values(), result, season_starts, at=at)
     scenes = remeasure(session, result.redrawn, at=at)
     _warn_of_revived(batch, kept, result)

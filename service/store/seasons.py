@@ -24,17 +24,21 @@ class SeasonSent:
     harvested_on: date | None = None
 
 
-def season_start(latitude: float, starts: tuple[str, str]) -> SeasonStart:
-    """Return when the crop year begins at a latitude; `starts` are those north and south."""
+def season_start(parcel: Parcel, latitude: float, starts: tuple[str, str]) -> SeasonStart:
+    """Return when the crop year of a parcel begins: its holding's start, or the hemisphere's.
+
+    `starts` are those north and south of the equator.
+    """
     north, south = starts
-    return SeasonStart.parse(north if latitude >= 0 else south)
+    own = parcel.holding.season_start if parcel.holding else None
+    return SeasonStart.parse(own or (north if latitude >= 0 else south))
 
 
 def season_of_day(
     parcel: Parcel, crop: str, day: date, latitude: float, starts: tuple[str, str]
 ) -> SeasonSent:
     """Return the crop year that holds a day, as a season of a crop."""
-    first, last = season_holding(day, season_start(latitude, starts))
+    first, last = season_holding(day, season_start(parcel, latitude, starts))
     return SeasonSent(parcel=parcel, crop=crop, from_on=first, until_on=last)
 
 

@@ -53,12 +53,13 @@ class ApiKey(Base):
 
 
 class Holding(Base):
-    """Who parcels belong to."""
+    """Who parcels belong to; `season_start` (MM-DD) null is that of the hemisphere."""
 
     __tablename__ = "holding"
 
     id: Mapped[int] = mapped_column(RowId, primary_key=True)
     ref: Mapped[str] = mapped_column(String(100), unique=True)
+    season_start: Mapped[str | None] = mapped_column(String(5))
 
 
 class Parcel(Base):
@@ -134,6 +135,25 @@ class CropSeason(Base):
     until_on: Mapped[date]
     sown_on: Mapped[date | None]
     harvested_on: Mapped[date | None]
+
+
+class CropGroup(Base):
+    """The group in which a crop is compared while too few parcels have it."""
+
+    __tablename__ = "crop_group"
+
+    crop: Mapped[str] = mapped_column(String(100), primary_key=True)
+    group: Mapped[str] = mapped_column("group_name", String(100))
+
+
+class UnseenSpell(Base):
+    """The last spell without a look that was told of a parcel, by when it began."""
+
+    __tablename__ = "unseen_spell"
+
+    parcel_id: Mapped[int] = mapped_column(ForeignKey("parcel.id"), primary_key=True)
+    since: Mapped[datetime]
+    told_at: Mapped[datetime]
 
 
 class GridRow(Base):

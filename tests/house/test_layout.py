@@ -16,6 +16,7 @@ TOP_LEVEL = {
     "migrations",
     "tests",
     "sample_tiles",
+    "benchmarks",
     "docker",
 }
 LINES_PER_MODULE = 400
@@ -25,7 +26,7 @@ PURE_ROOMS = (
     "seasons",
     "alerts",
     "observe.py",
-    "assess.py",
+    "assess",
     "exports.py",
 )
 

@@ -1,6 +1,5 @@
 """Properties of judging: order, repetition, missing measures, lasting offsets."""
 
-import json
 from dataclasses import replace
 from functools import cache
 
@@ -8,12 +7,14 @@ import numpy as np
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from service.alerts.rules import RULES
-from service.assess import State, Step, fold, judge
-from service.seasons.baseline import Baselines, fit_baselines
+from service.alerts.rules import RULES, Rule
+from service.assess import Beside, State, Step, fold, judge
+from service.seasons.baseline import Baselines
+from service.seasons.fitting import fit_baselines
 from service.seasons.history import History
-from service.seasons.judgement import OnePass
+from service.seasons.judgement import Judgements, OnePass
 from service.seasons.offsets import SHRINKAGE
+from tests.scored_looks import is_same
 from tests.simulated_seasons import MEASURES, Simulated, simulate
 
 RULE = RULES["default"]
@@ -28,6 +29,12 @@ def season() -> tuple[Simulated, Baselines]:
 
 def folded(passes: list[OnePass], baselines: Baselines, state: State | None = None) -> list[Step]:
     return list(fold(state or State.start(RULE), passes, baselines=baselines, rule=RULE))
+
+
+def judged(one: OnePass, baselines: Baselines, rule: Rule) -> Judgements:
+    found = judge(State.start(rule), one, baselines, Beside.of(rule)).judgements
+    assert found is not None
+    return found
 
 
 def in_order(one: OnePass, order: np.ndarray) -> OnePass:
@@ -51,7 +58,7 @@ def test_neither_the_order_of_passes_nor_of_parcels_matters(seed: int) -> None:
     mixed = [in_order(one, rng.permutation(len(one.parcels))) for one in simulated.passes]
     rng.shuffle(mixed)
     expected, found = folded(simulated.passes, baselines), folded(mixed, baselines)
-    assert found[-1].state.to_dict() == expected[-1].state.to_dict()
+    assert is_same(found[-1].state.to_arrays(), expected[-1].state.to_arrays())
     assert [step.changes for step in found] == [step.changes for step in expected]
 
 
@@ -61,11 +68,11 @@ def test_going_on_from_a_kept_state_is_going_on(share: float) -> None:
     simulated, baselines = season()
     cut = int(share * (len(simulated.passes) - 1)) + 1
     first = folded(simulated.passes[:cut], baselines)
-    kept = State.from_dict(json.loads(json.dumps(first[-1].state.to_dict())), RULE)
+    kept = State.from_arrays(first[-1].state.to_arrays())
     rest = folded(simulated.passes[cut:], baselines, kept)
     whole = folded(simulated.passes, baselines)
     assert [step.changes for step in [*first, *rest]] == [step.changes for step in whole]
-    assert [*first, *rest][-1].state.to_dict() == whole[-1].state.to_dict()
+    assert is_same([*first, *rest][-1].state.to_arrays(), whole[-1].state.to_arrays())
 
 
 @settings(max_examples=20)
@@ -82,8 +89,8 @@ def test_an_unknown_measure_is_as_if_it_were_not_watched(at: int, unknown: set[s
     fewer = replace(
         RULE, measures=tuple(each for each in RULE.measures if each.index not in unknown)
     )
-    _, without, _ = judge(State.start(RULE), replace(one, values=values), baselines, RULE)
-    _, narrow, _ = judge(State.start(fewer), one, baselines, fewer)
+    without = judged(replace(one, values=values), baselines, RULE)
+    narrow = judged(one, baselines, fewer)
     np.testing.assert_array_equal(without.score, narrow.score)
     assert set(without.missing) == unknown
 
@@ -134,7 +141,7 @@ def test_a_lasting_offset_of_a_parcel_changes_its_departure_by_the_shrinkage_alo
             valid_share=np.ones(11),
             water=np.zeros(11),
         )
-        judgements = judge(State.start(RULE), one, baselines, RULE)[1]
+        judgements = judged(one, baselines, RULE)
         departures.append(judgements.shortfall[10, 0])
     left = step * SHRINKAGE / (found + SHRINKAGE)
     # Residuals are kept in float32.

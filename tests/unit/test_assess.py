@@ -1,6 +1,5 @@
 """Judging whole seasons: events found, few others accused, and what is refused."""
 
-import json
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import replace
@@ -12,10 +11,12 @@ import pytest
 from service.alerts.actions import Action, ActionKind
 from service.alerts.alert import Alert, ChangeKind
 from service.alerts.rules import RULES
-from service.assess import BASELINE_MEASURES, State, Step, alerts_after, fold, judge
-from service.seasons.baseline import Baselines, fit_baselines
+from service.assess import BASELINE_MEASURES, Beside, State, Step, alerts_after, fold, judge
+from service.seasons.baseline import Baselines
+from service.seasons.fitting import fit_baselines
 from service.seasons.history import History
 from service.seasons.judgement import Judgements, OnePass, Unjudged
+from tests.scored_looks import is_same
 from tests.simulated_seasons import MEASURES, Simulated, simulate
 
 RULE = RULES["default"]
@@ -39,7 +40,9 @@ def folded(
 
 
 def judgements_of(one: OnePass, baselines: Baselines) -> Judgements:
-    return judge(State.start(RULE), one, baselines, RULE)[1]
+    found = judge(State.start(RULE), one, baselines, Beside.of(RULE)).judgements
+    assert found is not None
+    return found
 
 
 def season_start(simulated: Simulated) -> datetime:
@@ -96,16 +99,9 @@ def test_a_state_kept_midway_goes_on_to_the_same_end(
 ) -> None:
     whole = folded(simulated.passes, baselines)
     half = len(simulated.passes) * 3 // 4
-    text = json.dumps(whole[half - 1].state.to_dict(), allow_nan=False)
-    rest = list(
-        fold(
-            State.from_dict(json.loads(text), RULE),
-            simulated.passes[half:],
-            baselines=baselines,
-            rule=RULE,
-        )
-    )
-    assert rest[-1].state.to_dict() == whole[-1].state.to_dict()
+    kept = State.from_arrays(whole[half - 1].state.to_arrays())
+    rest = list(fold(kept, simulated.passes[half:], baselines=baselines, rule=RULE))
+    assert is_same(rest[-1].state.to_arrays(), whole[-1].state.to_arrays())
     assert [step.changes for step in rest] == [step.changes for step in whole[half:]]
 
 
@@ -305,8 +301,9 @@ def some_of(one: OnePass, rows: Sequence[int]) -> OnePass:
 
 def test_a_pass_without_looks_changes_nothing(simulated: Simulated, baselines: Baselines) -> None:
     empty = some_of(simulated.passes[30], np.zeros(0, dtype=np.int64))
-    state, judgements, changes = judge(State.start(RULE), empty, baselines, RULE)
-    assert (judgements.score.size, changes, state.watch.places) == (0, [], {})
+    step = judge(State.start(RULE), empty, baselines, Beside.of(RULE))
+    assert step.judgements is not None
+    assert (step.judgements.score.size, step.changes, step.state.watch.places) == (0, [], {})
 
 
 def test_a_state_is_not_continued_with_other_baselines(
@@ -315,6 +312,7 @@ def test_a_state_is_not_continued_with_other_baselines(
     state = folded(simulated.passes[:3], baselines)[-1].state
     other = fit_baselines(History.empty(MEASURES))
     with pytest.raises(ValueError, match="from its start"):
-        judge(state, simulated.passes[3], other, RULE)
+        judge(state, simulated.passes[3], other, Beside.of(RULE))
     next_season = replace(simulated.passes[3], season=simulated.passes[3].season + 1)
-    assert judge(state, next_season, other, RULE)[0].baseline == other.version
+    after = judge(state, next_season, other, Beside.of(RULE)).state
+    assert after.baseline == other.version

@@ -1,11 +1,14 @@
 """The identity of an alert, and how it is kept."""
 
 import hashlib
+import io
 import json
+
+import numpy as np
 
 from service.alerts.alert import CAUTION, Alert, alert_id
 from service.alerts.watch import Watch
-from tests.scored_looks import RULE, on, watched
+from tests.scored_looks import is_same, on, watched
 
 
 def test_an_alert_is_known_by_parcel_rule_and_opening_pass() -> None:
@@ -34,11 +37,16 @@ def test_an_alert_is_kept_in_json_and_read_again() -> None:
         assert Alert.from_dict(json.loads(text)) == alert
 
 
-def test_the_memory_is_kept_in_json_and_read_again() -> None:
+def test_the_memory_is_kept_in_arrays_and_read_again() -> None:
     for scores in ([], [4.0], [4.0, 4.0], [4.0, 4.0, 1.0, 1.0, 2.0]):
         watch, _ = watched(scores)
-        text = json.dumps(watch.to_dict(), allow_nan=False)
-        assert Watch.from_dict(json.loads(text), RULE).to_dict() == watch.to_dict()
+        file = io.BytesIO()
+        np.savez(file, **watch.to_arrays())
+        file.seek(0)
+        with np.load(file, allow_pickle=False) as kept:
+            read = Watch.from_arrays(dict(kept))
+        assert is_same(read.to_arrays(), watch.to_arrays())
+        assert (read.open, read.closed) == (watch.open, watch.closed)
 
 
 def test_the_caution_sends_people_to_the_field() -> None:

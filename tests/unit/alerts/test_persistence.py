@@ -5,9 +5,10 @@ from dataclasses import replace
 import pytest
 
 from service.alerts.alert import AlertState, ChangeKind
+from service.alerts.explained import Known
 from service.alerts.persistence import watch_pass
 from service.alerts.watch import Watch
-from tests.scored_looks import RULE, on, scored, watched
+from tests.scored_looks import RULE, is_same, on, scored, watched
 
 
 def kinds(scores: list[float], *, is_weak: bool = False) -> list[str]:
@@ -102,14 +103,16 @@ def test_after_a_long_gap_nobody_knows() -> None:
 
 DRYING = {"ndvi": -0.05, "ndmi": -0.2, "swir16": 0.08}
 FLOODED = {"ndvi": -0.3, "ndmi": 0.2, "ndwi": 0.4, "nir": -0.2, "swir16": -0.18}
-UNCLEAR = {"ndvi": -0.1}
+UNCLEAR = {"ndvi": -0.05}
 
 
 def labels(*shortfalls: dict[str, float]) -> list[str]:
     watch, found = Watch.nothing(RULE), []
     for at, short in enumerate(shortfalls):
-        watch, changes = watch_pass(watch, scored(5 * at, {"A": 4.0}, shortfalls=short), RULE)
-        found += [change.alert.cause.kind for change in changes]
+        looks = scored(5 * at, {"A": 4.0}, shortfalls=short)
+        after = watch_pass(watch, looks, RULE, Known())
+        watch = after.watch
+        found += [change.alert.cause.kind for change in after.changes]
     return found
 
 
@@ -123,6 +126,6 @@ def test_a_flood_keeps_its_label() -> None:
 
 def test_judging_a_pass_leaves_the_memory_before_it_alone() -> None:
     watch, _ = watched([4.0, 4.0])
-    before = watch.to_dict()
-    watch_pass(watch, scored(10, {"A": 0.0, "B": 12.0}), RULE)
-    assert watch.to_dict() == before
+    before = watch.to_arrays()
+    watch_pass(watch, scored(10, {"A": 0.0, "B": 12.0}), RULE, Known())
+    assert is_same(watch.to_arrays(), before)

@@ -5,7 +5,8 @@ import io
 import numpy as np
 import pytest
 
-from service.seasons.baseline import BAND, Baselines, Basis, expected_at, fit_baselines
+from service.seasons.baseline import BAND, Baselines, Basis, expected_at
+from service.seasons.fitting import fit_baselines
 from service.seasons.history import HAZE, History, with_haze
 from tests.simulated_seasons import simulate
 
@@ -70,7 +71,7 @@ def test_an_unknown_crop_or_measure_has_no_expected_value() -> None:
         assert expected.basis == (Basis.COHORT,) * 2
 
 
-def test_unlabelled_looks_shape_no_baseline() -> None:
+def test_unlabelled_looks_shape_no_baseline_of_a_crop() -> None:
     history = flat_history(0.0)
     looks = history.parcel.size
     mixed = History.of_rows(
@@ -82,7 +83,15 @@ def test_unlabelled_looks_shape_no_baseline() -> None:
         measures=["ndvi"],
         values=np.concatenate([history.values, history.values + 0.3]),
     )
-    assert fit_baselines(mixed).version == fit_baselines(history).version
+    found, without = fit_baselines(mixed), fit_baselines(history)
+    for name in ("usual", "spread"):
+        np.testing.assert_array_equal(
+            getattr(found, name)["barley"], getattr(without, name)["barley"]
+        )
+    codes = [each.own.codes(["A"], ["barley"]) for each in (found, without)]
+    np.testing.assert_array_equal(
+        found.own.offsets_on(180, codes[0])[0], without.own.offsets_on(180, codes[1])[0]
+    )
 
 
 def test_haze_is_blue_less_half_of_red() -> None:

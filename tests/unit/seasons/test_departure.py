@@ -8,6 +8,7 @@ import pytest
 from service.seasons.baseline import Baselines
 from service.seasons.departure import Departures, departures_in, scores, suspect_looks
 from service.seasons.offsets import OwnLooks
+from service.seasons.ranks import Ranks
 from service.seasons.usual import DAYS
 
 MEASURES = ("ndvi", "ndwi")
@@ -28,6 +29,7 @@ def baselines(course: Mapping[str, np.ndarray], spread: float = 0.05) -> Baselin
         spread={crop: np.full((DAYS, 2), spread) for crop in course},
         seasons=dict.fromkeys(course, (2023,)),
         own=own,
+        ranks=Ranks(by_crop={}),
         version="v1",
     )
 

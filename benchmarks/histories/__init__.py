@@ -1,0 +1,1 @@
+"""Invented multi-year histories of parcels: the one place that makes them, `making.make`."""
