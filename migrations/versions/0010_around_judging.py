@@ -1,7 +1,7 @@
 """Around judging: season starts, crop groups, spells without a look, notices, diary, rules.
 
 Revision ID: 0010
-Revises: 0002
+Revises: 0004
 """
 
 import sqlalchemy as sa
