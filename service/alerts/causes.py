@@ -87,10 +87,13 @@ def _fits_haze(evidence: Evidence) -> bool:
 
 
 def _fits_flood(evidence: Evidence) -> bool:
-    if not (evidence.short("ndwi") > 0.06 and evidence.short("swir16") < -0.03):
+    wetter, dryness = evidence.short("ndwi"), evidence.short("swir16")
+    # What is burnt lowers NBR; water does not.
+    if not (wetter > 0.06 and dryness < -0.03) or evidence.short("nbr") < -0.15:
         return False
-    moisture = evidence.short("ndmi")
-    return moisture > 0.03 or (evidence.short("nir") < -0.04 and moisture > -0.06)
+    moisture, is_dark = evidence.short("ndmi"), evidence.short("nir") < -0.04
+    is_mixed = wetter > 0.2 and evidence.short("nir") < -0.12 and moisture > -0.14
+    return moisture > 0.03 or (is_dark and moisture > -0.06) or is_mixed
 
 
 def _fits_shadow(evidence: Evidence) -> bool:
@@ -104,14 +107,14 @@ def _fits_shadow(evidence: Evidence) -> bool:
 
 
 def _fits_burn(evidence: Evidence) -> bool:
-    burn = evidence.short("nbr")
-    return (
-        burn < -0.10
-        and evidence.short("nir") < -0.025
-        and evidence.short("swir16") < 0.012
-        and burn < 1.25 * min(evidence.short("ndvi"), 0.0)
-        and evidence.may_be_sudden
-    )
+    burn, greenness = evidence.short("nbr"), evidence.short("ndvi")
+    if not (burn < -0.10 and evidence.short("nir") < -0.025 and evidence.may_be_sudden):
+        return False
+    # Char takes the difference between the two short-wave bands away; bare soil is bright in
+    # both, and a thinner canopy moves both alike.
+    contrast = evidence.short("swir22") - evidence.short("swir16")
+    is_char = evidence.short("swir16") < 0.035 and not contrast <= 0.05
+    return is_char and (evidence.seen("nbr") < -0.05 or burn < 1.25 * min(greenness, 0.0))
 
 
 def _fits_late_growth(evidence: Evidence) -> bool:
@@ -125,37 +128,46 @@ def _fits_late_growth(evidence: Evidence) -> bool:
 
 
 def _fits_removal(evidence: Evidence) -> bool:
-    return (
-        evidence.short("ndvi") < -0.25 and evidence.seen("ndvi") < 0.42 and evidence.may_be_sudden
-    )
+    fall, left = evidence.short("ndvi"), evidence.seen("ndvi")
+    is_gone = (fall < -0.25 and left < 0.42) or (fall < -0.38 and left < 0.6)
+    return is_gone and evidence.may_be_sudden
 
 
 def _fits_moisture_stress(evidence: Evidence) -> bool:
     greenness, moisture = evidence.short("ndvi"), evidence.short("ndmi")
-    dryness = evidence.short("swir16")
+    dryness, light = evidence.short("swir16"), evidence.short("nir")
     return (
         moisture < -0.05
         and dryness > 0.015
         and dryness > 0.17 * abs(greenness)
         and moisture < 0.7 * greenness
         and evidence.seen("ndvi") > 0.3
+        # Dry leaves still scatter; leaves that are gone do not.
+        and not light < -0.9 * dryness - 0.015
     )
 
 
+def _lost_cover(evidence: Evidence) -> bool:
+    # Under a dense canopy NDVI hardly falls while near-infrared does.
+    is_thinner = evidence.short("nir") < -0.03 and evidence.short("ndmi") < -0.02
+    return evidence.short("ndvi") < -0.04 or is_thinner
+
+
 def _is_unclear(evidence: Evidence) -> bool:
-    return evidence.suddenness is None and evidence.short("ndvi") > -0.10
+    return (
+        evidence.suddenness is None
+        and evidence.short("ndvi") > -0.10
+        and not evidence.short("nir") < -0.03
+    )
 
 
 def _fits_partial_loss(evidence: Evidence) -> bool:
     return (
-        evidence.short("ndvi") < -0.04
+        _lost_cover(evidence)
         and evidence.suddenness is not None
-        and evidence.suddenness > 0.6
+        and evidence.suddenness > 0.8
+        and evidence.growth < 1.3
     )
-
-
-def _fits_decline(evidence: Evidence) -> bool:
-    return evidence.short("ndvi") < -0.04
 
 
 CAUSES: Final = (
@@ -188,7 +200,7 @@ CAUSES: Final = (
         kind="burn",
         fits=_fits_burn,
         because=because_burn,
-        source="Key and Benson 2006, FIREMON, RMRS-GTR-164",
+        source="Key and Benson 2006, FIREMON, RMRS-GTR-164; Trigg and Flasse 2001",
         keeps_label=True,
     ),
     CauseEntry(
@@ -223,7 +235,7 @@ CAUSES: Final = (
     ),
     CauseEntry(
         kind="decline",
-        fits=_fits_decline,
+        fits=_lost_cover,
         because=because_decline,
         source="cover lost little by little, common practice",
     ),

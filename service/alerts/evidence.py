@@ -28,6 +28,9 @@ class Evidence:
         that is unknown.
     rising
         By how much the expected NDVI rose over the past 20 days.
+    growth
+        How many times larger the leading shortfall is at the last departed look than at the
+        first: what comes at once stays as it is.
     best
         Highest NDVI that the parcel had in the past 25 days, before the last look.
     """
@@ -39,6 +42,7 @@ class Evidence:
     suddenness: float | None = None
     rising: float | None = None
     best: float | None = None
+    growth: float = 1.0
 
     def short(self, measure: str) -> float:
         """Return the mean shortfall of a measure, NaN where unknown: no limit holds then."""
@@ -77,7 +81,14 @@ def evidence_of(looks: Sequence[DepartedLook], suddenness: float | None) -> Evid
         suddenness=suddenness,
         rising=last[-1].rising,
         best=last[-1].best,
+        growth=_growth(looks),
     )
+
+
+def _growth(looks: Sequence[DepartedLook]) -> float:
+    index = max(looks, key=lambda look: look.score).index
+    first, last = looks[0].shortfall.get(index), looks[-1].shortfall.get(index)
+    return 1.0 if not first or last is None else last / first
 
 
 def _means(figures: Sequence[Mapping[str, float]]) -> dict[str, float]:

@@ -1,7 +1,7 @@
 """A look that departed, with the figures that an alert and its cause are made of."""
 
 from collections.abc import Mapping
-from dataclasses import asdict, dataclass
+from dataclasses import dataclass, fields
 from typing import Any
 
 
@@ -57,7 +57,7 @@ class DepartedLook:
 
     def as_dict(self) -> dict[str, Any]:
         """Return plain members, fit for JSON."""
-        return asdict(self)
+        return {field.name: getattr(self, field.name) for field in fields(self)}
 
     @classmethod
     def from_dict(cls, members: Mapping[str, Any]) -> "DepartedLook":

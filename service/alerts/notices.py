@@ -10,11 +10,15 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, fields, replace
 from datetime import datetime
 from enum import StrEnum
+from math import isnan
 from statistics import median
 from typing import Any, Final
 
+from service.alerts.instants import DAY, microseconds
+
 KIND: Final = "dry_spell"
 MEASURE: Final = "ndmi"
+DRYNESS: Final = "swir16"
 LOOKS_OF_CROP: Final = 8
 GREEN: Final = 0.4
 """A crop that is expected to have less cover than this tells of soil, not of plants."""
@@ -24,6 +28,12 @@ OPEN_BELOW: Final = -0.045
 CLOSE_ABOVE: Final = 0.5 * OPEN_BELOW
 PASSES_NEEDED: Final = 3
 PASSES_WINDOW: Final = 4
+DAYS_NEEDED: Final = 8
+"""The passes below the limit span so many days: what passes sooner is weather."""
+RIPENING: Final = -0.1
+"""A crop whose expected NDVI fell by this over 20 days is ripening."""
+NDMI_OF_DRYNESS: Final = -2.5
+"""Change of NDMI for one of 1.6 µm alone: -2 nir / (nir + swir16)² at 0.4 and 0.17."""
 EXPLAINED_CAUSES: Final = frozenset({"moisture_stress"})
 """What a parcel's alert may look like to be explained by a notice."""
 EXPLAINED_BELOW: Final = 2.0
@@ -34,20 +44,36 @@ EXPLAINED_BELOW: Final = 2.0
 class CropShift:
     """One crop in one pass: how far it is off its usual course, NaN = unknown.
 
-    `looks` counts its parcels, `shift` is that of NDMI, `haze` that of blue - 0.5 red;
-    `green` is the NDVI that its course expects on the day.
+    `looks` counts its parcels, `moisture` is the shift of NDMI, `dryness` that of 1.6 µm,
+    `haze` that of blue - 0.5 red; `green` is the NDVI that its course expects on the day, and
+    `rising` by how much that rose over the past 20 days.
     """
 
     crop: str
     looks: int
-    shift: float
+    moisture: float
+    dryness: float
     green: float
+    rising: float
     haze: float
+
+    @property
+    def shift(self) -> float:
+        """The shift of NDMI, no larger than 1.6 µm bears out where that is known.
+
+        A crop that ripens early, or is cut, has less NDMI because it has less cover; one that
+        lacks water is also brighter at 1.6 µm (Gao 1996).
+        """
+        if isnan(self.dryness):
+            return self.moisture
+        return max(self.moisture, NDMI_OF_DRYNESS * self.dryness)
 
     @property
     def tells(self) -> bool:
         """Whether the crop says something about the region."""
-        return self.looks >= LOOKS_OF_CROP and self.green > GREEN and self.haze < HAZE_LIMIT
+        is_green = self.green > GREEN and not self.rising <= RIPENING
+        is_known = not isnan(self.moisture)
+        return self.looks >= LOOKS_OF_CROP and is_green and is_known and self.haze < HAZE_LIMIT
 
 
 class NoticeState(StrEnum):
@@ -103,11 +129,12 @@ class Notice:
 class Region:
     """What is remembered of a region from pass to pass.
 
-    `recent` are the shared shifts of the last passes that told of one, the newest last.
+    `recent` are the last passes that told of a shared shift, each with its time
+    (microseconds since 1970), the newest last.
     """
 
     name: str = ""
-    recent: tuple[float, ...] = ()
+    recent: tuple[tuple[int, float], ...] = ()
     notice: Notice | None = None
 
     @property
@@ -128,7 +155,8 @@ class Region:
     def as_dict(self) -> dict[str, Any]:
         """Return plain members, fit for JSON."""
         notice = self.notice and self.notice.as_dict()
-        return {"name": self.name, "recent": list(self.recent), "notice": notice}
+        recent = [list(each) for each in self.recent]
+        return {"name": self.name, "recent": recent, "notice": notice}
 
     @classmethod
     def from_dict(cls, members: Mapping[str, Any]) -> "Region":
@@ -136,7 +164,7 @@ class Region:
         notice = members["notice"]
         return cls(
             name=members["name"],
-            recent=tuple(members["recent"]),
+            recent=tuple((at, shift) for at, shift in members["recent"]),
             notice=None if notice is None else Notice.from_dict(notice),
         )
 
@@ -153,15 +181,16 @@ def watch_region(
     """Return the memory after a pass, and the notice if it was opened, changed or closed by it.
 
     The shared shift is the median over the crops that tell of it, of which there must be 3.
-    Open when it is below -0.045 in 3 of the last 4 passes that have one; close when it is
-    above half of that in 3 of them.
+    Open when it is below -0.045 in 3 of the last 4 passes that have one, at least 8 days
+    apart; close when it is above half of that in 3 of them.
     """
     telling = [each for each in shifts if each.tells]
     if len(telling) < CROPS_NEEDED:
         return region, []
     shared = median(each.shift for each in telling)
     below = sorted(each.crop for each in telling if each.shift < OPEN_BELOW)
-    region = replace(region, recent=(*region.recent, shared)[-PASSES_WINDOW:])
+    recent = (*region.recent, (microseconds(at), shared))
+    region = replace(region, recent=recent[-PASSES_WINDOW:])
     if region.notice is None:
         return _maybe_opened(region, shared, below, at)
     return _observed(region, region.notice, shared, below, at)
@@ -178,8 +207,9 @@ def season_over(region: Region, *, at: datetime) -> tuple[Region, list[Notice]]:
 def _maybe_opened(
     region: Region, shared: float, below: Sequence[str], at: datetime
 ) -> tuple[Region, list[Notice]]:
-    count = sum(each < OPEN_BELOW for each in region.recent)
-    if shared >= OPEN_BELOW or count < PASSES_NEEDED:
+    dry = [when for when, shift in region.recent if shift < OPEN_BELOW]
+    is_lasting = len(dry) >= PASSES_NEEDED and dry[-1] - dry[0] >= DAYS_NEEDED * DAY
+    if shared >= OPEN_BELOW or not is_lasting:
         return region, []
     notice = Notice(
         id=notice_id(region=region.name, kind=KIND, opening=at),
@@ -197,7 +227,7 @@ def _maybe_opened(
 def _observed(
     region: Region, notice: Notice, shared: float, below: Sequence[str], at: datetime
 ) -> tuple[Region, list[Notice]]:
-    if sum(each > CLOSE_ABOVE for each in region.recent) >= PASSES_NEEDED:
+    if sum(shift > CLOSE_ABOVE for _, shift in region.recent) >= PASSES_NEEDED:
         closed = replace(notice, state=NoticeState.CLOSED, closed_at=at)
         return Region(name=region.name), [closed]
     crops = tuple(sorted({*notice.crops, *below}))

@@ -175,6 +175,7 @@ class _Step:
                 self.strengths,
                 day=self.looks.day,
                 parcels=len(self.watch.places),
+                cause=alert.cause.kind,
             )
             told = replace(alert, chance=chance)
             self.open[alert.parcel] = told

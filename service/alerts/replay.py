@@ -26,8 +26,8 @@ class PastLooks:
     ----------
     parcel, season, day, order
         Codes of parcels, seasons, days of season, and numbers that ascend with acquisition.
-    score
-        NaN where a look is not judged.
+    score, mirrored
+        NaN where a look is not judged; the same with the better side taken for the worse.
     may_open
         Whether the rule lets an alert open there.
     is_weak
@@ -41,6 +41,7 @@ class PastLooks:
     day: Numbers
     order: Numbers
     score: Figures
+    mirrored: Figures
     may_open: Flags
     is_weak: Flags
     is_known: Flags
@@ -51,7 +52,7 @@ class PastLooks:
         judged = np.isfinite(self.score) & self.may_open
         if not judged.any():
             return 0.0
-        rows, day = self._rows()[judged], self.day[judged]
+        rows, day = self.rows[judged], self.day[judged]
         last, first = np.full(rows.max() + 1, -1), np.full(rows.max() + 1, np.iinfo(np.int64).max)
         np.maximum.at(last, rows, day)
         np.minimum.at(first, rows, day)
@@ -62,9 +63,11 @@ class PastLooks:
         """Parcels watched in a season, on average."""
         judged = np.isfinite(self.score)
         seasons = np.unique(self.season[judged]).size
-        return np.unique(self._rows()[judged]).size / seasons if seasons else 0.0
+        return np.unique(self.rows[judged]).size / seasons if seasons else 0.0
 
-    def _rows(self) -> Numbers:
+    @property
+    def rows(self) -> Numbers:
+        """One number for each parcel and season, shape (looks,)."""
         return self.season * (int(self.parcel.max(initial=0)) + 1) + self.parcel
 
 
@@ -97,11 +100,35 @@ def replayed(looks: PastLooks, rule: Rule, thresholds: Sequence[float]) -> Alarm
     )
 
 
+def looks_around(looks: PastLooks, rule: Rule, openings: Numbers) -> Flags:
+    """Return which looks belong to alarms opened at some looks, shape (looks,).
+
+    From as many looks before the opening as the rule's window holds to the last one before
+    the parcel has returned; suspect looks between them belong to it as well.
+    """
+    found = np.zeros(looks.score.size, dtype=bool)
+    _, row = np.unique(looks.rows, return_inverse=True)
+    order = np.lexsort((looks.order, row))
+    starts = np.searchsorted(row[order], np.arange(row.max(initial=-1) + 2))
+    for opening in openings.tolist():
+        own = order[starts[row[opening]] : starts[row[opening] + 1]]
+        at = int(np.flatnonzero(own == opening)[0])
+        found[own[max(at - rule.looks_window + 1, 0) : at + 1]] = True
+        below = 0
+        for look in own[at + 1 :].tolist():
+            score = looks.score[look]
+            if np.isfinite(score):
+                below = below + 1 if score < rule.close_below else 0
+            if below >= rule.looks_to_close:
+                break
+            found[look] = True
+    return found
+
+
 def _table(looks: PastLooks, *, lowest: float) -> Numbers:
     """Return the places of looks, a row per parcel and season, in order of time; -1 = none."""
     judged = np.flatnonzero(np.isfinite(looks.score))
-    row = looks.season * (int(looks.parcel.max(initial=0)) + 1) + looks.parcel
-    _, row = np.unique(row[judged], return_inverse=True)
+    _, row = np.unique(looks.rows[judged], return_inverse=True)
     highest = np.full(row.max(initial=-1) + 1, -np.inf)
     np.maximum.at(highest, row, looks.score[judged])
     kept = highest[row] >= lowest

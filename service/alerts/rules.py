@@ -161,12 +161,14 @@ RULES: Final[Mapping[str, Rule]] = {
     for rule in (
         Rule(
             id="default",
-            title="A parcel departs from its baseline in greenness, moisture, burn or water",
+            title="A parcel departs from its baseline in greenness, moisture, burn, water or light",
             measures=(
                 Watched(index="ndvi", direction=Direction.BELOW),
                 Watched(index="ndmi", direction=Direction.BELOW),
                 Watched(index="nbr", direction=Direction.BELOW),
                 Watched(index="ndwi", direction=Direction.ABOVE),
+                # Water and char darken it however ripe the crop is.
+                Watched(index="nir", direction=Direction.BELOW),
             ),
         ),
     )

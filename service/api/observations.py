@@ -42,6 +42,7 @@ _COLUMNS: Final = {
 }
 _RANGES: Final = {"normalised": (-1.0, 1.0), "band": (-0.5, 2.0), "other": (-100.0, 100.0)}
 _RANKED: Final = ("min", "p10", "p50", "p90", "max")
+_BANDS: Final = frozenset(BandRole)
 _MOST_PIXELS: Final = 1e9
 
 
@@ -96,7 +97,7 @@ def _check_possible(figure: FigureIn, pointer: str) -> None:
 
 
 def _range_of(measure: str, pointer: str) -> tuple[float, float]:
-    if measure in set(BandRole):
+    if measure in _BANDS:
         return _RANGES["band"]
     if measure not in WATCHED_IDS:
         what = "This index is not watched" if measure in INDICES else "There is no such index"

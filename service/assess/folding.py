@@ -2,22 +2,23 @@
 
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import replace
+from math import nan
 
 from service.alerts.actions import Action, act
 from service.alerts.alert import Alert, Change
 from service.alerts.diary import DiaryEntry
 from service.alerts.explained import Known
+from service.alerts.notices import DRYNESS, CropShift, Notice, season_over, watch_region
 from service.alerts.notices import MEASURE as SHIFT_MEASURE
-from service.alerts.notices import CropShift, Notice, season_over, watch_region
 from service.alerts.persistence import watch_pass
 from service.alerts.rules import Rule
 from service.alerts.tuning import Tuned
 from service.assess.scored import COVER, column_of, scored_looks
 from service.assess.state import NO_HOLDINGS, Beside, Holdings, State, Step
 from service.seasons.baseline import Baselines
-from service.seasons.cohort import Cohort
 from service.seasons.history import HAZE
 from service.seasons.judgement import Judgements, OnePass, judge_looks
+from service.seasons.medians import Figures
 
 
 def fold(
@@ -151,21 +152,22 @@ def _in_season(
 
 def _shifts(judgements: Judgements) -> list[CropShift]:
     """Return how far each crop with history is off its usual course."""
-    places = [column_of(judgements, name) for name in (SHIFT_MEASURE, COVER, HAZE)]
+    places = {name: column_of(judgements, name) for name in (SHIFT_MEASURE, DRYNESS, HAZE, COVER)}
 
-    def shift(crop: str, cohort: Cohort) -> CropShift:
-        moist, cover, haze = places
-        nan = float("nan")
-        return CropShift(
-            crop=crop,
-            looks=cohort.looks,
-            shift=nan if moist is None else float(cohort.level[moist]),
-            green=nan if cover is None else float(cohort.usual[cover]),
-            haze=0.0 if haze is None else float(cohort.level[haze]),
-        )
+    def figure(figures: Figures, measure: str, *, otherwise: float) -> float:
+        place = places[measure]
+        return otherwise if place is None else float(figures[place])
 
     return [
-        shift(crop, cohort)
+        CropShift(
+            crop=crop,
+            looks=cohort.looks,
+            moisture=figure(cohort.level, SHIFT_MEASURE, otherwise=nan),
+            dryness=figure(cohort.level, DRYNESS, otherwise=nan),
+            green=figure(cohort.usual, COVER, otherwise=nan),
+            rising=figure(cohort.rising, COVER, otherwise=nan),
+            haze=figure(cohort.level, HAZE, otherwise=0.0),
+        )
         for crop, cohort in sorted(judgements.cohorts.items())
         if crop and not cohort.is_new
     ]

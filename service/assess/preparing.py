@@ -9,11 +9,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from service.alerts.replay import PastLooks
-from service.alerts.rules import Rule
-from service.alerts.tuning import Tuned, tune
+from service.alerts.rules import RULES, Rule
+from service.alerts.tuning import Tuned, looks_of_events, tune
 from service.assess.state import NO_HOLDINGS, Holdings
 from service.seasons.baseline import Baselines
-from service.seasons.fitting import fit
+from service.seasons.fitting import fit, ranked
 from service.seasons.history import History
 from service.seasons.past import Past
 
@@ -71,8 +71,9 @@ def prepare(history: History, rules: Iterable[Rule], holdings: Holdings = NO_HOL
         Parcel → its holding, for rules that are limited to some.
     """
     fitted = fit(history)
+    standard = past_looks(fitted.past, RULES["default"])
     return Prepared(
-        baselines=fitted.baselines,
+        baselines=ranked(fitted, without=looks_of_events(RULES["default"], standard)),
         tuned={rule.id: tune(rule, past_looks(fitted.past, rule, holdings)) for rule in rules},
     )
 
@@ -86,12 +87,16 @@ def past_looks(past: Past, rule: Rule, holdings: Holdings = NO_HOLDINGS) -> Past
     clear = past.clear_looks(score)
     labelled = np.array([bool(crop) for crop in past.crops], dtype=bool)
     score[~labelled[past.crop]] = np.nan
+    better = {measure: -sign for measure, sign in rule.signs.items()}
+    mirrored = past.scores(better, relieved=True)
+    mirrored[np.isnan(score)] = np.nan
     return PastLooks(
         parcel=past.parcel,
         season=past.season,
         day=past.day,
         order=past.pass_at,
         score=score,
+        mirrored=mirrored,
         may_open=_past_may_open(past, rule, holdings),
         is_weak=clear < rule.clear_cohort,
         is_known=past.is_known,

@@ -7,6 +7,7 @@ scenes arrived.
 
 import hashlib
 import threading
+import time
 from collections.abc import Mapping, Sequence
 from datetime import datetime, timedelta
 from typing import Final
@@ -207,9 +208,14 @@ def assess(_wanted: str) -> str:
 
 
 @DBOS.step(name="judge", retries_allowed=True, max_attempts=5)
-def judge() -> None:
-    """Judge whatever is promised; the deliveries that this promises stand in the database."""
+def judge() -> float:
+    """Judge whatever is promised, and return how many seconds that took, waiting included.
+
+    The deliveries that this promises stand in the database.
+    """
+    started = time.monotonic()
     judge_wanted(resources())
+    return round(time.monotonic() - started, 3)
 
 
 def enqueue_fresh_deliveries() -> None:

@@ -40,8 +40,7 @@ def ingest(scene_id: int, generation: int) -> str:
     try:
         outcome = measure(scene_id, generation)
         if outcome == "measured":
-            judge()
-            outcome = finish(scene_id, generation)
+            outcome = finish(scene_id, generation, judge())
     except Exception:  # noqa: BLE001 - a bug of ours is logged, and told on the scene
         _log.exception("ingest failed")
         outcome = give_up(scene_id, generation)
@@ -70,8 +69,11 @@ def measure(scene_id: int, generation: int) -> str:
 
 
 @DBOS.step(name="finish", retries_allowed=True, max_attempts=5, should_retry=_worth_retrying)
-def finish(scene_id: int, generation: int) -> str:
-    """Say that a scene is done: its looks are judged too."""
+def finish(scene_id: int, generation: int, judging: float | None = None) -> str:
+    """Say that a scene is done: its looks are judged too, which took so many seconds.
+
+    A release that did not count them may have left them unsaid.
+    """
     work = resources()
     with work.sessions.writing() as session:
         row = lock_scene(session, scene_id)
@@ -80,7 +82,10 @@ def finish(scene_id: int, generation: int) -> str:
         row.state = SceneState.DONE
         row.progress = 1.0
         row.changed_at = now()
-        row.report = {**(row.report or {}), "alerts_opened": count_opened_by(session, row)}
+        report = row.report or {}
+        seconds = {**report.get("seconds", {}), **({} if judging is None else {"judging": judging})}
+        opened = count_opened_by(session, row)
+        row.report = {**report, "seconds": seconds, "alerts_opened": opened}
         tell_of_unseen(session, work.settings, row, at=row.changed_at)
         announce_scene(session, work.settings, row, at=row.changed_at)
     _log.info("scene done")

@@ -14,7 +14,7 @@ from service.seasons.offsets import OWN_WEIGHT, OwnLooks
 from service.seasons.ranks import Ranks
 from service.seasons.usual import DAYS
 
-METHOD: Final = "own-offset-against-cohort/2"
+METHOD: Final = "own-offset-against-cohort/3"
 """Name of the method; part of a baseline's version."""
 BAND: Final = 1.645
 """Half width of the band drawn about an expected value, in spreads: nine looks in ten lie in
@@ -44,8 +44,9 @@ class Baselines:
     ----------
     measures
         What is expected: the measures of the history, and haze where it could be made.
-    usual, spread
-        Crop → course over the season, shape (DAYS, measures), NaN = unknown.
+    usual, spread, middle
+        Crop → course over the season, shape (DAYS, measures), NaN = unknown; `middle` is the
+        spread as the middle of past shortfalls tells it, `spread` as their tail does.
     seasons
         Crop → the seasons that its course rests on.
     own
@@ -59,6 +60,7 @@ class Baselines:
     measures: tuple[str, ...]
     usual: Mapping[str, Figures]
     spread: Mapping[str, Figures]
+    middle: Mapping[str, Figures]
     seasons: Mapping[str, tuple[int, ...]]
     own: OwnLooks
     ranks: Ranks
@@ -71,6 +73,7 @@ class Baselines:
         measures: tuple[str, ...],
         usual: Mapping[str, Figures],
         spread: Mapping[str, Figures],
+        middle: Mapping[str, Figures],
         seasons: Mapping[str, tuple[int, ...]],
         own: OwnLooks,
         ranks: Ranks,
@@ -80,12 +83,18 @@ class Baselines:
             measures=measures,
             usual=usual,
             spread=spread,
+            middle=middle,
             seasons=seasons,
             own=own,
             ranks=ranks,
             version="",
         )
         return replace(unnamed, version=_version(unnamed.to_arrays()))
+
+    def with_ranks(self, ranks: Ranks) -> "Baselines":
+        """Return the same baselines with other past scores."""
+        ranked = replace(self, ranks=ranks)
+        return replace(ranked, version=_version(ranked.to_arrays()))
 
     def knows(self, crop: str, day: int) -> bool:
         """Whether the crop has history at this time of the season, in any measure."""
@@ -105,6 +114,7 @@ class Baselines:
             "crop_seasons": np.array(every_season, dtype=np.int64),
             "usual": np.stack(list(self.usual.values())) if crops else nothing,
             "spread": np.stack(list(self.spread.values())) if crops else nothing,
+            "middle": np.stack(list(self.middle.values())) if crops else nothing,
             "pair_parcels": np.array([parcel for parcel, _ in self.own.pairs], dtype=np.str_),
             "pair_crops": np.array([crop for _, crop in self.own.pairs], dtype=np.str_),
             "own_pair": self.own.pair,
@@ -129,6 +139,8 @@ class Baselines:
             measures=tuple(str(measure) for measure in arrays["measures"]),
             usual=dict(zip(crops, arrays["usual"], strict=True)),
             spread=dict(zip(crops, arrays["spread"], strict=True)),
+            # Older baselines, which are still shown as of their time, know one spread.
+            middle=dict(zip(crops, arrays.get("middle", arrays["spread"]), strict=True)),
             seasons=seasons,
             own=OwnLooks(
                 pairs={pair: at for at, pair in enumerate(pairs)},

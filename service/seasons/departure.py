@@ -11,14 +11,25 @@ from service.seasons.baseline import Baselines
 from service.seasons.cohort import Carried, Cohort, known_crop, new_crop
 from service.seasons.history import HAZE
 from service.seasons.medians import Figures
+from service.seasons.spread import spread_in_pass
 
-WORSE: Final[Mapping[str, float]] = {"ndvi": -1.0, "ndmi": -1.0, "nbr": -1.0, "ndwi": 1.0}
+WORSE: Final[Mapping[str, float]] = {
+    "ndvi": -1.0,
+    "ndmi": -1.0,
+    "nbr": -1.0,
+    "ndwi": 1.0,
+    "nir": -1.0,
+}
 """The measures by which a look is ranked among those of the past: -1 where lower is worse."""
 HAZE_LIMIT: Final = 0.02
 """Haze above its expected value by more than this makes a look suspect."""
 WATER_HAZE_LIMIT: Final = 0.06
 """Up to this excess of haze, dark infrared bands mean water rather than cloud."""
 WATER_FALL: Final = -0.04
+SHADOW_FALL: Final = -0.03
+SHADOW_FALL_GREEN: Final = -0.01
+SHADOW_CHANGE: Final = 0.05
+"""A shadow leaves each index within this of its expected value."""
 OWN_ALLOWANCE: Final = 2.0
 """What a parcel's own calendar may fall short of the cohort's word without contradicting it."""
 
@@ -134,9 +145,18 @@ def departures_in(
     offset[is_new], weight[is_new] = 0.0, 0.0
     own_expected = filled["usual"] + offset
     expected = own_expected + filled["level"]
+    shortfall = values - expected
+    for crop in sorted(set(crops)):
+        if not cohorts[crop].is_new:
+            of_crop = names == crop
+            filled["spread"][of_crop] = spread_in_pass(
+                shortfall[of_crop],
+                middle=baselines.middle[crop][day],
+                whole=baselines.spread[crop][day],
+            )
     return Departures(
         expected=expected,
-        shortfall=values - expected,
+        shortfall=shortfall,
         own_shortfall=values - own_expected,
         spread=filled["spread"],
         lower=filled["lower"],
@@ -176,10 +196,11 @@ def scores(adverse: Figures, own: Figures) -> tuple[Figures, NDArray[np.int64]]:
 
 
 def suspect_looks(shortfall: Figures, measures: Sequence[str]) -> NDArray[np.bool_]:
-    """Return which looks carry haze or cloud that the quality layer let through.
+    """Return which looks carry haze, cloud or shadow that the quality layer let through.
 
     Haze above its expected value by more than 0.02, unless near-infrared and 1.6 µm are both
-    lower than expected by more than 0.04 and the excess is below 0.06: that is water.
+    lower than expected by more than 0.04 and the excess is below 0.06: that is water. Shadow:
+    all bands are darker while their ratios stay as they were.
 
     Parameters
     ----------
@@ -193,8 +214,19 @@ def suspect_looks(shortfall: Figures, measures: Sequence[str]) -> NDArray[np.boo
     unknown = np.full(len(shortfall), np.nan)
     haze, nir, swir16 = (column.get(name, unknown) for name in (HAZE, "nir", "swir16"))
     is_water = (nir < WATER_FALL) & (swir16 < WATER_FALL) & (haze < WATER_HAZE_LIMIT)
-    suspect: NDArray[np.bool_] = (haze > HAZE_LIMIT) & ~is_water
+    suspect: NDArray[np.bool_] = ((haze > HAZE_LIMIT) & ~is_water) | _is_shadow(column, unknown)
     return suspect
+
+
+def _is_shadow(column: Mapping[str, Figures], unknown: Figures) -> NDArray[np.bool_]:
+    def short(measure: str) -> Figures:
+        return column.get(measure, unknown)
+
+    is_dark = (short("nir") < SHADOW_FALL) & (short("swir16") < SHADOW_FALL)
+    is_dark &= short("green") < SHADOW_FALL_GREEN
+    ratios = [np.abs(short(measure)) < SHADOW_CHANGE for measure in ("ndvi", "ndmi", "nbr")]
+    shadow: NDArray[np.bool_] = is_dark & np.logical_and.reduce(ratios)
+    return shadow
 
 
 _OF_COHORT: Final = ("usual", "level", "spread", "lower", "higher", "rising")

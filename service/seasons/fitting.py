@@ -4,7 +4,7 @@ Each look is also judged with its own season left out: that gives the spread, th
 scores, and what replaying the past needs.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 from typing import Final
 
@@ -14,12 +14,12 @@ from numpy.typing import NDArray
 from service.seasons.baseline import Baselines
 from service.seasons.cohort import past_levels
 from service.seasons.departure import WORSE
-from service.seasons.history import History
+from service.seasons.history import Flags, History
 from service.seasons.medians import SPREAD_OF_MEDIAN, Counts, Figures, medians
 from service.seasons.offsets import OwnLooks, offsets_without_own_season
 from service.seasons.past import Past
 from service.seasons.ranks import Ranks
-from service.seasons.spread import spreads
+from service.seasons.spread import Spreads, past_spreads, spreads
 from service.seasons.usual import DAYS, Course, usual_course
 
 WINSOR: Final = 3.0
@@ -52,16 +52,19 @@ def fit(history: History) -> Fitted:
         The same looks in any order give the same baselines, to the last bit.
     """
     looks = history.arranged()
-    crops = [_fit_crop(looks, at) for at in _spans(looks)]
+    fitted = [_fit_crop(looks, at) for at in _spans(looks)]
     measures, size = len(looks.measures), looks.crop.size
     shortfall = np.empty((measures, size), dtype=np.float32)
     level = np.empty((measures, size), dtype=np.float32)
-    for crop, at in zip(crops, _spans(looks), strict=True):
-        shortfall[:, at], level[:, at] = crop.shortfall, crop.level
+    for each, at in zip(fitted, _spans(looks), strict=True):
+        shortfall[:, at], level[:, at] = each.shortfall, each.level
     nothing = np.empty((0, DAYS, measures))
-    usual = np.stack([crop.usual for crop in crops]) if crops else nothing
+    usual = np.stack([each.usual for each in fitted]) if fitted else nothing
     is_labelled = np.array([bool(name) for name in looks.crops], dtype=bool)
     spread = spreads(looks.crop, looks.day, shortfall, is_pooled=is_labelled)
+    starts, group = _passes(looks)
+    crop, day = looks.crop[starts], looks.day[starts]
+    middle, whole = _stacked(spread, measures)
     past = Past(
         measures=looks.measures,
         crops=looks.crops,
@@ -73,23 +76,42 @@ def fit(history: History) -> Fitted:
         pass_at=looks.pass_at,
         shortfall=shortfall,
         level=level,
-        spread=np.stack(spread) if spread else nothing,
+        spread=past_spreads(
+            starts, shortfall, middle=middle[crop, day].T, whole=whole[crop, day].T
+        ).astype(np.float32),
+        group=group,
         usual=usual,
         is_known=looks.is_known,
     )
-    scores = past.scores(WORSE, relieved=False)
-    scores[looks.is_known] = np.nan
-    return Fitted(
+    fitted_from = Fitted(
         baselines=Baselines.of(
             measures=looks.measures,
             usual=dict(zip(looks.crops, usual, strict=True)),
-            spread=dict(zip(looks.crops, spread, strict=True)),
-            seasons={name: crop.seasons for name, crop in zip(looks.crops, crops, strict=True)},
-            own=_own(looks, crops),
-            ranks=Ranks.of(looks.crops, looks.crop, scores),
+            spread=dict(zip(looks.crops, whole, strict=True)),
+            middle=dict(zip(looks.crops, middle, strict=True)),
+            seasons={name: each.seasons for name, each in zip(looks.crops, fitted, strict=True)},
+            own=_own(looks, fitted),
+            ranks=Ranks(by_crop={}),
         ),
         past=past,
     )
+    nothing_known = np.zeros(size, dtype=bool)
+    return replace(fitted_from, baselines=ranked(fitted_from, without=nothing_known))
+
+
+def ranked(fitted: Fitted, *, without: Flags) -> Baselines:
+    """Return baselines that rank looks among those of the past.
+
+    Parameters
+    ----------
+    without
+        Past looks that take no part, as something real befell their parcel, shape (looks,);
+        neither do those that a person said to be real.
+    """
+    past = fitted.past
+    scores = past.scores(WORSE, relieved=False)
+    scores[past.is_known | without] = np.nan
+    return fitted.baselines.with_ranks(Ranks.of(past.crops, past.crop, scores))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -101,6 +123,23 @@ class _Crop:
     kept: NDArray[np.float32]
     shortfall: NDArray[np.float32]
     level: NDArray[np.float32]
+
+
+def _passes(looks: History) -> tuple[Counts, Counts]:
+    """Return where the looks of each crop and pass begin, and which they are of each look."""
+    keys = np.stack([looks.crop, looks.season, looks.pass_at])
+    is_first = np.ones(looks.crop.size, dtype=bool)
+    is_first[1:] = (np.diff(keys, axis=1) != 0).any(axis=0)
+    return np.flatnonzero(is_first), np.cumsum(is_first) - 1
+
+
+def _stacked(spread: list[Spreads], measures: int) -> tuple[Figures, Figures]:
+    """Return middle and whole spreads by crop, shape (crops, DAYS, measures)."""
+    nothing = np.empty((0, DAYS, measures))
+    return (
+        np.stack([each.middle for each in spread]) if spread else nothing,
+        np.stack([each.whole for each in spread]) if spread else nothing,
+    )
 
 
 def _spans(looks: History) -> list[slice]:

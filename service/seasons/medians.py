@@ -78,8 +78,7 @@ def grouped_medians(starts: Counts, values: Figures) -> tuple[Figures, Counts]:
     tuple
         Medians and counts, shape (measures, groups).
     """
-    looks = values.shape[1]
-    group = np.repeat(np.arange(starts.size), np.diff(np.append(starts, looks)))
+    group = _groups(starts, values.shape[1])
     found = np.empty((values.shape[0], starts.size))
     counts = np.empty((values.shape[0], starts.size), dtype=np.int64)
     for measure, row in enumerate(values):
@@ -87,6 +86,52 @@ def grouped_medians(starts: Counts, values: Figures) -> tuple[Figures, Counts]:
         ranked = row[np.lexsort((row, group))]
         found[measure] = _middle(ranked[None, :], starts, counts[measure])
     return found, counts
+
+
+def quantiles(values: Rows, share: float) -> tuple[Figures, Counts]:
+    """Return a quantile of each row, and how many numbers it rests on.
+
+    As `medians` does for the middle: NaN left out, NaN where a row has no number. The lower
+    neighbour is taken, so that the largest of a few numbers never counts.
+    """
+    count = np.count_nonzero(np.isfinite(values), axis=1)
+    if values.shape[1] == 0:
+        return np.full(values.shape[0], np.nan), count
+    return _at_share(np.sort(values, axis=1), np.zeros_like(count), count, share), count
+
+
+def windowed_quantiles(
+    day: Counts, values: Rows, share: float, *, centres: Counts, reach: int
+) -> tuple[Figures, Counts]:
+    """Return quantiles of the looks within `reach` days of each centre, as `windowed_medians`."""
+    first = np.searchsorted(day, centres - reach, side="left")
+    last = np.searchsorted(day, centres + reach, side="right")
+    found = [quantiles(values[:, a:b], share) for a, b in zip(first, last, strict=True)]
+    return np.stack([each for each, _ in found]), np.stack([count for _, count in found])
+
+
+def grouped_quantiles(starts: Counts, values: Rows, share: float) -> tuple[Figures, Counts]:
+    """Return a quantile of each group of neighbouring looks, as `grouped_medians`."""
+    group = _groups(starts, values.shape[1])
+    found = np.empty((values.shape[0], starts.size))
+    counts = np.empty((values.shape[0], starts.size), dtype=np.int64)
+    for measure, row in enumerate(values):
+        counts[measure] = np.bincount(group[np.isfinite(row)], minlength=starts.size)
+        ranked = row[np.lexsort((row, group))]
+        found[measure] = _at_share(ranked[None, :], starts, counts[measure], share)
+    return found, counts
+
+
+def _groups(starts: Counts, looks: int) -> Counts:
+    return np.repeat(np.arange(starts.size), np.diff(np.append(starts, looks)))
+
+
+def _at_share(ranked: Rows, starts: Counts, count: Counts, share: float) -> Figures:
+    """Return what stands at a share of `count` ascending numbers from each start on."""
+    rows = np.arange(count.size) if ranked.shape[0] > 1 else np.zeros(count.size, dtype=np.int64)
+    place = np.floor(share * np.maximum(count - 1, 0)).astype(np.int64)
+    found = ranked[rows, np.minimum(starts + place, ranked.shape[1] - 1)]
+    return np.where(count > 0, found, np.nan).astype(np.float64)
 
 
 def _middle(ranked: Rows, starts: Counts, count: Counts) -> Figures:

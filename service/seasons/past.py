@@ -30,7 +30,11 @@ class Past:
         Observed minus expected, float32, shape (measures, looks), NaN = unknown.
     level
         How far the crop was off its usual course in the pass, same shape.
-    spread, usual
+    spread
+        By crop and pass, float32, shape (measures, groups).
+    group
+        The crop and pass of each look, shape (looks,).
+    usual
         By crop over the season, shape (crops, DAYS, measures).
     is_known
         Whether a person said that the departure was real, shape (looks,).
@@ -46,7 +50,8 @@ class Past:
     pass_at: Counts
     shortfall: NDArray[np.float32]
     level: NDArray[np.float32]
-    spread: Figures
+    spread: NDArray[np.float32]
+    group: Counts
     usual: Figures
     is_known: Flags
 
@@ -70,7 +75,7 @@ class Past:
             short = self.shortfall[:, some].T.astype(np.float64)
             own = short + self.level[:, some].T
             relief = 0.0 if reliefs is None else reliefs[crop, day]
-            spread = self.spread[crop, day][:, watched]
+            spread = self.spread[watched][:, self.group[some]].T
             adverse = (worse * short[:, watched] - relief) / spread
             by_calendar = (worse * own[:, watched] - relief) / spread
             score, _ = scores(adverse, by_calendar)
@@ -82,11 +87,7 @@ class Past:
         """Return how many clear looks the crop of each look had in its pass."""
         if scored.size == 0:
             return np.zeros(0, dtype=np.int64)
-        keys = np.stack([self.crop, self.season, self.pass_at])
-        is_first = np.ones(scored.size, dtype=bool)
-        is_first[1:] = (np.diff(keys, axis=1) != 0).any(axis=0)
-        group = np.cumsum(is_first) - 1
-        clear: Counts = np.bincount(group, np.isfinite(scored))[group].astype(np.int64)
+        clear: Counts = np.bincount(self.group, np.isfinite(scored))[self.group].astype(np.int64)
         return clear
 
     def _reliefs(self, watched: list[int], worse: Figures) -> Figures:

@@ -93,6 +93,8 @@ class Ranks:
     @classmethod
     def from_arrays(cls, arrays: Mapping[str, NDArray[Any]]) -> "Ranks":
         """Return the rankings that `to_arrays` wrote."""
+        if "rank_sizes" not in arrays:
+            return cls(by_crop={})
         ends = arrays["rank_sizes"].cumsum()
         spans = zip(
             arrays["rank_crops"].tolist(),

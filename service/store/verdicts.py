@@ -43,6 +43,8 @@ def verdicts_on(session: Session, refs: Iterable[str]) -> Mapping[str, list[Spok
             .order_by(AlertRow.opened_at, AlertRow.id)
         )
         for ref, row in session.execute(query):
+            if row.verdict is None:
+                continue
             spoken = Spoken(
                 alert_id=row.id,
                 since=row.first_departure_at,

@@ -62,7 +62,7 @@ def test_each_event_opens_an_alert_of_its_cause_and_nothing_else_does(judged: Se
     assert alert["shortfall"] == pytest.approx(alert["observed"] - alert["expected"], abs=2e-4)
     assert alert["shortfall"] > 0.3
     assert alert["score"] == alert["departure"] == max(alert["departures"].values())
-    assert set(alert["departures"]) == {"ndvi", "ndmi", "nbr", "ndwi"}
+    assert set(alert["departures"]) == {"ndvi", "ndmi", "nbr", "ndwi", "nir"}
     assert (alert["basis"], alert["crop"], alert["holding"]) == ("blended", "beet", "south")
     assert "Check on the ground" in alert["caution"]
     assert "NDWI" in alert["cause"]["because"]

@@ -607,7 +607,8 @@ FAULTY_QUERIES = [
     "cursor=WyJ4Il0",
     "cursor=Wy0xXQ",
     "cursor=WzEwMDAwMDAwMDAwMDAwMDAwMDAwMDAwXQ",
-    "unseen_days=3",
+    "unseen_days=0",
+    "unseen_weeks=3",
 ]
 
 

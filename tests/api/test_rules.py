@@ -44,6 +44,7 @@ def test_the_default_rule_tells_its_tuned_threshold_and_how_it_does_on_the_past(
         ("ndmi", "below"),
         ("nbr", "below"),
         ("ndwi", "above"),
+        ("nir", "below"),
     ]
     (tuning,) = rule["tuning"]
     assert (tuning["season_start"], tuning["from_on"]) == ("10-01", f"{RUNNING - 1}-10-01")

@@ -441,7 +441,7 @@ def test_a_scene_tells_what_was_seen_of_every_parcel_and_why_not(
     assert report["indices"]["ndvi"]["state"] == "measured"
     skipped = report["indices"]["nbr2"]
     assert skipped == {"state": "skipped", "reason": "It needs the bands swir16 and swir22."}
-    assert set(report["seconds"]) == {"zones", "read_and_observe", "total"}
+    assert set(report["seconds"]) == {"zones", "read_and_observe", "total", "judging"}
 
     listed = service.get("/v1/scenes/s1/parcels")["parcels"]
     told = {entry["parcel"]: entry for entry in listed}

@@ -5,7 +5,7 @@ A benchmark is one command of this group; `bench list` names whatever stands her
 
 import typer
 
-from service.cli.bench import validation
+from service.cli.bench import judging, validation
 
 app = typer.Typer(no_args_is_help=True, help="Measure how right and how fast the service is.")
 
@@ -19,4 +19,5 @@ def list_all() -> None:
             typer.echo("\t".join((command.name or command.callback.__name__, *says[:1])))
 
 
+app.command("judging")(judging.judging)
 app.command("validation")(validation.validation)

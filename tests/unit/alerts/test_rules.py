@@ -4,7 +4,7 @@ import pytest
 
 from service.alerts.rules import RULES, Direction, Rule, Severities
 
-BETTER_HIGH = {"ndvi", "ndmi", "nbr"}
+BETTER_HIGH = {"ndvi", "ndmi", "nbr", "nir"}
 
 
 @pytest.mark.parametrize("rule", RULES.values(), ids=RULES)
@@ -12,7 +12,7 @@ def test_every_rule_can_open_and_close(rule: Rule) -> None:
     assert RULES[rule.id] is rule
     assert rule.measures
     assert 1 <= rule.looks_needed <= rule.looks_window
-    for thresholds in (rule.thresholds, rule.new_crop):
+    for thresholds in (rule.thresholds, rule.new_crop, rule.low_power):
         assert rule.close_below < thresholds.cause < thresholds.look < thresholds.single_look
 
 

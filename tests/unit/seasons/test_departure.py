@@ -29,6 +29,7 @@ def baselines(course: Mapping[str, np.ndarray], spread: float = 0.05) -> Baselin
         spread={crop: np.full((DAYS, 2), spread) for crop in course},
         seasons=dict.fromkeys(course, (2023,)),
         own=own,
+        middle={crop: np.full((DAYS, 2), spread) for crop in course},
         ranks=Ranks(by_crop={}),
         version="v1",
     )
