@@ -117,7 +117,7 @@ def serving(settings: Settings) -> Iterator[Service]:
         assert server.answers.wait(timeout=60)
         assert server.started
         address = f"http://127.0.0.1:{listener.getsockname()[1]}"
-        with httpx.Client(base_url=address, timeout=60, trust_env=False) as client:
+        with httpx.Client(base_url=address, timeout=180, trust_env=False) as client:
             yield Service(client, settings, app.state.context.sessions)
     finally:
         server.should_exit = True

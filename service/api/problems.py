@@ -156,12 +156,15 @@ def _http(request: Request, error: Exception) -> Response:
 def _bug(request: Request, error: Exception) -> Response:
     # No access to the trace for the caller: the request id leads the operator to it.
     _log.error("request failed", path=request.url.path, exc_info=error)
-    return _plain(
+    answer = _plain(
         request,
         "internal-error",
         f"The service failed; its log tells more under request {request.state.request_id}.",
         500,
     )
+    # The server drops the connection after a fault; a client that used it again would see a reset.
+    answer.headers["Connection"] = "close"
+    return answer
 
 
 def _plain(request: Request, code: str, detail: str, status: int) -> Response:

@@ -229,6 +229,7 @@ def test_a_fault_of_the_service_tells_nothing_but_the_requests_id(settings: Sett
         answer = service.call("GET", "/v1/parcels/A/seasons")
         document = problem(answer, 500, "internal-error")
         assert re.search(r"req_[0-9a-f]{16}", document["detail"])
+        assert answer.headers["Connection"] == "close"
         assert "errors" not in document
         for leaked in (
             "SELECT",

@@ -131,7 +131,7 @@ class Deployment:
         log = self.folder / f"log-{self._starts}.jsonl"
         with started(self.settings, log, point=point) as child:
             address = child.address or "http://127.0.0.1:9"
-            with httpx.Client(base_url=address, timeout=60, trust_env=False) as client:
+            with httpx.Client(base_url=address, timeout=180, trust_env=False) as client:
                 service = Service.__new__(Service)
                 service.client, service.settings = client, self.settings
                 service.sessions, service.secret = self.sessions, self.secret
