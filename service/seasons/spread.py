@@ -28,8 +28,8 @@ from service.seasons.usual import KNOTS, Course, daily
 
 REACH_DAYS: Final = 14
 PRIOR_LOOKS: Final = 15.0
-"""A crop with so many looks near a day counts as much as all crops together; and a pass with
-so many looks of a crop as much as its past."""
+"""A crop with so many looks near a day counts as much as all crops together; and so many other
+looks of a crop in a pass as much as its past."""
 FLOOR: Final = 0.015
 TAIL: Final = 0.9
 """Share of past looks that lie closer than the one by which their tail is told."""
@@ -92,8 +92,8 @@ def spreads(
 def spread_in_pass(shortfall: Figures, *, middle: Figures, whole: Figures) -> Figures:
     """Return the spread of the looks of one crop in one pass.
 
-    S² = v·p² + (1 - v)·whole² with v = n / (n + 15), where p is the larger of `middle` and
-    what the 0.7 quantile of the n absolute shortfalls in the pass tells.
+    S² = v·p² + (1 - v)·whole² with v = (n - 1) / (n + 14), where p is the larger of `middle`
+    and what the 0.7 quantile of the n absolute shortfalls in the pass tells.
 
     Parameters
     ----------
@@ -123,7 +123,9 @@ def past_spreads(starts: Counts, shortfalls: Rows, *, middle: Figures, whole: Fi
 
 
 def _blended(tail: Figures, looks: Counts, middle: Figures, whole: Figures) -> Figures:
-    weight = looks / (looks + PRIOR_LOOKS)
+    # A look says nothing of its own spread: the others do.
+    others = np.maximum(looks - 1, 0)
+    weight = others / (others + PRIOR_LOOKS)
     shown = np.fmax(middle, _spread_of(TAIL_IN_PASS) * tail)
     blended: Figures = np.sqrt(weight * shown**2 + (1.0 - weight) * whole**2)
     return blended

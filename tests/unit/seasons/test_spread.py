@@ -73,15 +73,15 @@ def test_few_looks_have_no_tail() -> None:
 
 
 def test_looks_that_lie_apart_in_a_pass_widen_its_spread() -> None:
-    # 15 looks: v = 15 / 30. Half of them lie 0.2 off.
-    shortfall = np.repeat([0.0, -0.2], [7, 8])[:, None]
+    # 16 looks: v = 15 / 30. Half of them lie 0.2 off.
+    shortfall = np.repeat([0.0, -0.2], [8, 8])[:, None]
     middle, whole = np.array([0.03]), np.array([0.05])
     expected = np.sqrt(0.5 * (0.2 / TAIL_IN_PASS) ** 2 + 0.5 * 0.05**2)
     found = spread_in_pass(shortfall, middle=middle, whole=whole)
     np.testing.assert_allclose(found, [expected], rtol=1e-4)
 
 
-@pytest.mark.parametrize("looks", [2, 3, 8, 15])
+@pytest.mark.parametrize("looks", [1, 2, 3, 8, 15])
 def test_one_parcel_in_trouble_does_not_widen_the_spread_of_its_pass(looks: int) -> None:
     shortfall = np.full((looks, 1), 0.01)
     calm = spread_in_pass(shortfall, middle=np.array([0.03]), whole=np.array([0.05]))
