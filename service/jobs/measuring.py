@@ -1,13 +1,12 @@
 """Measuring one scene: pixels in, observations out, nothing half-way."""
 
 import time
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 import shapely
-import xarray as xr
 from numpy.typing import NDArray
 from sqlalchemy.orm import Session
 
@@ -16,8 +15,9 @@ from service.clock import now
 from service.errors import RejectedInput
 from service.jobs.resources import Resources
 from service.jobs.sources import scene_source, sensor_of
-from service.observe import Observed, observe
-from service.spectral.gathered import QUALITY, SATURATION
+from service.jobs.warming import warm_up
+from service.observe import Observed, may_count, observe
+from service.spectral.gathered import QUALITY, SATURATION, Gathered
 from service.spectral.indices import INDICES, Index
 from service.spectral.quality import QualityLayer
 from service.spectral.quality_bits import SaturationLayer
@@ -28,9 +28,10 @@ from service.store.observations import Measured, has_write, parcels_to_measure, 
 from service.store.reports import out_of_range, scene_counts
 from service.store.scenes import SceneState, lock_scene, retire_figures
 from service.store.tables import Scene
-from service.tiles.reading import SceneSource, measuring_grid, read_blocks
+from service.tiles.reading import Grids, SceneSource, grids_of, read_strips
 from service.zonal.coverage import MIN_COVERAGE, project, zones_on
 from service.zonal.grid import Grid
+from service.zonal.plan import Plan, plan_of
 
 WATCHED: tuple[Index, ...] = tuple(index for index in INDICES.values() if index.watched)
 
@@ -61,6 +62,7 @@ def measure_scene(work: Resources, scene_id: int, generation: int) -> bool:
     scene = _begin(work, scene_id, generation)
     if scene is None:
         return False
+    warm_up()
     started = time.monotonic()
     task = _task(work, scene)
     if task is None:
@@ -133,29 +135,33 @@ def _task(work: Resources, scene: Scene) -> _Task | None:
 def _measured(task: _Task) -> tuple[Measured, Observed, dict[str, float]]:
     """Measure without any session open."""
     started = time.monotonic()
-    grid = measuring_grid(task.source)
-    zones = zones_on(grid, [_on_grid(wkb, grid) for _, _, wkb in task.parcels])
+    grids = grids_of(task.source)
+    plan = _plan(grids, [wkb for _, _, wkb in task.parcels])
     zoned = time.monotonic()
-    roles = tuple(BandRole(band.role) for band in task.source.bands)
-    blocks = read_blocks(task.source, zones.distinct_cells())
+    quality = task.quality
+    strips = read_strips(
+        task.source,
+        plan,
+        may_count=may_count(quality, WATCHED, task.rule) if quality is not None else None,
+    )
     observed = observe(
-        _checked(blocks, task),
-        zones,
-        roles=roles,
+        _checked(strips, task),
+        plan,
+        roles=tuple(BandRole(band.role) for band in task.source.bands),
         indices=WATCHED,
-        quality=task.quality,
+        quality=quality,
         rule=task.rule,
     )
     read = time.monotonic()
     # A parcel is in the footprint if it owns a cell there; one whose outline moved away
     # since keeps a row that says so.
-    owns = np.diff(zones.indptr) > 0
+    owns = plan.own_cells()
     keep = np.array(
         [has or p in task.must_keep for has, (p, _, _) in zip(owns, task.parcels, strict=True)],
         dtype=bool,
     )
     return (
-        _kept(task, observed, keep, grid),
+        _kept(task, observed, keep, grids.measuring),
         observed,
         {"zones": round(zoned - started, 3), "read_and_observe": round(read - zoned, 3)},
     )
@@ -191,22 +197,28 @@ def _kept(task: _Task, observed: Observed, keep: NDArray[np.bool_], grid: Grid) 
     )
 
 
-def _on_grid(wkb: bytes, grid: Grid) -> Any:
-    return project(shapely.from_wkb(wkb), grid.crs)
+def _plan(grids: Grids, outlines: Sequence[bytes]) -> Plan:
+    grid = grids.measuring
+    return plan_of(
+        grid, zones_on(grid, project(shapely.from_wkb(outlines), grid.crs)), grids.others
+    )
 
 
-def _checked(blocks: Iterable[xr.Dataset], task: _Task) -> Iterator[xr.Dataset]:
-    """Pass the blocks on, as long as their layers have no number that they can't have."""
-    for block in blocks:
-        for part, layer in ((QUALITY, task.quality), (SATURATION, task.saturation)):
-            if layer is not None and layer.unknown(block[part].to_numpy()):
+def _checked(strips: Iterable[Gathered], task: _Task) -> Iterator[Gathered]:
+    """Pass the strips on, as long as their layers have no number that they can't have."""
+    for strip in strips:
+        for part, layer, numbers in (
+            (QUALITY, task.quality, strip.classes),
+            (SATURATION, task.saturation, strip.bits),
+        ):
+            if layer is not None and numbers is not None and layer.unknown(numbers.numbers):
                 raise RejectedInput.at(
                     f"/{part}",
                     f"The {part} layer holds values that {layer.id.upper()} can't have. Send the "
                     "product's own layer, not resampled or recoded.",
                     code="wrong-quality-layer",
                 )
-        yield block
+        yield strip
 
 
 def _report(rows: list[Any], observed: Observed, seconds: dict[str, float]) -> dict[str, Any]:

@@ -13,6 +13,7 @@ TOP_LEVEL = {
     "LICENSE",
     "pyproject.toml",
     "service",
+    "benchmarks",
     "migrations",
     "tests",
     "sample_tiles",
