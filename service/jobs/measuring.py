@@ -1,12 +1,11 @@
 """Measuring one scene: pixels in, observations out, nothing half-way."""
 
 import time
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-import shapely
 from numpy.typing import NDArray
 from sqlalchemy.orm import Session
 
@@ -28,10 +27,9 @@ from service.store.observations import Measured, has_write, parcels_to_measure, 
 from service.store.reports import out_of_range, scene_counts
 from service.store.scenes import SceneState, lock_scene, retire_figures
 from service.store.tables import Scene
-from service.tiles.reading import Grids, SceneSource, grids_of, read_strips
-from service.zonal.coverage import MIN_COVERAGE, project, zones_on
+from service.tiles.reading import SceneSource, grids_of, read_strips
+from service.zonal.coverage import MIN_COVERAGE
 from service.zonal.grid import Grid
-from service.zonal.plan import Plan, plan_of
 
 WATCHED: tuple[Index, ...] = tuple(index for index in INDICES.values() if index.watched)
 
@@ -67,7 +65,7 @@ def measure_scene(work: Resources, scene_id: int, generation: int) -> bool:
     task = _task(work, scene)
     if task is None:
         return True
-    measured, observed, seconds = _measured(task)
+    measured, observed, seconds = _measured(work, task)
     with work.sessions.writing() as session:
         row = lock_scene(session, scene_id)
         if row.generation != generation:
@@ -132,11 +130,11 @@ def _task(work: Resources, scene: Scene) -> _Task | None:
     )
 
 
-def _measured(task: _Task) -> tuple[Measured, Observed, dict[str, float]]:
+def _measured(work: Resources, task: _Task) -> tuple[Measured, Observed, dict[str, float]]:
     """Measure without any session open."""
     started = time.monotonic()
     grids = grids_of(task.source)
-    plan = _plan(grids, [wkb for _, _, wkb in task.parcels])
+    plan = work.plans.plan_for(grids, [wkb for _, _, wkb in task.parcels])
     zoned = time.monotonic()
     quality = task.quality
     strips = read_strips(
@@ -194,13 +192,6 @@ def _kept(task: _Task, observed: Observed, keep: NDArray[np.bool_], grid: Grid) 
             for band in task.source.bands
             if band.scaling is not None
         },
-    )
-
-
-def _plan(grids: Grids, outlines: Sequence[bytes]) -> Plan:
-    grid = grids.measuring
-    return plan_of(
-        grid, zones_on(grid, project(shapely.from_wkb(outlines), grid.crs)), grids.others
     )
 
 

@@ -5,15 +5,17 @@ from dataclasses import dataclass
 from service.settings import Settings
 from service.store.sessions import Sessions
 from service.tiles.archive import Archive
+from service.tiles.plans import Plans
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Resources:
-    """Sessions, archive and settings of the running service."""
+    """Sessions, archive, plans and settings of the running service."""
 
     settings: Settings
     sessions: Sessions
     archive: Archive
+    plans: Plans
 
 
 _lent: list[Resources] = []

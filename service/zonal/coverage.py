@@ -121,12 +121,27 @@ def zones_on(grid: Grid, geometries: Sequence[shapely.Geometry] | NDArray[np.obj
     cells, shares, counts = shares_on(grid.shape, outlines, least=MIN_COVERAGE)
     fractions = np.rint(shares / _STEP) * _STEP
     return Zones(
-        indptr=np.concatenate([[0], np.cumsum(counts, dtype=np.int64)]).astype(np.int64),
+        indptr=_indptr(counts),
         cells=cells,
         # Rounding may leave the least fraction just below what it was.
         weights=np.maximum(fractions.astype(np.float32), np.float32(MIN_COVERAGE)),
         totals=np.asarray(shapely.area(outlines), dtype=np.float64),
     )
+
+
+def joined(parts: Sequence[Zones]) -> Zones:
+    """Return the zones of several parts on one grid, one after the other."""
+    counts = [np.diff(part.indptr) for part in parts]
+    return Zones(
+        indptr=_indptr(np.concatenate([np.empty(0, np.int64), *counts])),
+        cells=np.concatenate([np.empty(0, np.int32), *(part.cells for part in parts)]),
+        weights=np.concatenate([np.empty(0, np.float32), *(part.weights for part in parts)]),
+        totals=np.concatenate([np.empty(0, np.float64), *(part.totals for part in parts)]),
+    )
+
+
+def _indptr(counts: NDArray[np.int64]) -> NDArray[np.int64]:
+    return np.concatenate([np.zeros(1, np.int64), np.cumsum(counts, dtype=np.int64)])
 
 
 def shares_on(shape: tuple[int, int], outlines: NDArray[np.object_], *, least: float) -> Cells:

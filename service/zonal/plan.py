@@ -112,18 +112,31 @@ def plan_of(grid: Grid, zones: Zones, others: Iterable[Grid] = ()) -> Plan:
     last[lengths > 0] = zones.cells[zones.indptr[1:][lengths > 0] - 1]
     order = np.argsort(last, kind="stable").astype(np.int64)
     indptr = np.concatenate([[0], np.cumsum(lengths[order], dtype=np.int64)])
-    entries = np.arange(indptr[-1]) + np.repeat(zones.indptr[order] - indptr[:-1], lengths[order])
-    cells, at = _each_once(zones.cells[entries])
+    cells, at = _each_once(_reordered(zones.cells, zones.indptr, order))
     return Plan(
         grid=grid,
         order=order,
         indptr=indptr,
         at=at,
-        weights=zones.weights[entries],
+        weights=_reordered(zones.weights.view(np.int32), zones.indptr, order).view(np.float32),
         totals=zones.totals[order],
         cells=cells,
         views=tuple(_view(grid, cells, other) for other in dict.fromkeys(others) if other != grid),
     )
+
+
+@compiled
+def _reordered(
+    entries: NDArray[np.int32], indptr: NDArray[np.int64], order: NDArray[np.int64]
+) -> NDArray[np.int32]:
+    """Return the entries of zones in another order."""
+    moved = np.empty(len(entries), np.int32)
+    to = 0
+    for zone in order:
+        for at in range(indptr[zone], indptr[zone + 1]):
+            moved[to] = entries[at]
+            to += 1
+    return moved
 
 
 def row_starts(cells: NDArray[np.int32], shape: tuple[int, int]) -> NDArray[np.int64]:
