@@ -34,14 +34,17 @@ class Layer:
     numbers
         As they are stored, each once, shape (own,).
     at
-        int32, shape (cells,): which number each cell takes, -1 for none. None: as many numbers
-        as cells, one to one.
+        int32, shape (cells,): which number each cell takes, counted from `first`, -1 for none.
+        None: as many numbers as cells, one to one.
+    first
+        What the first number is counted as.
     known
         Which numbers were read, shape (own,). None: all. The others are no numbers.
     """
 
     numbers: NDArray[Any]
     at: NDArray[np.int32] | None = None
+    first: int = 0
     known: NDArray[np.bool_] | None = None
 
     def spread(self, own: NDArray[Item], missing: int = 0) -> NDArray[Item]:
@@ -49,8 +52,10 @@ class Layer:
         if self.at is None:
             return own
         if own.dtype.itemsize == 1:
-            return _spread(own.view(np.uint8), self.at, np.uint8(missing)).view(own.dtype)
-        spread: NDArray[Item] = np.append(own, own.dtype.type(missing))[self.at]
+            bytes_of = own.view(np.uint8)
+            return _spread(bytes_of, self.at, self.first, np.uint8(missing)).view(own.dtype)
+        places = np.where(self.at < 0, len(own), self.at - self.first)
+        spread: NDArray[Item] = np.append(own, own.dtype.type(missing))[places]
         return spread
 
 
@@ -135,7 +140,7 @@ class Gathered:
         self, layer: Layer, states: NDArray[np.uint8], bits: Layer, bit: int
     ) -> tuple[Layer, NDArray[np.uint8]]:
         """Mark the numbers whose bit says that they are saturated."""
-        if layer.at is not bits.at:
+        if layer.at is not bits.at or layer.first != bits.first:
             layer, states = _one_to_one(layer, states)
             numbers = bits.spread(bits.numbers)
         else:
@@ -156,9 +161,11 @@ class Gathered:
         band = self._bands.get(role)
         if band is None:
             return np.full(len(places), np.nan)
-        at = _ONE_TO_ONE if band.layer.at is None else band.layer.at
-        scale, offset = band.scaling.scale, band.scaling.offset
-        return _reflectance(band.layer.numbers, band.states, at, places, scale, offset)
+        layer, scaling = band.layer, band.scaling
+        at = _ONE_TO_ONE if layer.at is None else layer.at
+        return _reflectance(
+            layer.numbers, band.states, at, layer.first, places, scaling.scale, scaling.offset
+        )
 
     def narrowed(self, keep: NDArray[np.bool_]) -> "Gathered":
         """Return only some of the cells, as `earlier` ones of what comes next."""
@@ -204,6 +211,7 @@ def _reflectance(
     numbers: NDArray[Any],
     states: NDArray[np.uint8],
     at: NDArray[np.int32],
+    first: int,
     places: NDArray[np.int32],
     scale: float,
     offset: float,
@@ -212,7 +220,7 @@ def _reflectance(
     found = np.empty(len(places), np.float64)
     is_direct = len(at) == 0
     for cell in range(len(places)):
-        own = places[cell] if is_direct else at[places[cell]]
+        own = np.int64(places[cell]) if is_direct else at[places[cell]] - first
         if own < 0 or states[own] != NUMBER:
             found[cell] = np.nan
         else:
@@ -223,10 +231,12 @@ def _reflectance(
 
 
 @compiled
-def _spread(own: NDArray[np.uint8], at: NDArray[np.int32], missing: np.uint8) -> NDArray[np.uint8]:
+def _spread(
+    own: NDArray[np.uint8], at: NDArray[np.int32], first: int, missing: np.uint8
+) -> NDArray[np.uint8]:
     found = np.empty(len(at), np.uint8)
     for cell in range(len(at)):
-        found[cell] = missing if at[cell] < 0 else own[at[cell]]
+        found[cell] = missing if at[cell] < 0 else own[at[cell] - first]
     return found
 
 
@@ -250,8 +260,8 @@ def _joined(before: Layer, layer: Layer) -> Layer:
     count = len(before.numbers)
     at = None
     if layer.at is not None:
-        moved = np.where(layer.at < 0, -1, layer.at + count).astype(np.int32)
-        at = np.concatenate([np.arange(count, dtype=np.int32), moved])
+        moved = np.where(layer.at < 0, -1, layer.at + np.int32(count - layer.first))
+        at = np.concatenate([np.arange(count, dtype=np.int32), moved.astype(np.int32)])
     known = None
     if before.known is not None or layer.known is not None:
         known = np.concatenate([_known(before), _known(layer)])

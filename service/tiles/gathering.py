@@ -135,18 +135,16 @@ class Cursor:
         one to one.
         """
         part = slice(first - self._first, last - self._first)
-        own = None if at is None else np.where(at < 0, -1, at - first).astype(np.int32)
         known = self._known[part]
         return [
-            Layer(numbers=numbers[part], at=own, known=None if known.all() else known)
+            Layer(numbers=numbers[part], at=at, first=first, known=None if known.all() else known)
             for numbers in self._numbers
         ]
 
     def near_cloud(self, first: int, last: int, at: NDArray[np.int32] | None) -> NDArray[np.bool_]:
         """Return which wanted cells are near cloud, as `layers`."""
         part = slice(first - self._first, last - self._first)
-        own = None if at is None else np.where(at < 0, -1, at - first).astype(np.int32)
-        return Layer(numbers=self._near[part], at=own).spread(self._near[part])
+        return Layer(numbers=self._near[part], at=at, first=first).spread(self._near[part])
 
     def _drop(self, first: int) -> None:
         gone = min(first - self._first, self._numbers.shape[1])

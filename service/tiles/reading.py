@@ -26,7 +26,7 @@ from service.tiles.gathering import BUFFER_BYTES, Cursor, OpenFile
 from service.tiles.intake import Header, check_together, inspect, open_raster
 from service.tiles.scene_source import BandSource, SceneSource
 from service.zonal.grid import Grid
-from service.zonal.plan import Plan, row_starts
+from service.zonal.plan import Plan, View, row_starts
 
 __all__ = ["BandSource", "Grids", "SceneSource", "grids_of", "measuring_grid", "read_strips"]
 
@@ -92,10 +92,11 @@ def read_strips(
     """
     with _opened(source) as files:
         buffer = np.empty(BUFFER_BYTES, dtype=np.uint8)
-        passages = [_Passage.through(file, plan, buffer) for file in files]
         edges = _strip_edges(plan, [file.header for file in files], strip_cells)
-        for passage in passages:
-            passage.look_ahead(edges)
+        spans = {
+            grid: _spans(plan.view(grid), edges) for grid in {file.header.grid for file in files}
+        }
+        passages = [_Passage.through(file, plan, spans[file.header.grid], buffer) for file in files]
         for place, (first, last) in enumerate(pairwise(edges)):
             strip = Gathered(first, last)
             counts = None
@@ -108,7 +109,11 @@ def read_strips(
 
 @dataclass(slots=True, kw_only=True, eq=False)
 class _Passage:
-    """One file's way through the strips."""
+    """One file's way through the strips.
+
+    `spans` says which of the file's own cells each strip takes, `keeps` from which on one is
+    still wanted by that strip or a later one.
+    """
 
     cursor: Cursor
     at: NDArray[np.int32] | None
@@ -116,28 +121,22 @@ class _Passage:
     keeps: list[int]
 
     @classmethod
-    def through(cls, file: OpenFile, plan: Plan, buffer: NDArray[np.uint8]) -> "_Passage":
+    def through(
+        cls, file: OpenFile, plan: Plan, spans: list[tuple[int, int]], buffer: NDArray[np.uint8]
+    ) -> "_Passage":
         view = plan.view(file.header.grid)
         cells = plan.cells if view is None else view.cells
-        at = None if view is None else view.at
-        return cls(cursor=Cursor(file, cells, buffer), at=at, spans=[], keeps=[])
-
-    def look_ahead(self, edges: list[int]) -> None:
-        """Note which of the file's cells each strip takes, and which no later one does."""
-        for first, last in pairwise(edges):
-            self.spans.append(self._span(first, last))
-        keep = max((last for _, last in self.spans), default=0)
-        self.keeps = [keep]
-        for first, last in reversed(self.spans):
+        keep = max((last for _, last in spans), default=0)
+        keeps = [keep]
+        for first, last in reversed(spans):
             keep = min(keep, first) if last > first else keep
-            self.keeps.insert(0, keep)
-
-    def _span(self, first: int, last: int) -> tuple[int, int]:
-        if self.at is None:
-            return first, last
-        there = self.at[first:last]
-        there = there[there >= 0]
-        return (int(there.min()), int(there.max()) + 1) if len(there) else (0, 0)
+            keeps.insert(0, keep)
+        return cls(
+            cursor=Cursor(file, cells, buffer),
+            at=None if view is None else view.at,
+            spans=spans,
+            keeps=keeps,
+        )
 
     def give(self, strip: Gathered, place: int, counts: NDArray[np.bool_] | None) -> None:
         """Add this file's layers to a strip; `counts` says which cells may count, if known."""
@@ -176,6 +175,19 @@ def _counting(strip: Gathered, may_count: MayCount) -> NDArray[np.bool_] | None:
         return None
     counts = strip.classes.spread(may_count(strip.classes.numbers))
     return counts if strip.near_cloud is None else counts & ~strip.near_cloud
+
+
+def _spans(view: View | None, edges: list[int]) -> list[tuple[int, int]]:
+    """Return which cells of a grid each strip takes: the first, and the one after the last."""
+    spans = []
+    for first, last in pairwise(edges):
+        if view is None:
+            spans.append((first, last))
+            continue
+        there = view.at[first:last]
+        there = there[there >= 0]
+        spans.append((int(there.min()), int(there.max()) + 1) if len(there) else (0, 0))
+    return spans
 
 
 def _add(strip: Gathered, source: BandSource, layer: Layer) -> None:

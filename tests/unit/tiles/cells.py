@@ -67,6 +67,7 @@ def layer_image(
         assert layer is not None
         if layer.at is None:
             return layer.numbers.astype(float)
-        return np.append(layer.numbers.astype(float), np.nan)[layer.at]
+        places = np.where(layer.at < 0, len(layer.numbers), layer.at - layer.first)
+        return np.append(layer.numbers.astype(float), np.nan)[places]
 
     return image(strips, plan, numbers)
