@@ -7,7 +7,7 @@ from typing import Final
 
 import typer
 
-from service.cli import alerts, demo, keys, parcels, serve
+from service.cli import alerts, bench, demo, keys, parcels, serve
 from service.errors import (
     Conflict,
     FurrowlightError,
@@ -41,6 +41,7 @@ app.command("serve")(serve.serve)
 app.add_typer(keys.app, name="keys")
 app.add_typer(alerts.app, name="alerts")
 app.add_typer(parcels.app, name="parcels")
+app.add_typer(bench.app, name="bench")
 
 
 def main() -> None:

@@ -23,8 +23,14 @@ from service.spectral.quality_bits import SaturationLayer
 from service.spectral.roles import BandRole
 from service.store.judging import want_judging_of_scenes
 from service.store.looks import observations_of_scene
-from service.store.observations import Measured, has_write, parcels_to_measure, record
-from service.store.reports import out_of_range, scene_counts
+from service.store.observations import (
+    Measured,
+    count_writes,
+    has_write,
+    parcels_to_measure,
+    record,
+)
+from service.store.reports import SceneFigures, figures_of, out_of_range, scene_counts
 from service.store.scenes import SceneState, lock_scene, retire_figures
 from service.store.tables import Scene
 from service.tiles.reading import SceneSource, grids_of, read_strips
@@ -75,7 +81,7 @@ def measure_scene(work: Resources, scene_id: int, generation: int) -> bool:
             replaced = _supersede(session, row)
             want_judging_of_scenes(session, [row, *replaced], work.settings.season_starts)
         seconds["total"] = round(time.monotonic() - started, 3)
-        row.report = _report(list(observations_of_scene(session, scene_id)), observed, seconds)
+        row.report = _report(_figures_held(session, scene_id, measured), observed, seconds)
         row.progress = 0.9
     return True
 
@@ -212,13 +218,23 @@ def _checked(strips: Iterable[Gathered], task: _Task) -> Iterator[Gathered]:
         yield strip
 
 
-def _report(rows: list[Any], observed: Observed, seconds: dict[str, float]) -> dict[str, Any]:
+def _figures_held(session: Session, scene_id: int, measured: Measured) -> list[SceneFigures]:
+    """Return the figures of all parcels in a scene: those just written, if there are no others."""
+    if count_writes(session, scene_id) > 1:
+        return figures_of(observations_of_scene(session, scene_id))
+    rule = str(measured.recipe["rule"])
+    return [SceneFigures(columns=measured.columns, rule=rule, figures=measured.figures)]
+
+
+def _report(
+    held: list[SceneFigures], observed: Observed, seconds: dict[str, float]
+) -> dict[str, Any]:
     normalised = [i for i in observed.measured if INDICES[i].normalised]
-    leaving = out_of_range(rows, normalised)
+    leaving = out_of_range(held, normalised)
     indices: dict[str, dict[str, Any]] = {
         index_id: {"state": "measured", "parcels_out_of_range": leaving.get(index_id, 0)}
         for index_id in observed.measured
     }
     for index_id, reason in observed.skipped.items():
         indices[index_id] = {"state": "skipped", "reason": reason}
-    return {**scene_counts(rows), "indices": indices, "seconds": seconds}
+    return {**scene_counts(held), "indices": indices, "seconds": seconds}

@@ -89,6 +89,12 @@ def _measured_outlines(session: Session, scene: Scene) -> dict[int, int]:
     return dict(session.execute(query).all())
 
 
+def count_writes(session: Session, scene_id: int) -> int:
+    """Return how many current writes a scene has."""
+    query = select(func.count()).where(Write.scene_id == scene_id, Write.closed_at.is_(None))
+    return session.scalar(query) or 0
+
+
 def has_write(session: Session, scene: Scene, generation: int) -> bool:
     """Whether this generation's observations are there already."""
     query = select(Write.id).where(Write.scene_id == scene.id, Write.generation == generation)
