@@ -131,7 +131,8 @@ def clip_each(source: SceneSource, outlines: Sequence[shapely.Polygon]) -> None:
             pixels = {}
             for band in source.bands:
                 if band.role in index.roles:
-                    with rioxarray.open_rasterio(band.path) as raster:
+                    opened: Any = rioxarray.open_rasterio(band.path)
+                    with opened as raster:
                         cut = raster.rio.write_nodata(0).rio.clip([outline], CRS, all_touched=True)
                         pixels[str(band.role)] = cut.to_numpy()[0] * 1e-4 - 0.1
             shapes = {array.shape for array in pixels.values()}
