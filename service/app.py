@@ -44,6 +44,7 @@ from service.settings import Settings
 from service.store.sessions import Sessions, migrate, open_engine
 from service.tiles.archive import Archive
 from service.tiles.assets import Assets
+from service.tiles.plans import Plans
 
 _ROUTERS = (
     keys,
@@ -83,7 +84,10 @@ def open_resources(settings: Settings) -> Resources:
     engine = open_engine(settings.app_url)
     migrate(engine, lock_folder=settings.data)
     return Resources(
-        settings=settings, sessions=Sessions(engine), archive=Archive(settings.data / "files")
+        settings=settings,
+        sessions=Sessions(engine),
+        archive=Archive(settings.data / "files"),
+        plans=Plans(settings.data / "plans", limit_bytes=settings.plan_limit_bytes),
     )
 
 

@@ -1,7 +1,7 @@
 """From a scene's cells to each zone's figures.
 
-`observe` takes the blocks of a scene as `tiles` reads them, the zones of the parcels on the
-same grid, and the indices to measure. It answers with one row of figures per zone: how well
+`observe` takes the numbers of a scene as `tiles` gathers them, the plan of the parcels' zones
+on its grids, and the indices to measure. It answers with one row of figures per zone: how well
 the zone was seen (its look), the statistics of each index, mean and spread of each band.
 
 A cell counts where it is usable: the quality layer's rule says so, if there is a layer, and
@@ -10,20 +10,21 @@ that band is unknown. An index may name a rule of its own; the scene then has a 
 rule beside the one by its own.
 """
 
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Final
+from functools import reduce
+from typing import Any, Final
 
 import numpy as np
-import xarray as xr
 from numpy.typing import NDArray
 
-from service.spectral.gathered import NUMBER, SATURATED, Gathered
+from service.spectral.gathered import Gathered
 from service.spectral.indices import Index
+from service.spectral.marks import BITS, USABLE, cell_marks, usable_by_any
 from service.spectral.quality import Loss, QualityLayer
 from service.spectral.roles import BandRole
-from service.zonal.coverage import Zones
-from service.zonal.statistics import mean_and_sd, narrowed, summarise, sums
+from service.zonal.plan import Plan
+from service.zonal.statistics import mean_and_sd, summarise, sums_by_bit
 
 LOOK_FIGURES: Final = (
     "valid_share",
@@ -38,8 +39,8 @@ LOOK_FIGURES: Final = (
 INDEX_STATS: Final = ("mean", "sd", "min", "p10", "p50", "p90", "max", "pixels")
 BAND_STATS: Final = ("mean", "sd")
 
-# About what the arrays of one batch need to stay in a processor's cache and below 50 MB.
-_CELLS_AT_ONCE: Final = 200_000
+# What the arrays of one batch need to stay in a processor's cache.
+_CELLS_AT_ONCE: Final = 50_000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -85,9 +86,21 @@ def columns_for(
     return (*look, *by_index, *by_band)
 
 
+def may_count(
+    quality: QualityLayer, indices: Sequence[Index], rule: str
+) -> Callable[[NDArray[Any]], NDArray[np.bool_]]:
+    """Return what tells, by numbers of the quality layer, which cells any index could use.
+
+    Of the others nothing is asked but whether some band has a number there.
+    """
+    rules = _all_rules(rule, _own_rules(indices, quality, rule))
+
+    return lambda numbers: usable_by_any(numbers, quality, rules)
+
+
 def observe(
-    blocks: Iterable[xr.Dataset],
-    zones: Zones,
+    strips: Iterable[Gathered],
+    plan: Plan,
     *,
     roles: Sequence[BandRole],
     indices: Sequence[Index],
@@ -98,16 +111,12 @@ def observe(
 
     Parameters
     ----------
-    blocks
-        Parts of the measuring grid with dimensions (y, x), in any order and of any size, with
-        attributes ``row0``, ``col0`` and ``grid_cols``. Variables are band roles with the
-        stored numbers and attributes ``scale``, ``offset``, ``nodata``, ``saturated``, and
-        ``quality`` with attribute ``nodata``. Optional variables: ``saturation``, whose bit
-        ``saturation_bit`` (an attribute of a band) says that the band is saturated there, and
-        ``near_cloud``, true where cells of clear surfaces are to count as cloud. A cell that
-        no block holds has no data.
-    zones
-        The parcels on the measuring grid.
+    strips
+        The scene's numbers in the cells of the plan, in ascending order, each cell once. A zone
+        is measured when its last cell has come, and what no zone waits for is let go, so that
+        memory goes with a strip. A zone whose last cell does not come has no data.
+    plan
+        The parcels on the grids of the scene.
     roles
         The bands of the scene.
     indices
@@ -121,8 +130,9 @@ def observe(
     Returns
     -------
     Observed
-        One row per zone, in the order of `zones`. The denominator of every share of a look is
-        the whole zone: what lies off the grid, and a zone without area, is lost to ``nodata``.
+        One row per zone, in the order in which the plan's boundaries were given. The
+        denominator of every share of a look is the whole zone: what lies off the grid, and a
+        zone without area, is lost to ``nodata``.
         Shares of valid, cloud, shadow, snow, nodata and saturation add up to 1, unless the
         rule drops clear surfaces too, which are lost to none of these.
 
@@ -130,31 +140,29 @@ def observe(
     -----
     Numbers become reflectance, and reflectance an index, in float64. An index is rounded to
     float32 before its statistics, so that equal ratios of different numbers are equal values.
-    The figures do not depend on how the scene is cut into blocks, nor on the company of
+    The figures do not depend on how the scene is cut into strips, nor on the company of
     other zones.
     """
     fed = _fed(indices, roles)
-    own_rules = _own_rules(fed, quality, rule)
-    columns = columns_for(roles, indices, rule, own_rules)
-    rules = _all_rules(rule, own_rules)
-    scene = Gathered(zones.distinct_cells(), roles, with_classes=quality is not None)
-    for block in blocks:
-        scene.take(block)
-    figures = np.full((len(zones), len(columns)), np.nan, dtype=np.float32)
-    for batch in _batches(zones, scene):
-        judged = {each: _judge(batch, scene, quality, each) for each in rules}
-        usable = _narrowed(batch, judged, scene)
-        parts = [figure for each in rules for figure in _look_figures(batch, judged[each])]
-        for index in fed:
-            parts += _index_figures(index, usable[own_rules.get(index.id, rule)])
-        parts += _band_figures(roles, usable[rule])
-        figures[batch.first : batch.last] = np.stack(parts, axis=1)
+    task = _Task(
+        roles=tuple(roles),
+        indices=fed,
+        quality=quality,
+        rule=rule,
+        own_rules=_own_rules(fed, quality, rule),
+    )
+    columns = columns_for(roles, indices, rule, task.own_rules)
+    figures = np.full((len(plan), len(columns)), np.nan, dtype=np.float32)
+    for held, first, last in _ready(strips, plan):
+        marks = {each: cell_marks(held, quality, each) for each in task.rules}
+        for batch in _batches(plan, first, last, held):
+            figures[batch.rows] = np.stack(_figures(task, batch, held, marks), axis=1)
     return Observed(
         columns=columns,
         figures=figures,
         measured=tuple(index.id for index in fed),
         skipped=_skipped(indices, roles),
-        rules=own_rules,
+        rules=task.own_rules,
     )
 
 
@@ -188,148 +196,155 @@ def _skipped(indices: Sequence[Index], roles: Sequence[BandRole]) -> dict[str, s
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Batch:
-    """Some neighbouring zones: where their cells are among the gathered ones."""
+class _Task:
+    """What there is to measure of every zone."""
 
-    first: int
-    last: int
-    at: NDArray[np.intp]
+    roles: tuple[BandRole, ...]
+    indices: tuple[Index, ...]
+    quality: QualityLayer | None
+    rule: str
+    own_rules: Mapping[str, str]
+
+    @property
+    def rules(self) -> tuple[str, ...]:
+        return _all_rules(self.rule, self.own_rules)
+
+
+def _ready(strips: Iterable[Gathered], plan: Plan) -> Iterator[tuple[Gathered, int, int]]:
+    """Yield what is held strip by strip, and the zones whose last cell has come with it."""
+    last = plan.last_cells
+    done = 0
+    left = Gathered(0, 0)
+    for strip in strips:
+        held = strip.after(left)
+        stop = int(np.searchsorted(last, held.last))
+        yield held, done, stop
+        done = stop
+        left = held.narrowed(_wanted(plan, done, held)) if done < len(plan) else left
+    if done < len(plan):
+        yield Gathered(0, len(plan.cells)), done, len(plan)
+
+
+def _wanted(plan: Plan, done: int, held: Gathered) -> NDArray[np.bool_]:
+    """Return which of the cells held belong to a zone that waits for more."""
+    wanted = np.zeros(len(held), dtype=np.bool_)
+    # A zone that waits has cells, so its first is at the start of its entries.
+    begun = np.flatnonzero(plan.at[plan.indptr[done:-1]] < held.last) + done
+    for zone in begun.tolist():
+        at = plan.at[plan.indptr[zone] : plan.indptr[zone + 1]]
+        wanted[held.places(at[: np.searchsorted(at, np.int32(held.last))])] = True
+    return wanted
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Batch:
+    """Some zones: which rows of the figures they have, where their cells are among those held."""
+
+    rows: NDArray[np.int64]
+    places: NDArray[np.int32]
     weights: NDArray[np.float32]
     indptr: NDArray[np.int64]
     totals: NDArray[np.float64]
 
-    def narrowed_to(self, counts: NDArray[np.bool_]) -> "_Batch":
-        """Return the batch with only the cells where `counts` is true."""
-        return _Batch(
-            first=self.first,
-            last=self.last,
-            at=self.at[counts],
-            weights=self.weights[counts],
-            indptr=narrowed(self.indptr, counts),
-            totals=self.totals,
-        )
 
-
-def _batches(zones: Zones, scene: Gathered) -> Iterator[_Batch]:
-    """Cut the zones into batches of some cells; a zone is never cut."""
-    first = 0
-    while first < len(zones):
-        limit = zones.indptr[first] + _CELLS_AT_ONCE
-        last = max(first + 1, int(np.searchsorted(zones.indptr, limit, side="right")) - 1)
-        start, stop = zones.indptr[first], zones.indptr[last]
+def _batches(plan: Plan, first: int, last: int, held: Gathered) -> Iterator[_Batch]:
+    """Cut zones into batches of some cells; a zone is never cut."""
+    while first < last:
+        limit = plan.indptr[first] + _CELLS_AT_ONCE
+        reach = int(np.searchsorted(plan.indptr, limit, side="right")) - 1
+        stop = min(max(first + 1, reach), last)
+        entries = slice(plan.indptr[first], plan.indptr[stop])
         yield _Batch(
-            first=first,
-            last=last,
-            at=np.searchsorted(scene.cells, zones.cells[start:stop]),
-            weights=zones.weights[start:stop],
-            indptr=zones.indptr[first : last + 1] - start,
-            totals=zones.totals[first:last],
+            rows=plan.order[first:stop],
+            places=held.places(plan.at[entries]),
+            weights=plan.weights[entries],
+            indptr=plan.indptr[first : stop + 1] - plan.indptr[first],
+            totals=plan.totals[first:stop],
         )
-        first = last
+        first = stop
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Cells:
-    """Which cells of a batch are usable, why the others are not, and which are water."""
-
-    usable: NDArray[np.bool_]
-    lost: Mapping[Loss, NDArray[np.bool_] | None]
-    water: NDArray[np.bool_] | None
-
-
-def _judge(batch: _Batch, scene: Gathered, quality: QualityLayer | None, rule: str) -> _Cells:
-    states = scene.states[:, batch.at]
-    seen = (states == NUMBER).any(axis=0)
-    saturated = ~seen & (states == SATURATED).any(axis=0)
-    if quality is None:
-        lost: dict[Loss, NDArray[np.bool_] | None] = dict.fromkeys(Loss)
-        return _Cells(
-            usable=seen,
-            lost=lost | {Loss.NODATA: ~seen & ~saturated, Loss.SATURATION: saturated},
-            water=None,
-        )
-    if scene.classes is None:
-        judged_seen = np.zeros(len(batch.at), dtype=bool)
-        classes = np.zeros(len(batch.at), dtype=np.uint8)
-    else:
-        judged_seen = seen & scene.classed[batch.at]
-        classes = scene.classes[batch.at]
-    judged = quality.judge(classes, rule)
-    lost_any = np.any(list(judged.lost.values()), axis=0)
-    beside = judged_seen & scene.near_cloud[batch.at] & ~lost_any
-    reasons = {loss: judged_seen & judged.lost[loss] for loss in Loss}
-    reasons[Loss.CLOUD] |= beside
-    reasons[Loss.SATURATION] |= saturated
-    reasons[Loss.NODATA] |= ~judged_seen & ~saturated
-    return _Cells(
-        usable=judged_seen & judged.usable & ~beside,
-        lost=dict(reasons),
-        water=judged_seen & judged.water,
-    )
+def _figures(
+    task: _Task, batch: _Batch, held: Gathered, marks: Mapping[str, NDArray[np.uint8]]
+) -> list[NDArray[np.float64]]:
+    """Return the figures of a batch by column, each of shape (zones of the batch,)."""
+    own = {rule: of_cells[batch.places] for rule, of_cells in marks.items()}
+    figures: list[NDArray[np.float64]] = []
+    for rule in task.rules:
+        figures += _look_figures(batch, own[rule], is_judged=task.quality is not None)
+    usable = _Usable(batch, own, held)
+    for index in task.indices:
+        figures += usable.index_figures(index, task.own_rules.get(index.id, task.rule))
+    for role in task.roles:
+        figures += usable.band_figures(role, task.rule)
+    return figures
 
 
-def _look_figures(batch: _Batch, cells: _Cells) -> list[NDArray[np.float64]]:
+def _look_figures(
+    batch: _Batch, marks: NDArray[np.uint8], *, is_judged: bool
+) -> list[NDArray[np.float64]]:
     """Return the figures of `LOOK_FIGURES`, each of shape (zones of the batch,)."""
     area = np.where(batch.totals > 0, batch.totals, 1.0)
+    sums = sums_by_bit(marks, batch.weights, batch.indptr)
 
-    def weight_of(which: NDArray[np.bool_]) -> NDArray[np.float64]:
-        return sums(np.where(which, batch.weights, np.float32(0)), batch.indptr)
-
-    def share_of(which: NDArray[np.bool_] | None) -> NDArray[np.float64]:
-        if which is None:
-            return np.full(len(area), np.nan)
+    def share_of(what: Loss | str) -> NDArray[np.float64]:
         # The whole zone's area and its cells' sum are rounded apart from each other.
-        return np.minimum(weight_of(which) / area, 1.0)
+        return np.minimum(sums[:, BITS[what]] / area, 1.0)
 
-    off_grid = np.maximum(area - sums(batch.weights, batch.indptr), 0.0) / area
-    shares = {loss: share_of(which) for loss, which in cells.lost.items()}
+    def told(what: Loss | str) -> NDArray[np.float64]:
+        return share_of(what) if is_judged else np.full(len(area), np.nan)
+
+    off_grid = np.maximum(area - sums[:, -1], 0.0) / area
     return [
-        share_of(cells.usable),
-        weight_of(cells.usable),
-        shares[Loss.CLOUD],
-        shares[Loss.SHADOW],
-        shares[Loss.SNOW],
-        np.minimum(shares[Loss.NODATA] + off_grid, 1.0),
-        shares[Loss.SATURATION],
-        share_of(cells.water),
+        share_of("usable"),
+        sums[:, BITS["usable"]],
+        told(Loss.CLOUD),
+        told(Loss.SHADOW),
+        told(Loss.SNOW),
+        np.minimum(share_of(Loss.NODATA) + off_grid, 1.0),
+        share_of(Loss.SATURATION),
+        told("water"),
     ]
 
 
 class _Usable:
-    """The cells of a batch that one rule keeps, with their reflectance as it is asked for."""
+    """The cells of a batch that some rule keeps, with their reflectance as it is asked for."""
 
-    def __init__(self, batch: _Batch, usable: NDArray[np.bool_], scene: Gathered) -> None:
-        self.which = usable
-        self.batch = batch.narrowed_to(usable)
-        self._scene = scene
+    def __init__(
+        self, batch: _Batch, marks: Mapping[str, NDArray[np.uint8]], held: Gathered
+    ) -> None:
+        by_rule = {rule: (own & USABLE).astype(np.bool_) for rule, own in marks.items()}
+        some = reduce(np.logical_or, by_rule.values())
+        before = np.concatenate([[0], np.cumsum(some, dtype=np.int64)])
+        self._indptr = before[batch.indptr]
+        self._places, self._weights = batch.places[some], batch.weights[some]
+        self._counts = {rule: own[some] for rule, own in by_rule.items()}
+        self._held = held
         self._bands: dict[BandRole, NDArray[np.float64]] = {}
 
-    def reflectance(self, role: BandRole) -> NDArray[np.float64]:
-        """Return a band's reflectance in these cells; NaN where it has no number."""
+    def index_figures(self, index: Index, rule: str) -> list[NDArray[np.float64]]:
+        """Return the figures of `INDEX_STATS`, each of shape (zones of the batch,)."""
+        values = np.empty(len(self._places), dtype=np.float32)
+        for start in range(0, len(values), _CELLS_AT_ONCE):
+            part = slice(start, start + _CELLS_AT_ONCE)
+            bands = {role.value: self._reflectance(role, part) for role in index.roles}
+            values[part] = index.compute(**bands)
+        found = summarise(values, self._weights, self._indptr, self._counts[rule])
+        quantiles = (found.p10, found.p50, found.p90)
+        return [found.mean, found.sd, found.min, *quantiles, found.max, found.weight]
+
+    def band_figures(self, role: BandRole, rule: str) -> list[NDArray[np.float64]]:
+        """Return the figures of `BAND_STATS`, each of shape (zones of the batch,)."""
+        values = self._reflectance(role, slice(None))
+        return list(mean_and_sd(values, self._weights, self._indptr, self._counts[rule]))
+
+    def _reflectance(self, role: BandRole, part: slice) -> NDArray[np.float64]:
+        """Return a band's reflectance in some cells; NaN where it has no number.
+
+        Kept only while all the cells fit into one part: a zone may be as large as a tile.
+        """
+        if len(self._places) > _CELLS_AT_ONCE:
+            return self._held.reflectance(role, self._places[part])
         if role not in self._bands:
-            self._bands[role] = self._scene.reflectance(role, self.batch.at)
+            self._bands[role] = self._held.reflectance(role, self._places)
         return self._bands[role]
-
-
-def _narrowed(batch: _Batch, judged: Mapping[str, _Cells], scene: Gathered) -> dict[str, _Usable]:
-    """Return the usable cells by rule; rules that keep the same cells share them."""
-    found: dict[str, _Usable] = {}
-    for rule, cells in judged.items():
-        same = (own for own in found.values() if np.array_equal(own.which, cells.usable))
-        found[rule] = next(same, None) or _Usable(batch, cells.usable, scene)
-    return found
-
-
-def _index_figures(index: Index, cells: _Usable) -> list[NDArray[np.float64]]:
-    """Return the figures of `INDEX_STATS`, each of shape (zones of the batch,)."""
-    values = index.compute(**{role.value: cells.reflectance(role) for role in index.roles})
-    summary = summarise(values.astype(np.float32), cells.batch.weights, cells.batch.indptr)
-    quantiles = (summary.p10, summary.p50, summary.p90)
-    return [summary.mean, summary.sd, summary.min, *quantiles, summary.max, summary.weight]
-
-
-def _band_figures(roles: Sequence[BandRole], cells: _Usable) -> Iterator[NDArray[np.float64]]:
-    """Yield the figures of `BAND_STATS` band by band."""
-    for role in roles:
-        batch = cells.batch
-        yield from mean_and_sd(cells.reflectance(role), batch.weights, batch.indptr)

@@ -44,6 +44,11 @@ class Settings(BaseSettings):
         ge=0,
         description="Largest size of the scene archive; uploads get 503 above it. 0: no limit.",
     )
+    plan_limit_bytes: int = Field(
+        default=4 * GIBIBYTE,
+        ge=0,
+        description="Largest size of the plans kept between scenes: which cells each parcel has.",
+    )
     scene_upload_limit_bytes: int = Field(
         default=2 * GIBIBYTE, gt=0, description="Largest upload of one scene."
     )

@@ -1,6 +1,7 @@
 """Fixtures that all tests share: real databases, and the service on each of them."""
 
 import logging
+import os
 import shutil
 import stat
 import tempfile
@@ -14,6 +15,7 @@ import pytest
 from dbos import DBOS
 from sqlalchemy import create_engine, make_url, text
 
+from service.jobs.warming import keep_compiled_in
 from service.settings import Settings
 from service.store.sessions import Sessions, migrate, open_engine
 from tests.serving import Service, serving
@@ -23,6 +25,12 @@ from tests.serving import Service, serving
 logging.getLogger("rasterio").setLevel(logging.ERROR)
 hypothesis.settings.register_profile("furrowlight", deadline=None)
 hypothesis.settings.load_profile("furrowlight")
+
+# Compiled once for all tests and their child processes; without, each would for itself.
+os.environ.setdefault(
+    "NUMBA_CACHE_DIR", str(Path(tempfile.gettempdir()) / "furrowlight-tests-compiled")
+)
+keep_compiled_in(Path(os.environ["NUMBA_CACHE_DIR"]))
 
 
 @pytest.fixture(scope="session")

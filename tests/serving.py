@@ -18,6 +18,7 @@ from pyproj import Transformer
 
 from service.app import create_app
 from service.clock import now
+from service.jobs.warming import warm_up
 from service.settings import Settings
 from service.store.keys import Scope, add_key
 from service.store.sessions import Sessions
@@ -108,6 +109,8 @@ class _Server(uvicorn.Server):
 @contextmanager
 def serving(settings: Settings) -> Iterator[Service]:
     """Serve a deployment in this process, on a real loopback socket."""
+    # A test that waits for a scene does not wait for the compiler too.
+    warm_up()
     app = create_app(settings)
     listener = socket.create_server(("127.0.0.1", 0))
     server = _Server(uvicorn.Config(app, log_config=None, access_log=False))

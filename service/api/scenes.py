@@ -29,7 +29,7 @@ from service.store.batches import in_batches
 from service.store.judging import want_judging_of_scenes
 from service.store.looks import observations_of_scene
 from service.store.parcels import is_within
-from service.store.reports import LOSSES, ParcelInScene, parcel_in_scene, scene_counts
+from service.store.reports import LOSSES, ParcelInScene, figures_of, parcel_in_scene, scene_counts
 from service.store.scenes import (
     SceneState,
     get_scene,
@@ -115,7 +115,7 @@ def _out(session: Session, row: Scene, caller: Caller) -> SceneOut:
     if caller.holdings is not None and report:
         # Counts of all parcels would tell of those that the key may not see.
         own = _within(session, row, caller.holdings)
-        report |= scene_counts(parcel.observed for parcel in own)
+        report |= scene_counts(figures_of(parcel.observed for parcel in own))
     replaced = session.get(Scene, row.supersedes_id) if row.supersedes_id else None
     return SceneOut(
         ref=row.ref,

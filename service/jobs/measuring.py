@@ -6,8 +6,6 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-import shapely
-import xarray as xr
 from numpy.typing import NDArray
 from sqlalchemy.orm import Session
 
@@ -16,8 +14,9 @@ from service.clock import now
 from service.errors import RejectedInput
 from service.jobs.resources import Resources
 from service.jobs.sources import scene_source
-from service.observe import Observed, observe
-from service.spectral.gathered import QUALITY, SATURATION
+from service.jobs.warming import warm_up
+from service.observe import Observed, may_count, observe
+from service.spectral.gathered import QUALITY, SATURATION, Gathered
 from service.spectral.indices import INDICES, Index
 from service.spectral.quality import QualityLayer
 from service.spectral.quality_bits import SaturationLayer
@@ -25,13 +24,19 @@ from service.spectral.roles import BandRole
 from service.spectral.sensors import Sensor
 from service.store.judging import want_judging_of_scenes
 from service.store.looks import observations_of_scene
-from service.store.observations import Measured, has_write, parcels_to_measure, record
-from service.store.reports import out_of_range, scene_counts
+from service.store.observations import (
+    Measured,
+    count_writes,
+    has_write,
+    parcels_to_measure,
+    record,
+)
+from service.store.reports import SceneFigures, figures_of, out_of_range, scene_counts
 from service.store.scenes import SceneState, lock_scene, retire_figures
 from service.store.sensors import sensor_of_scene
 from service.store.tables import Scene
-from service.tiles.reading import SceneSource, measuring_grid, read_blocks
-from service.zonal.coverage import MIN_COVERAGE, project, zones_on
+from service.tiles.reading import SceneSource, grids_of, read_strips
+from service.zonal.coverage import MIN_COVERAGE
 from service.zonal.grid import Grid
 
 WATCHED: tuple[Index, ...] = tuple(index for index in INDICES.values() if index.watched)
@@ -64,11 +69,12 @@ def measure_scene(work: Resources, scene_id: int, generation: int) -> bool:
     scene = _begin(work, scene_id, generation)
     if scene is None:
         return False
+    warm_up()
     started = time.monotonic()
     task = _task(work, scene)
     if task is None:
         return True
-    measured, observed, seconds = _measured(task)
+    measured, observed, seconds = _measured(work, task)
     with work.sessions.writing() as session:
         row = lock_scene(session, scene_id)
         if row.generation != generation:
@@ -78,8 +84,8 @@ def measure_scene(work: Resources, scene_id: int, generation: int) -> bool:
             replaced = _supersede(session, row)
             want_judging_of_scenes(session, [row, *replaced], work.settings.season_starts)
         seconds["total"] = round(time.monotonic() - started, 3)
-        rows = list(observations_of_scene(session, scene_id))
-        row.report = _report(task, rows, observed, seconds)
+        held = _figures_held(session, scene_id, measured)
+        row.report = _report(task, held, observed, seconds)
         row.progress = 0.9
     return True
 
@@ -140,32 +146,36 @@ def _profile(sensor: Sensor) -> dict[str, Any] | None:
     return {"sensor": sensor.id, "version": sensor.version} if sensor.version else None
 
 
-def _measured(task: _Task) -> tuple[Measured, Observed, dict[str, float]]:
+def _measured(work: Resources, task: _Task) -> tuple[Measured, Observed, dict[str, float]]:
     """Measure without any session open."""
     started = time.monotonic()
-    grid = measuring_grid(task.source)
-    zones = zones_on(grid, [_on_grid(wkb, grid) for _, _, wkb in task.parcels])
+    grids = grids_of(task.source)
+    plan = work.plans.plan_for(grids, [wkb for _, _, wkb in task.parcels])
     zoned = time.monotonic()
-    roles = tuple(BandRole(band.role) for band in task.source.bands)
-    blocks = read_blocks(task.source, zones.distinct_cells())
+    quality = task.quality
+    strips = read_strips(
+        task.source,
+        plan,
+        may_count=may_count(quality, WATCHED, task.rule) if quality is not None else None,
+    )
     observed = observe(
-        _checked(blocks, task),
-        zones,
-        roles=roles,
+        _checked(strips, task),
+        plan,
+        roles=tuple(BandRole(band.role) for band in task.source.bands),
         indices=WATCHED,
-        quality=task.quality,
+        quality=quality,
         rule=task.rule,
     )
     read = time.monotonic()
     # A parcel is in the footprint if it owns a cell there; one whose outline moved away
     # since keeps a row that says so.
-    owns = np.diff(zones.indptr) > 0
+    owns = plan.own_cells()
     keep = np.array(
         [has or p in task.must_keep for has, (p, _, _) in zip(owns, task.parcels, strict=True)],
         dtype=bool,
     )
     return (
-        _kept(task, observed, keep, grid),
+        _kept(task, observed, keep, grids.measuring),
         observed,
         {"zones": round(zoned - started, 3), "read_and_observe": round(read - zoned, 3)},
     )
@@ -202,29 +212,36 @@ def _kept(task: _Task, observed: Observed, keep: NDArray[np.bool_], grid: Grid) 
     )
 
 
-def _on_grid(wkb: bytes, grid: Grid) -> Any:
-    return project(shapely.from_wkb(wkb), grid.crs)
-
-
-def _checked(blocks: Iterable[xr.Dataset], task: _Task) -> Iterator[xr.Dataset]:
-    """Pass the blocks on, as long as their layers have no number that they can't have."""
-    for block in blocks:
-        for part, layer in ((QUALITY, task.quality), (SATURATION, task.saturation)):
-            if layer is not None and layer.unknown(block[part].to_numpy()):
+def _checked(strips: Iterable[Gathered], task: _Task) -> Iterator[Gathered]:
+    """Pass the strips on, as long as their layers have no number that they can't have."""
+    for strip in strips:
+        for part, layer, numbers in (
+            (QUALITY, task.quality, strip.classes),
+            (SATURATION, task.saturation, strip.bits),
+        ):
+            if layer is not None and numbers is not None and layer.unknown(numbers.numbers):
                 raise RejectedInput.at(
                     f"/{part}",
                     f"The {part} layer holds values that {layer.id.upper()} can't have. Send the "
                     "product's own layer, not resampled or recoded.",
                     code="wrong-quality-layer",
                 )
-        yield block
+        yield strip
+
+
+def _figures_held(session: Session, scene_id: int, measured: Measured) -> list[SceneFigures]:
+    """Return the figures of all parcels in a scene: those just written, if there are no others."""
+    if count_writes(session, scene_id) > 1:
+        return figures_of(observations_of_scene(session, scene_id))
+    rule = str(measured.recipe["rule"])
+    return [SceneFigures(columns=measured.columns, rule=rule, figures=measured.figures)]
 
 
 def _report(
-    task: _Task, rows: list[Any], observed: Observed, seconds: dict[str, float]
+    task: _Task, held: list[SceneFigures], observed: Observed, seconds: dict[str, float]
 ) -> dict[str, Any]:
     normalised = [i for i in observed.measured if INDICES[i].normalised]
-    leaving = out_of_range(rows, normalised)
+    leaving = out_of_range(held, normalised)
     indices: dict[str, dict[str, Any]] = {
         index_id: {"state": "measured", "parcels_out_of_range": leaving.get(index_id, 0)}
         for index_id in observed.measured
@@ -235,4 +252,4 @@ def _report(
             indices[index_id]["rule"] = observed.rules.get(index_id, task.rule)
     for index_id, reason in observed.skipped.items():
         indices[index_id] = {"state": "skipped", "reason": reason}
-    return {**scene_counts(rows), "indices": indices, "seconds": seconds}
+    return {**scene_counts(held), "indices": indices, "seconds": seconds}

@@ -8,6 +8,7 @@ from service.assess import Prepared
 from service.settings import Settings
 from service.store.sessions import Sessions
 from service.tiles.archive import Archive
+from service.tiles.plans import Plans
 
 BASELINES_HELD: Final = 2
 """Baselines of ten thousand parcels take tens of megabytes."""
@@ -35,11 +36,12 @@ class HeldBaselines:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Resources:
-    """Sessions, archive and settings of the running service, and what judging holds."""
+    """Sessions, archive, plans and settings of the running service, and what judging holds."""
 
     settings: Settings
     sessions: Sessions
     archive: Archive
+    plans: Plans
     baselines: HeldBaselines = field(default_factory=HeldBaselines)
 
 

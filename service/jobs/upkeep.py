@@ -136,7 +136,7 @@ def _promise_anew(work: Resources, scene: Scene) -> None:
 
 
 def tidy(work: Resources) -> None:
-    """Remove what nothing needs: orphaned files, old answers, deliveries, jobs, workflows."""
+    """Remove what nothing needs: orphaned files, plans, old answers, deliveries, jobs."""
     with work.sessions.writing() as session:
         forget_old_answers(session, at=now())
         forget_old_deliveries(session, before=now() - DELIVERIES_KEPT_FOR)
@@ -146,6 +146,7 @@ def tidy(work: Resources) -> None:
     removed = work.archive.remove_orphans(wanted, older_than_seconds=ORPHAN_SECONDS)
     if removed:
         _log.info("orphaned files removed", count=removed)
+    work.plans.tidy()
     before = (now() - WORKFLOWS_KEPT_FOR).isoformat()
     old = DBOS.list_workflows(
         completed_before=before, limit=_PURGE_BATCH, load_input=False, load_output=False

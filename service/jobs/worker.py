@@ -13,6 +13,7 @@ from service.errors import Unavailable
 from service.jobs import assess, deliver, ingest, parcel_import, rehearsal_job
 from service.jobs.resources import Resources, lend
 from service.jobs.upkeep import Upkeep
+from service.jobs.warming import keep_compiled_in, warm_up_behind
 from service.store.sessions import hold_database
 
 _log = structlog.get_logger()
@@ -56,6 +57,8 @@ class Worker:
         """Claim the folder, launch the engine, resume what was interrupted, begin the upkeep."""
         self.claim()
         self._work.archive.clear_incoming()
+        keep_compiled_in(self._work.settings.data / "compiled")
+        warm_up_behind()
         lend(self._work)
         settings = self._work.settings
         self._engine = _engine(settings.engine_url, settings.data)

@@ -1,149 +1,307 @@
 """The stored numbers of a scene in the cells that are wanted, and what they are worth."""
 
-from collections.abc import Sequence
-from typing import Any, Final
+from dataclasses import dataclass
+from typing import Any, Final, TypeVar
 
 import numpy as np
-import xarray as xr
 from numpy.typing import NDArray
 
+from service.compiled import compiled
 from service.spectral.roles import BandRole
 from service.spectral.scaling import Scaling
 
+Item = TypeVar("Item", bound=np.generic)
+
 QUALITY: Final = "quality"
 SATURATION: Final = "saturation"
-NEAR_CLOUD: Final = "near_cloud"
-"""Variables of a block beside its bands."""
+"""Layers of a scene beside its bands."""
 
 # What a band has in a cell.
 NOTHING: Final = 0
 NUMBER: Final = 1
 SATURATED: Final = 2
 
+_ALL_KNOWN: Final = np.empty(0, dtype=np.bool_)
+_ONE_TO_ONE: Final = np.empty(0, dtype=np.int32)
 
-class Gathered:
-    """A scene's numbers in chosen cells, each cell once, as they are stored.
 
-    Stored integers take 2 bytes a cell and band; they become reflectance batch by batch.
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Layer:
+    """A layer's numbers on its own grid, and where each wanted cell finds the one that it takes.
 
     Attributes
     ----------
-    cells
-        Flat row-major indices on the measuring grid, ascending and unique, shape (cells,).
-    states
-        What each band has in each cell, `NOTHING`, `NUMBER` or `SATURATED`; uint8, shape
-        (roles, cells).
-    classes, classed
-        The quality layer's numbers, None if no block had any, and where it has one.
-    near_cloud
-        True where a clear surface is to count as cloud.
+    numbers
+        As they are stored, each once, shape (own,).
+    at
+        int32, shape (cells,): which number each cell takes, counted from `first`, -1 for none.
+        None: as many numbers as cells, one to one.
+    first
+        What the first number is counted as.
+    known
+        Which numbers were read, shape (own,). None: all. The others are no numbers.
     """
 
-    def __init__(
-        self, cells: NDArray[np.int64], roles: Sequence[BandRole], *, with_classes: bool
-    ) -> None:
-        self.cells = cells
-        self.roles = tuple(roles)
-        self.numbers: dict[BandRole, NDArray[Any]] = {}
-        self.scalings: dict[BandRole, Scaling] = {}
-        self.states = np.full((len(self.roles), len(cells)), NOTHING, dtype=np.uint8)
-        self.classes: NDArray[Any] | None = None
-        self.classed = np.zeros(len(cells), dtype=bool)
-        self.near_cloud = np.zeros(len(cells), dtype=bool)
-        self._with_classes = with_classes
+    numbers: NDArray[Any]
+    at: NDArray[np.int32] | None = None
+    first: int = 0
+    known: NDArray[np.bool_] | None = None
 
-    def take(self, block: xr.Dataset) -> None:
-        """Take over what a block has for the cells."""
-        here, inside = self._inside(block)
-        if not len(here):
-            return
-        for place, role in enumerate(self.roles):
-            if role.value not in block:
-                continue
-            band = block[role.value]
-            numbers = _flat(band)[inside]
-            self.numbers[role] = _put(self.numbers.get(role), len(self.cells), here, numbers)
-            self.scalings[role] = Scaling(
-                scale=float(band.attrs["scale"]), offset=float(band.attrs["offset"])
+    def spread(self, own: NDArray[Item], missing: int = 0) -> NDArray[Item]:
+        """Give each cell what is said of its number; `missing` where it has none."""
+        if self.at is None:
+            return own
+        if own.dtype.itemsize == 1:
+            bytes_of = own.view(np.uint8)
+            return _spread(bytes_of, self.at, self.first, np.uint8(missing)).view(own.dtype)
+        places = np.where(self.at < 0, len(own), self.at - self.first)
+        spread: NDArray[Item] = np.append(own, own.dtype.type(missing))[places]
+        return spread
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Meaning:
+    """What a band's stored numbers mean.
+
+    Attributes
+    ----------
+    scaling
+        How they become reflectance.
+    nodata, saturated
+        The numbers that stand for "no data" and "saturated", None without.
+    bit
+        The band's bit in the layer of saturation bits, None without.
+    """
+
+    scaling: Scaling
+    nodata: float | None = None
+    saturated: float | None = None
+    bit: int | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Band:
+    """A band's numbers, and what each of them is: `NOTHING`, `NUMBER` or `SATURATED`."""
+
+    layer: Layer
+    states: NDArray[np.uint8]
+    scaling: Scaling
+
+
+class Gathered:
+    """A scene's numbers in neighbouring cells of a plan, as they are stored.
+
+    Stored integers take 2 bytes a cell and band, on the band's own grid; they become
+    reflectance batch by batch. Layers are taken in this order: quality, saturation, bands.
+
+    Attributes
+    ----------
+    first, last
+        The cells of the plan that are held, half-open.
+    earlier
+        Cells before `first` that are held too, ascending, int32: they come before the others.
+    seen
+        Cells in which some band has a number.
+    saturated
+        Cells in which some band is saturated.
+    classes
+        The quality layer.
+    bits
+        The layer of saturation bits; it has to come before the bands that it tells of.
+    near_cloud
+        Cells of clear surfaces that are to count as cloud; None without such a rule.
+    """
+
+    def __init__(self, first: int, last: int) -> None:
+        self.first = first
+        self.last = last
+        self.earlier = np.empty(0, np.int32)
+        self.seen = np.zeros(last - first, dtype=np.bool_)
+        self.saturated = np.zeros(last - first, dtype=np.bool_)
+        self.classes: Layer | None = None
+        self.near_cloud: NDArray[np.bool_] | None = None
+        self.bits: Layer | None = None
+        self._bands: dict[BandRole, _Band] = {}
+
+    def __len__(self) -> int:
+        return len(self.seen)
+
+    def take(self, role: BandRole, layer: Layer, meaning: Meaning) -> None:
+        """Take over a band."""
+        states = _states(layer, meaning)
+        if meaning.bit is not None and self.bits is not None:
+            layer, states = self._with_bits(layer, states, self.bits, meaning.bit)
+        spread = layer.spread(states, NOTHING)
+        self.seen |= spread == NUMBER
+        self.saturated |= spread == SATURATED
+        self._bands[role] = _Band(layer=layer, states=states, scaling=meaning.scaling)
+
+    def _with_bits(
+        self, layer: Layer, states: NDArray[np.uint8], bits: Layer, bit: int
+    ) -> tuple[Layer, NDArray[np.uint8]]:
+        """Mark the numbers whose bit says that they are saturated."""
+        if layer.at is not bits.at or layer.first != bits.first:
+            layer, states = _one_to_one(layer, states)
+            numbers = bits.spread(bits.numbers)
+        else:
+            numbers = bits.numbers
+        states[(states == NUMBER) & ((numbers >> bit) & 1 > 0)] = SATURATED
+        return layer, states
+
+    def places(self, at: NDArray[np.int32]) -> NDArray[np.int32]:
+        """Return where cells of the plan, by their number there, are among those held here."""
+        places = at - np.int32(self.first - len(self.earlier))
+        if len(self.earlier):
+            before = at < self.first
+            places[before] = np.searchsorted(self.earlier, at[before])
+        return places
+
+    def reflectance(self, role: BandRole, places: NDArray[np.int32]) -> NDArray[np.float64]:
+        """Return reflectance in some of the cells held; NaN where the band has no number."""
+        band = self._bands.get(role)
+        if band is None:
+            return np.full(len(places), np.nan)
+        layer, scaling = band.layer, band.scaling
+        at = _ONE_TO_ONE if layer.at is None else layer.at
+        return _reflectance(
+            layer.numbers, band.states, at, layer.first, places, scaling.scale, scaling.offset
+        )
+
+    def narrowed(self, keep: NDArray[np.bool_]) -> "Gathered":
+        """Return only some of the cells, as `earlier` ones of what comes next."""
+        held = np.concatenate([self.earlier, np.arange(self.first, self.last, dtype=np.int32)])
+        left = Gathered(self.last, self.last)
+        left.earlier = held[keep]
+        left.seen, left.saturated = self.seen[keep], self.saturated[keep]
+        if self.near_cloud is not None:
+            left.near_cloud = self.near_cloud[keep]
+        if self.classes is not None:
+            left.classes = _narrowed(self.classes, keep)
+        for role, band in self._bands.items():
+            layer, states = _one_to_one(band.layer, band.states)
+            left._bands[role] = _Band(
+                layer=Layer(numbers=layer.numbers[keep]), states=states[keep], scaling=band.scaling
             )
-            self.states[place, here] = _states(
-                numbers, nodata=band.attrs["nodata"], saturated=band.attrs["saturated"]
+        return left
+
+    def after(self, left: "Gathered") -> "Gathered":
+        """Return these cells together with those that were left of what came before."""
+        if not len(left.earlier):
+            return self
+        both = Gathered(self.first, self.last)
+        both.earlier = left.earlier
+        both.seen = np.concatenate([left.seen, self.seen])
+        both.saturated = np.concatenate([left.saturated, self.saturated])
+        if left.near_cloud is not None and self.near_cloud is not None:
+            both.near_cloud = np.concatenate([left.near_cloud, self.near_cloud])
+        if left.classes is not None and self.classes is not None:
+            both.classes = _joined(left.classes, self.classes)
+        for role, band in self._bands.items():
+            before = left._bands[role]  # noqa: SLF001 - of the same class
+            both._bands[role] = _Band(
+                layer=_joined(before.layer, band.layer),
+                states=np.concatenate([before.states, band.states]),
+                scaling=band.scaling,
             )
-        if SATURATION in block:
-            self._take_saturation(block, here, inside)
-        if NEAR_CLOUD in block:
-            self.near_cloud[here] = _flat(block[NEAR_CLOUD])[inside]
-        if self._with_classes and QUALITY in block:
-            layer = block[QUALITY]
-            classes = _flat(layer)[inside]
-            self.classes = _put(self.classes, len(self.cells), here, classes)
-            self.classed[here] = ~_equal(classes, layer.attrs["nodata"])
-
-    def _take_saturation(
-        self, block: xr.Dataset, here: NDArray[np.int64], inside: NDArray[np.int64]
-    ) -> None:
-        """Mark the numbers of bands whose bit says that they are saturated."""
-        bits = _flat(block[SATURATION])[inside]
-        for place, role in enumerate(self.roles):
-            bit = block[role.value].attrs.get("saturation_bit") if role.value in block else None
-            if bit is not None:
-                states = self.states[place, here]
-                states[(states == NUMBER) & ((bits >> bit) & 1 > 0)] = SATURATED
-                self.states[place, here] = states
-
-    def _inside(self, block: xr.Dataset) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-        """Return which of the cells a block holds, and where in the block they are."""
-        row0, col0 = int(block.attrs["row0"]), int(block.attrs["col0"])
-        grid_cols = int(block.attrs["grid_cols"])
-        rows, cols = block.sizes["y"], block.sizes["x"]
-        ends = np.array([row0 * grid_cols, (row0 + rows) * grid_cols], dtype=np.int64)
-        start, stop = np.searchsorted(self.cells, ends)
-        row, col = np.divmod(self.cells[start:stop], grid_cols)
-        held = np.flatnonzero((col >= col0) & (col < col0 + cols))
-        inside = (row[held] - row0) * cols + (col[held] - col0)
-        return held + start, inside
-
-    def reflectance(self, role: BandRole, at: NDArray[np.intp]) -> NDArray[np.float64]:
-        """Return reflectance in some of the cells; NaN where the band has no number."""
-        if role not in self.numbers:
-            return np.full(len(at), np.nan)
-        reflectance = self.scalings[role].reflectance(self.numbers[role][at])
-        reflectance[self.states[self.roles.index(role), at] != NUMBER] = np.nan
-        return reflectance
+        return both
 
 
-def _flat(variable: xr.DataArray) -> NDArray[Any]:
-    flat: NDArray[Any] = variable.transpose("y", "x").to_numpy().reshape(-1)
-    return flat
+@compiled
+def _reflectance(
+    numbers: NDArray[Any],
+    states: NDArray[np.uint8],
+    at: NDArray[np.int32],
+    first: int,
+    places: NDArray[np.int32],
+    scale: float,
+    offset: float,
+) -> NDArray[np.float64]:
+    """Scale the numbers of some cells; `at` without entries stands for one to one."""
+    found = np.empty(len(places), np.float64)
+    is_direct = len(at) == 0
+    for cell in range(len(places)):
+        own = np.int64(places[cell]) if is_direct else at[places[cell]] - first
+        if own < 0 or states[own] != NUMBER:
+            found[cell] = np.nan
+        else:
+            value = numbers[own] * scale + offset
+            # Numbers of a float file may be as large as that.
+            found[cell] = value if np.isfinite(value) else np.nan
+    return found
 
 
-def _put(
-    held: NDArray[Any] | None, size: int, here: NDArray[np.int64], numbers: NDArray[Any]
-) -> NDArray[Any]:
-    """Put numbers among those held, in a type that can hold both."""
-    if held is None:
-        held = np.zeros(size, dtype=numbers.dtype)
-    elif held.dtype != numbers.dtype:
-        held = held.astype(np.result_type(held, numbers))
-    held[here] = numbers
-    return held
-
-
-def _equal(numbers: NDArray[Any], mark: float | None) -> NDArray[np.bool_]:
-    """Tell where the stored numbers are a mark such as nodata."""
-    if mark is None:
-        return np.zeros(len(numbers), dtype=bool)
-    if not np.issubdtype(numbers.dtype, np.floating):
-        return np.asarray(numbers == float(mark))
-    # A mark written as a longer number is stored rounded, or as infinity.
-    with np.errstate(over="ignore"):
-        return np.asarray(numbers == np.float64(mark).astype(numbers.dtype))
-
-
-def _states(
-    numbers: NDArray[Any], *, nodata: float | None, saturated: float | None
+@compiled
+def _spread(
+    own: NDArray[np.uint8], at: NDArray[np.int32], first: int, missing: np.uint8
 ) -> NDArray[np.uint8]:
-    states = np.where(np.isfinite(numbers), NUMBER, NOTHING).astype(np.uint8)
-    states[_equal(numbers, saturated)] = SATURATED
-    states[_equal(numbers, nodata)] = NOTHING
+    found = np.empty(len(at), np.uint8)
+    for cell in range(len(at)):
+        found[cell] = missing if at[cell] < 0 else own[at[cell] - first]
+    return found
+
+
+def _one_to_one(layer: Layer, states: NDArray[np.uint8]) -> tuple[Layer, NDArray[np.uint8]]:
+    """Return a number and a state for each cell."""
+    if layer.at is None:
+        return layer, states
+    numbers = layer.spread(layer.numbers)
+    return Layer(numbers=numbers), layer.spread(states, NOTHING)
+
+
+def _narrowed(layer: Layer, keep: NDArray[np.bool_]) -> Layer:
+    """Return the layer for some of its cells; where one has no number, one that is not known."""
+    known = np.ones(len(layer.numbers), np.bool_) if layer.known is None else layer.known
+    numbers = layer.spread(layer.numbers)
+    return Layer(numbers=numbers[keep], known=layer.spread(known)[keep])
+
+
+def _joined(before: Layer, layer: Layer) -> Layer:
+    """Return two layers as one; the first is one to one."""
+    count = len(before.numbers)
+    at = None
+    if layer.at is not None:
+        moved = np.where(layer.at < 0, -1, layer.at + np.int32(count - layer.first))
+        at = np.concatenate([np.arange(count, dtype=np.int32), moved.astype(np.int32)])
+    known = None
+    if before.known is not None or layer.known is not None:
+        known = np.concatenate([_known(before), _known(layer)])
+    return Layer(numbers=np.concatenate([before.numbers, layer.numbers]), at=at, known=known)
+
+
+def _known(layer: Layer) -> NDArray[np.bool_]:
+    return np.ones(len(layer.numbers), np.bool_) if layer.known is None else layer.known
+
+
+def _states(layer: Layer, meaning: Meaning) -> NDArray[np.uint8]:
+    numbers = layer.numbers
+    known = _ALL_KNOWN if layer.known is None else layer.known
+    return _states_of(
+        numbers, known, _stored(meaning.nodata, numbers), _stored(meaning.saturated, numbers)
+    )
+
+
+def _stored(mark: float | None, numbers: NDArray[Any]) -> float:
+    """Return a mark as it is stored in numbers of this type; NaN, which is no number, for none.
+
+    A mark written as a longer number is stored rounded, or as infinity.
+    """
+    if mark is None:
+        return np.nan
+    if not np.issubdtype(numbers.dtype, np.floating):
+        return float(mark)
+    with np.errstate(over="ignore"):
+        return float(np.float64(mark).astype(numbers.dtype))
+
+
+@compiled
+def _states_of(
+    numbers: NDArray[Any], known: NDArray[np.bool_], nodata: float, saturated: float
+) -> NDArray[np.uint8]:
+    states = np.empty(len(numbers), np.uint8)
+    for at in range(len(numbers)):
+        number = np.float64(numbers[at])
+        if not np.isfinite(number) or number == nodata or (len(known) > 0 and not known[at]):
+            states[at] = NOTHING
+        else:
+            states[at] = SATURATED if number == saturated else NUMBER
     return states

@@ -103,6 +103,12 @@ def _content(scene: Scene) -> str:
     return hashlib.sha256(f"{scene.digest} {scene.sensor} {version}".encode()).hexdigest()
 
 
+def count_writes(session: Session, scene_id: int) -> int:
+    """Return how many current writes a scene has."""
+    query = select(func.count()).where(Write.scene_id == scene_id, Write.closed_at.is_(None))
+    return session.scalar(query) or 0
+
+
 def has_write(session: Session, scene: Scene, generation: int) -> bool:
     """Whether this generation's observations are there already."""
     query = select(Write.id).where(Write.scene_id == scene.id, Write.generation == generation)

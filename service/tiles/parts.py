@@ -1,15 +1,12 @@
-"""Which parts of a grid are read one after the other."""
+"""Which parts of a file are read one after the other: those that hold wanted cells."""
 
-import math
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterator
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from service.tiles.intake import Header
-from service.zonal.grid import Grid
+from service.compiled import compiled
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -22,121 +19,140 @@ class Area:
     col1: int
 
 
-def part_shape(grid: Grid, headers: Sequence[Header], *, cells: int) -> tuple[int, int]:
-    """Return (rows, cols) of the parts that a grid is read in, of at most `cells` cells.
+def wanted_areas(
+    within: Area,
+    block_shape: tuple[int, int],
+    wanted: NDArray[np.bool_],
+    *,
+    most_cells: int,
+) -> Iterator[Area]:
+    """Yield rectangles of whole blocks that together hold every wanted block once.
 
-    Whole blocks of the files, so that each is decoded once, and as wide as the grid if
-    memory allows. Where block sizes have no small common multiple, those of a file on
-    the grid itself count and others are decoded more than once; memory comes first.
-
-    Parameters
-    ----------
-    grid
-        The grid of at least one of the files.
-    headers
-        Of all files that are read.
-    cells
-        How many cells fit into memory, at least 1.
-    """
-    rows, cols = grid.shape
-    if rows * cols <= cells:
-        return rows, cols
-    nested = [shape for shape in (_block_in_cells(h, grid) for h in headers) if shape is not None]
-    height, width = _common_shape(nested, grid)
-    if height * width > cells:
-        own = max(header.block_shape for header in headers if header.grid == grid)
-        height, width = _common_shape([own], grid)
-    if height * cols <= cells:
-        return min(height * (cells // (height * cols)), rows), cols
-    if height * width <= cells:
-        return height, width * (cells // (height * width))
-    return max(1, cells // width), min(width, cells)
-
-
-def wanted_areas(grid: Grid, part: tuple[int, int], cells: NDArray[np.int64]) -> Iterator[Area]:
-    """Yield the smallest rectangle around the wanted cells of each part that has some.
+    Neighbouring blocks of a row are read at once, because several can be decoded side by
+    side, and rows of blocks with the same ones together.
 
     Parameters
     ----------
-    grid
-        The grid that cells are counted on.
-    part
-        (rows, cols) of a part.
-    cells
-        Flat row-major indices, ascending and unique, shape (n,).
+    within
+        Rows and columns to look at; its first row begins a row of blocks, its first column is
+        0, and it ends with the grid or with a row of blocks.
+    block_shape
+        (rows, cols) of a block.
+    wanted
+        Which blocks are wanted, shape (rows of blocks, columns of blocks).
+    most_cells
+        How many cells a rectangle may have, unless a block has more.
     """
-    rows, cols = grid.shape
-    height, width = part
-    sides = np.append(np.arange(0, cols, width, dtype=np.int64), cols)
-    for top in range(0, rows, height):
-        lines = np.arange(top, min(top + height, rows), dtype=np.int64)
-        # Where the cells of each line and part begin and end; the cells themselves, which
-        # may be most of the grid, are not copied.
-        edges = np.searchsorted(cells, lines[:, np.newaxis] * cols + sides)
-        for here in range(sides.size - 1):
-            first, last = edges[:, here], edges[:, here + 1]
-            held = first < last
-            if held.any():
-                yield Area(
-                    row0=int(lines[held][0]),
-                    row1=int(lines[held][-1]) + 1,
-                    col0=int((cells[first[held]] % cols).min()),
-                    col1=int((cells[last[held] - 1] % cols).max()) + 1,
-                )
+    height, width = block_shape
+    across = max(1, most_cells // (height * width))
+    open_runs: list[tuple[int, int]] = []
+    top = 0
+    for row in range(len(wanted) + 1):
+        runs = _runs(wanted[row], across) if row < len(wanted) else []
+        cells = max((stop - start for start, stop in open_runs), default=0) * width * height
+        if runs == open_runs and cells * (row - top + 1) <= most_cells:
+            continue
+        for start, stop in open_runs:
+            yield Area(
+                row0=within.row0 + top * height,
+                row1=min(within.row0 + row * height, within.row1),
+                col0=start * width,
+                col1=min(stop * width, within.col1),
+            )
+        open_runs, top = runs, row
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Places:
-    """Where the cells of an area are on another grid.
+def _runs(wanted: NDArray[np.bool_], longest: int) -> list[tuple[int, int]]:
+    """Return where runs of wanted blocks begin and end, none longer than `longest`."""
+    edges = np.flatnonzero(np.diff(np.concatenate([[0], wanted.view(np.int8), [0]])))
+    return [
+        (start, min(start + longest, stop))
+        for begin, stop in edges.reshape(-1, 2).tolist()
+        for start in range(begin, stop, longest)
+    ]
 
-    Attributes
+
+@compiled
+def blocks_with(
+    cells: NDArray[np.int32],
+    starts: NDArray[np.int64],
+    row0: int,
+    row1: int,
+    grid_cols: int,
+    height: int,
+    width: int,
+    first: int,
+    wanted: NDArray[np.bool_],
+) -> NDArray[np.bool_]:
+    """Return which blocks of some rows hold a wanted cell.
+
+    Parameters
     ----------
-    inside
-        Index of the area's cells that have their centre on the other grid.
-    rows, cols
-        The other grid's rows and columns at their centres.
-    window
-        The smallest area of the other grid that has them all, None if there are none.
+    cells, starts
+        Cells of the grid, ascending, and where each row begins among them.
+    row0, row1, grid_cols, height, width
+        The rows to look at, from the first of a row of blocks; columns of the grid; size of a
+        block.
+    first, wanted
+        Which cells are wanted, from the one at `first` on; those beyond its end are, those
+        before are not.
     """
-
-    inside: tuple[NDArray[Any], ...]
-    rows: NDArray[np.int64]
-    cols: NDArray[np.int64]
-    window: Area | None
-
-    def nearest(self, within: Area) -> tuple[NDArray[Any], ...]:
-        """Return the index of the places in an array of an area of the other grid."""
-        return np.ix_(self.rows - within.row0, self.cols - within.col0)
-
-
-def places_on(theirs: Grid, grid: Grid, area: Area) -> Places:
-    """Return where the cells of an area of one grid are on another, by their centres."""
-    rows = theirs.rows_at(grid.centre_ys(area.row0, area.row1))
-    cols = theirs.cols_at(grid.centre_xs(area.col0, area.col1))
-    has_row = (rows >= 0) & (rows < theirs.shape[0])
-    has_col = (cols >= 0) & (cols < theirs.shape[1])
-    rows, cols = rows[has_row], cols[has_col]
-    window = None
-    if rows.size and cols.size:
-        window = Area(
-            row0=int(rows.min()),
-            row1=int(rows.max()) + 1,
-            col0=int(cols.min()),
-            col1=int(cols.max()) + 1,
-        )
-    return Places(inside=np.ix_(has_row, has_col), rows=rows, cols=cols, window=window)
+    found = np.zeros(((row1 - row0 - 1) // height + 1, (grid_cols - 1) // width + 1), np.bool_)
+    for row in range(row0, row1):
+        own = found[(row - row0) // height]
+        base = row * grid_cols
+        block, edge = -1, 0
+        for at in range(starts[row], starts[row + 1]):
+            if at < first or (at - first < len(wanted) and not wanted[at - first]):
+                continue
+            col = cells[at] - base
+            if col >= edge:
+                block = col // width
+                edge = (block + 1) * width
+                own[block] = True
+    return found
 
 
-def _common_shape(shapes: Iterable[tuple[int, int]], grid: Grid) -> tuple[int, int]:
-    heights, widths = zip(*shapes, strict=True)
-    return min(math.lcm(*heights), grid.shape[0]), min(math.lcm(*widths), grid.shape[1])
+@compiled
+def take_cells(
+    numbers: NDArray[np.unsignedinteger],
+    row0: int,
+    col0: int,
+    area: tuple[int, int, int, int],
+    cells: NDArray[np.int32],
+    starts: NDArray[np.int64],
+    grid_cols: int,
+    first: int,
+    into: NDArray[np.unsignedinteger],
+) -> None:
+    """Take the cells of an area out of numbers that were read.
 
-
-def _block_in_cells(header: Header, grid: Grid) -> tuple[int, int] | None:
-    """Return a file's block shape in cells of the grid, or None if the grids do not nest."""
-    ours, theirs = grid.transform, header.grid.transform
-    down, across = theirs.e / ours.e, theirs.a / ours.a
-    same_corner = (ours.c, ours.f) == (theirs.c, theirs.f)
-    if not (same_corner and down.is_integer() and across.is_integer() and down >= 1 <= across):
-        return None
-    return header.block_shape[0] * int(down), header.block_shape[1] * int(across)
+    Parameters
+    ----------
+    numbers, row0, col0
+        What was read, shape (rows, cols), and the first row and column of it on the grid.
+    area
+        Rows and columns to take, ``row0, row1, col0, col1``, half-open; all of it was read.
+    cells, starts, grid_cols
+        As in `blocks_with`.
+    first, into
+        Where the numbers go, from that of the cell at `first` on.
+    """
+    for row in range(area[0], area[1]):
+        base = row * grid_cols
+        low, high = starts[row], starts[row + 1]
+        stop = high
+        while low < stop:
+            middle = (low + stop) // 2
+            if cells[middle] - base < area[2]:
+                low = middle + 1
+            else:
+                stop = middle
+        line = numbers[row - row0]
+        shift = base + col0
+        end = base + area[3]
+        for at in range(low, high):
+            cell = cells[at]
+            if cell >= end:
+                break
+            into[at - first] = line[cell - shift]

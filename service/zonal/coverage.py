@@ -13,12 +13,10 @@ from typing import Final
 
 import numpy as np
 import shapely
-from exactextract import exact_extract
-from exactextract.feature import JSONFeatureSource
-from exactextract.raster import NumPyRasterSource
 from numpy.typing import NDArray
 from pyproj import Transformer
 
+from service.zonal.edges import Cells, covered, turned
 from service.zonal.grid import Grid
 
 MIN_COVERAGE: Final = 1e-6
@@ -32,7 +30,8 @@ _STEP: Final = 2.0**-32
 _LONGEST_EDGE_M: Final = 1000.0
 # Length of a degree of latitude at the poles of WGS 84, the longest of any degree.
 _DEGREE_M: Final = 111_694.0
-_ZONES_AT_ONCE: Final = 256
+# Cells of the boxes around boundaries that are looked at in one go: 12 bytes each.
+_CELLS_AT_ONCE: Final = 1_000_000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -44,7 +43,7 @@ class Zones:
     indptr
         int64, shape (n + 1,): zone i owns the entries ``indptr[i]:indptr[i + 1]``.
     cells
-        int64, shape (indptr[n],): row-major index of each cell on the grid, ascending
+        int32, shape (indptr[n],): row-major index of each cell on the grid, ascending
         within a zone. Zones may share cells.
     weights
         float32, same shape: coverage fraction of each cell, `MIN_COVERAGE` to 1.
@@ -53,20 +52,12 @@ class Zones:
     """
 
     indptr: NDArray[np.int64]
-    cells: NDArray[np.int64]
+    cells: NDArray[np.int32]
     weights: NDArray[np.float32]
     totals: NDArray[np.float64]
 
     def __len__(self) -> int:
         return len(self.totals)
-
-    def distinct_cells(self) -> NDArray[np.int64]:
-        """Return the cells of all zones, each once, ascending."""
-        # `np.unique` goes by hashing and takes four times as long.
-        ascending = np.sort(self.cells)
-        new = np.ones(len(ascending), dtype=bool)
-        np.not_equal(ascending[1:], ascending[:-1], out=new[1:])
-        return ascending[new]
 
 
 @lru_cache(maxsize=64)
@@ -74,31 +65,38 @@ def _to_crs(crs: str) -> Transformer:
     return Transformer.from_crs("OGC:CRS84", crs, always_xy=True)
 
 
-def project(geometry: shapely.Geometry, crs: str) -> shapely.Geometry:
-    """Project a boundary from WGS 84 onto a grid's CRS.
+def project(
+    geometries: Sequence[shapely.Geometry] | NDArray[np.object_], crs: str
+) -> NDArray[np.object_]:
+    """Project boundaries from WGS 84 onto a grid's CRS.
 
     Parameters
     ----------
-    geometry
-        Polygon or multipolygon in degrees, longitude first.
+    geometries
+        Polygons or multipolygons in degrees, longitude first.
     crs
         Target, as an authority code or WKT.
 
     Returns
     -------
-    shapely.Geometry
-        The boundary with its edges cut to at most 1 km before projecting, because a long edge
-        bends (20 km are up to 9 m off otherwise). Empty where the CRS can't hold it,
-        for instance on the far side of the globe.
+    NDArray
+        The boundaries, shape (n,), with their edges cut to at most 1 km before projecting,
+        because a long edge bends (20 km are up to 9 m off otherwise). Empty where the CRS
+        can't hold one, for instance on the far side of the globe.
     """
-    dense = shapely.segmentize(geometry, _LONGEST_EDGE_M / _DEGREE_M)
-    projected = shapely.transform(dense, _to_crs(crs).transform, interleaved=False)
-    if not np.isfinite(shapely.get_coordinates(projected)).all():
-        return shapely.Polygon()
+    dense = shapely.segmentize(
+        np.asarray(geometries, dtype=np.object_), _LONGEST_EDGE_M / _DEGREE_M
+    )
+    projected: NDArray[np.object_] = shapely.transform(
+        dense, _to_crs(crs).transform, interleaved=False
+    )
+    points, owner = shapely.get_coordinates(projected, return_index=True)
+    lost = np.unique(owner[~np.isfinite(points).all(axis=1)])
+    projected[lost] = shapely.Polygon()
     return projected
 
 
-def zones_on(grid: Grid, geometries: Sequence[shapely.Geometry]) -> Zones:
+def zones_on(grid: Grid, geometries: Sequence[shapely.Geometry] | NDArray[np.object_]) -> Zones:
     """Lay boundaries over a grid.
 
     Parameters
@@ -106,7 +104,7 @@ def zones_on(grid: Grid, geometries: Sequence[shapely.Geometry]) -> Zones:
     grid
         The measuring grid, of any size: memory goes with the boundaries, not with the grid.
     geometries
-        Valid polygons or multipolygons in the CRS of the grid.
+        Valid polygons or multipolygons in the CRS of the grid, of any orientation.
 
     Returns
     -------
@@ -116,61 +114,130 @@ def zones_on(grid: Grid, geometries: Sequence[shapely.Geometry]) -> Zones:
 
     Notes
     -----
-    Coverage fractions are the exact areas of the intersections, by `exactextract`
-    (Baston, "Fast and accurate zonal statistics"); cells below `MIN_COVERAGE` are left out.
+    Coverage fractions are the exact areas of the intersections (`service.zonal.edges`), to
+    1e-10 of a cell; cells below `MIN_COVERAGE` are left out.
     """
     outlines = _in_cells(grid, geometries)
-    found: list[tuple[NDArray[np.int64], NDArray[np.float32]]] = list(_covered(grid, outlines))
-    counts = [len(cells) for cells, _ in found]
+    cells, shares, counts = shares_on(grid.shape, outlines, least=MIN_COVERAGE)
+    fractions = np.rint(shares / _STEP) * _STEP
     return Zones(
-        indptr=np.concatenate([[0], np.cumsum(counts, dtype=np.int64)]).astype(np.int64),
-        cells=np.concatenate([np.empty(0, np.int64), *(cells for cells, _ in found)]),
-        weights=np.concatenate([np.empty(0, np.float32), *(weights for _, weights in found)]),
+        indptr=_indptr(counts),
+        cells=cells,
+        # Rounding may leave the least fraction just below what it was.
+        weights=np.maximum(fractions.astype(np.float32), np.float32(MIN_COVERAGE)),
         totals=np.asarray(shapely.area(outlines), dtype=np.float64),
     )
 
 
-def _in_cells(grid: Grid, geometries: Sequence[shapely.Geometry]) -> NDArray[np.object_]:
-    """Express boundaries in columns and minus rows, so that a cell is a unit square, y up."""
+def joined(parts: Sequence[Zones]) -> Zones:
+    """Return the zones of several parts on one grid, one after the other."""
+    counts = [np.diff(part.indptr) for part in parts]
+    return Zones(
+        indptr=_indptr(np.concatenate([np.empty(0, np.int64), *counts])),
+        cells=np.concatenate([np.empty(0, np.int32), *(part.cells for part in parts)]),
+        weights=np.concatenate([np.empty(0, np.float32), *(part.weights for part in parts)]),
+        totals=np.concatenate([np.empty(0, np.float64), *(part.totals for part in parts)]),
+    )
+
+
+def _indptr(counts: NDArray[np.int64]) -> NDArray[np.int64]:
+    return np.concatenate([np.zeros(1, np.int64), np.cumsum(counts, dtype=np.int64)])
+
+
+def shares_on(shape: tuple[int, int], outlines: NDArray[np.object_], *, least: float) -> Cells:
+    """Return the cells of outlines given in columns and rows, as `service.zonal.edges.covered`.
+
+    Parameters
+    ----------
+    shape
+        (rows, cols) of the grid.
+    outlines
+        Polygons or multipolygons in columns and rows (downwards), shape (n,).
+    least
+        Smaller shares are left out.
+    """
+    parts, owner = shapely.get_parts(outlines, return_index=True)
+    lines, part_of = shapely.get_rings(parts, return_index=True)
+    points, line_of = shapely.get_coordinates(lines, return_index=True)
+    rings = np.searchsorted(line_of, np.arange(len(lines) + 1)).astype(np.int64)
+    # The first ring of a polygon is its shell, the others are holes.
+    is_hole = np.zeros(len(lines), dtype=np.bool_)
+    is_hole[1:] = part_of[1:] == part_of[:-1]
+    signs = turned(points, rings, is_hole)
+    ring_owner = owner[part_of]
+    places = np.arange(len(outlines))
+    zone_rings = np.stack(
+        [np.searchsorted(ring_owner, places), np.searchsorted(ring_owner, places, side="right")],
+        axis=1,
+    ).astype(np.int64)
+    turns = list(_in_turns(_windows(shape, outlines)))
+    found = [
+        covered(points, rings, signs, zone_rings[zones], windows, shape[1], least)
+        for zones, windows in turns
+    ]
+    counts = np.zeros(len(outlines), dtype=np.int64)
+    for (zones, _), (_, _, own) in zip(turns, found, strict=True):
+        counts[zones] += own
+    return (
+        np.concatenate([np.empty(0, np.int32), *(cells for cells, _, _ in found)]),
+        np.concatenate([np.empty(0, np.float64), *(shares for _, shares, _ in found)]),
+        counts,
+    )
+
+
+def _in_cells(
+    grid: Grid, geometries: Sequence[shapely.Geometry] | NDArray[np.object_]
+) -> NDArray[np.object_]:
+    """Express boundaries in columns and rows, so that a cell is a unit square."""
     transform = grid.transform
 
     def place(points: NDArray[np.float64]) -> NDArray[np.float64]:
         origin = np.array([transform.c, transform.f], dtype=np.float64)
-        return (points - origin) / np.array([transform.a, -transform.e], dtype=np.float64)
+        return (points - origin) / np.array([transform.a, transform.e], dtype=np.float64)
 
     placed: NDArray[np.object_] = shapely.transform(np.array(geometries, dtype=object), place)
     return placed
 
 
-def _covered(
-    grid: Grid, outlines: NDArray[np.object_]
-) -> Iterator[tuple[NDArray[np.int64], NDArray[np.float32]]]:
-    """Yield cells and coverage fractions of each outline."""
-    rows, cols = grid.shape
-    # One number seen everywhere: the library cuts a window around each outline out of it.
-    plane = np.broadcast_to(np.zeros((), dtype=np.uint8), grid.shape)
-    source = NumPyRasterSource(plane, 0, -rows, cols, 0)
-    nothing = (np.empty(0, np.int64), np.empty(0, np.float32))
-    for start in range(0, len(outlines), _ZONES_AT_ONCE):
-        batch = outlines[start : start + _ZONES_AT_ONCE]
-        left, bottom, right, top = shapely.bounds(batch).T
-        on_grid = (left < cols) & (right > 0) & (bottom < 0) & (top > -rows)
-        measured = iter(_measure(source, batch[on_grid]))
-        for hit in on_grid:
-            yield next(measured) if hit else nothing
+def _windows(shape: tuple[int, int], outlines: NDArray[np.object_]) -> NDArray[np.int64]:
+    """Return the rows and columns of the grid around each outline, shape (n, 4); maybe none."""
+    bounds = np.nan_to_num(shapely.bounds(outlines), nan=0.0).reshape(-1, 4)
+    rows, cols = shape
+    left, top, right, bottom = bounds.T
+    return np.stack(
+        [
+            np.clip(np.floor(top), 0, rows),
+            np.clip(np.ceil(bottom), 0, rows),
+            np.clip(np.floor(left), 0, cols),
+            np.clip(np.ceil(right), 0, cols),
+        ],
+        axis=1,
+    ).astype(np.int64)
 
 
-def _measure(
-    source: NumPyRasterSource, outlines: NDArray[np.object_]
-) -> Iterator[tuple[NDArray[np.int64], NDArray[np.float32]]]:
-    features = [
-        {"type": "Feature", "properties": {}, "geometry": shapely.geometry.mapping(outline)}
-        for outline in outlines
-    ]
-    if not features:
-        return
-    for feature in exact_extract(source, JSONFeatureSource(features), ["cell_id", "coverage"]):
-        cells = feature["properties"]["cell_id"]
-        fractions = np.rint(feature["properties"]["coverage"] / _STEP) * _STEP
-        counts = fractions >= MIN_COVERAGE
-        yield cells[counts].astype(np.int64), fractions[counts].astype(np.float32)
+def _in_turns(
+    windows: NDArray[np.int64],
+) -> Iterator[tuple[NDArray[np.int64], NDArray[np.int64]]]:
+    """Yield zones and windows of about `_CELLS_AT_ONCE` cells; a large window in several parts."""
+    sizes = np.maximum((windows[:, 1] - windows[:, 0]) * (windows[:, 3] - windows[:, 2]), 0)
+    first, filled = 0, 0
+    for zone, size in enumerate(sizes.tolist()):
+        if filled + size > _CELLS_AT_ONCE and zone > first:
+            yield np.arange(first, zone), windows[first:zone]
+            first, filled = zone, 0
+        if size > _CELLS_AT_ONCE:
+            yield from _bands(zone, windows[zone])
+            first, filled = zone + 1, 0
+        filled += size if first <= zone else 0
+    if first < len(windows):
+        yield np.arange(first, len(windows)), windows[first:]
+
+
+def _bands(
+    zone: int, window: NDArray[np.int64]
+) -> Iterator[tuple[NDArray[np.int64], NDArray[np.int64]]]:
+    row0, row1, col0, col1 = window.tolist()
+    step = max(1, _CELLS_AT_ONCE // (col1 - col0))
+    for row in range(row0, row1, step):
+        band = [row, min(row + step, row1), col0, col1]
+        yield np.array([zone]), np.array([band], dtype=np.int64)

@@ -2,8 +2,9 @@
 
 Everywhere here ``values`` and ``weights`` hold the cells of one zone after the other, and
 zone i owns the entries ``indptr[i]:indptr[i + 1]``. A NaN value is a cell that does not
-count, and so is a weight of 0; a zone without a cell that counts has NaN for every statistic
-and a weight of 0. Sums are in float64. There is no loop over zones.
+count, and so are a weight of 0 and a false in ``counts``; a zone without a cell that counts has
+NaN for every statistic and a weight of 0. Sums are in float64, in an order that depends on the
+zone alone, so that its figures do not depend on other zones.
 """
 
 from dataclasses import dataclass
@@ -12,10 +13,15 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
+from service.compiled import compiled
+from service.zonal.ordering import distinct
+
 Figures = NDArray[np.float64]
 
-_SIGN: Final = np.uint32(0x8000_0000)
-_ZONE_SHIFT: Final = np.uint64(32)
+_SHARES: Final = np.array([0.1, 0.5, 0.9])
+_MEAN, _SD, _MIN, _P10, _MAX, _WEIGHT = 0, 1, 2, 3, 6, 7
+_NAMES: Final = ("mean", "sd", "min", "p10", "p50", "p90", "max", "weight")
+_FIGURES: Final = len(_NAMES)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -36,66 +42,11 @@ class Summary:
     weight: Figures
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Distinct:
-    """The distinct values of each zone that has any, ascending, with their joint weights."""
-
-    values: Figures  # (values,)
-    weights: Figures  # (values,)
-    starts: NDArray[np.intp]  # (filled zones,) where each zone begins
-    counts: NDArray[np.intp]  # (filled zones,) distinct values of each
-    zones: NDArray[np.intp]  # (filled zones,) which zone it is
-
-
-def sums(amounts: NDArray[np.floating], indptr: NDArray[np.int64]) -> Figures:
-    """Add up the amounts of each zone; 0 for a zone without cells."""
-    totals = np.zeros(len(indptr) - 1)
-    # `reduceat` gives a neighbour's first amount for an empty slice, so those are left out.
-    filled = indptr[1:] > indptr[:-1]
-    if filled.any():
-        totals[filled] = np.add.reduceat(amounts, indptr[:-1][filled], dtype=np.float64)
-    return totals
-
-
-def narrowed(indptr: NDArray[np.int64], counts: NDArray[np.bool_]) -> NDArray[np.int64]:
-    """Return the `indptr` of the cells that are left where `counts` is true."""
-    before = np.concatenate([[0], np.cumsum(counts, dtype=np.int64)])
-    return before[indptr]
-
-
-def mean_and_sd(
-    values: NDArray[np.floating], weights: NDArray[np.float32], indptr: NDArray[np.int64]
-) -> tuple[Figures, Figures]:
-    """Weighted mean and population standard deviation of each zone.
-
-    Parameters
-    ----------
-    values
-        Shape (cells,), any unit; NaN does not count.
-    weights
-        Coverage fractions, shape (cells,).
-    indptr
-        Shape (zones + 1,).
-
-    Returns
-    -------
-    tuple
-        Mean and standard deviation (in two passes), each of shape (zones,); NaN where no
-        cell counts.
-    """
-    counts = ~np.isnan(values) & (weights > 0)
-    kept = values[counts].astype(np.float64)
-    shares = weights[counts].astype(np.float64)
-    ends = narrowed(indptr, counts)
-    total = sums(shares, ends)
-    total[total == 0] = np.nan
-    mean = sums(shares * kept, ends) / total
-    apart = kept - np.repeat(mean, np.diff(ends))
-    return mean, np.sqrt(sums(shares * apart * apart, ends) / total)
-
-
 def summarise(
-    values: NDArray[np.float32], weights: NDArray[np.float32], indptr: NDArray[np.int64]
+    values: NDArray[np.float32],
+    weights: NDArray[np.float32],
+    indptr: NDArray[np.int64],
+    counts: NDArray[np.bool_] | None = None,
 ) -> Summary:
     """Mean, spread, extremes and quantiles of each zone.
 
@@ -107,6 +58,8 @@ def summarise(
         Coverage fractions, shape (cells,).
     indptr
         Shape (zones + 1,).
+    counts
+        Which cells count, shape (cells,); all, if not given.
 
     Returns
     -------
@@ -122,94 +75,167 @@ def summarise(
     `exactextract`, which is the oracle in the tests; with equal weights it is the usual
     linear quantile (Hyndman and Fan 1996, type 7).
     """
+    if counts is None:
+        counts = np.ones(len(values), dtype=np.bool_)
+    figures = _columns(_summarised(values, weights, indptr, counts, _SHARES))
+    return Summary(**dict(zip(_NAMES, figures, strict=True)))
+
+
+def mean_and_sd(
+    values: NDArray[np.float64],
+    weights: NDArray[np.float32],
+    indptr: NDArray[np.int64],
+    counts: NDArray[np.bool_] | None = None,
+) -> tuple[Figures, Figures]:
+    """Weighted mean and population standard deviation of each zone.
+
+    Parameters
+    ----------
+    values
+        Shape (cells,), any unit; NaN does not count.
+    weights, indptr, counts
+        As in `summarise`.
+
+    Returns
+    -------
+    tuple
+        Mean and standard deviation (in two passes), each of shape (zones,); NaN where no
+        cell counts.
+    """
+    if counts is None:
+        counts = np.ones(len(values), dtype=np.bool_)
+    mean, sd = _columns(_means(values, weights, indptr, counts))
+    return mean, sd
+
+
+def sums_by_bit(
+    marks: NDArray[np.uint8], weights: NDArray[np.float32], indptr: NDArray[np.int64]
+) -> Figures:
+    """Add up the weights of the cells that have each of eight marks.
+
+    Parameters
+    ----------
+    marks
+        One mark to a bit, shape (cells,).
+    weights, indptr
+        As in `summarise`.
+
+    Returns
+    -------
+    Figures
+        Shape (zones, 9): by bit, lowest first, and last the sum of all weights.
+    """
+    return _sums_by_bit(marks, weights, indptr)
+
+
+def _columns(figures: Figures) -> list[Figures]:
+    return [np.ascontiguousarray(column) for column in figures.T]
+
+
+@compiled
+def _sums_by_bit(
+    marks: NDArray[np.uint8], weights: NDArray[np.float32], indptr: NDArray[np.int64]
+) -> Figures:
+    sums = np.zeros((len(indptr) - 1, 9))
+    for zone in range(len(indptr) - 1):
+        own = sums[zone]
+        for at in range(indptr[zone], indptr[zone + 1]):
+            weight = np.float64(weights[at])
+            own[8] += weight
+            left = marks[at]
+            bit = 0
+            while left:
+                if left & 1:
+                    own[bit] += weight
+                left >>= 1
+                bit += 1
+    return sums
+
+
+@compiled
+def _means(
+    values: NDArray[np.float64],
+    weights: NDArray[np.float32],
+    indptr: NDArray[np.int64],
+    counts: NDArray[np.bool_],
+) -> Figures:
+    found = np.full((len(indptr) - 1, 2), np.nan)
+    for zone in range(len(indptr) - 1):
+        total, first, second = 0.0, 0.0, 0.0
+        for at in range(indptr[zone], indptr[zone + 1]):
+            if counts[at] and weights[at] > 0 and not np.isnan(values[at]):
+                total += weights[at]
+                first += weights[at] * np.float64(values[at])
+        if total == 0:
+            continue
+        mean = first / total
+        for at in range(indptr[zone], indptr[zone + 1]):
+            if counts[at] and weights[at] > 0 and not np.isnan(values[at]):
+                apart = values[at] - mean
+                second += weights[at] * (apart * apart)
+        found[zone, 0] = mean
+        found[zone, 1] = np.sqrt(second / total)
+    return found
+
+
+@compiled
+def _summarised(
+    values: NDArray[np.float32],
+    weights: NDArray[np.float32],
+    indptr: NDArray[np.int64],
+    counts: NDArray[np.bool_],
+    shares: Figures,
+) -> Figures:
     zones = len(indptr) - 1
-    distinct = _distinct(values, weights, indptr)
-    at = distinct.zones
+    found = np.full((zones, _FIGURES), np.nan)
+    longest = 1
+    for zone in range(zones):
+        longest = max(longest, indptr[zone + 1] - indptr[zone])
+    packed = np.empty(longest, np.uint64)
+    spare = np.empty(longest, np.uint64)
+    joint = packed.view(np.float64)
+    kept = np.empty(longest, np.float32)
+    ends = np.empty(longest + 1, np.int32)
+    for zone in range(zones):
+        start, stop = indptr[zone], indptr[zone + 1]
+        number = distinct(values, weights, counts, start, stop, packed, spare, kept, ends)
+        found[zone, _WEIGHT] = 0.0
+        if number:
+            _read(kept, joint, number, shares, found[zone])
+    return found
 
-    def spread_out(figures: Figures, missing: float = np.nan) -> Figures:
-        everywhere = np.full(zones, missing)
-        everywhere[at] = figures
-        return everywhere
 
-    if not len(at):
-        unknown = spread_out(np.empty(0))
-        return Summary(
-            mean=unknown, sd=unknown, min=unknown, p10=unknown, p50=unknown, p90=unknown,
-            max=unknown, weight=np.zeros(zones),
-        )  # fmt: skip
-    starts, counts = distinct.starts, distinct.counts
-    weight = np.add.reduceat(distinct.weights, starts)
-    lowest, highest = distinct.values[starts], distinct.values[starts + counts - 1]
-    mean = np.add.reduceat(distinct.weights * distinct.values, starts) / weight
+@compiled
+def _read(
+    values: NDArray[np.float32], weights: Figures, number: int, shares: Figures, figures: Figures
+) -> None:
+    """Read the figures of one zone from its distinct values and their joint weights."""
+    last = number - 1
+    total, first = 0.0, 0.0
+    for at in range(last + 1):
+        total += weights[at]
+        first += weights[at] * values[at]
     # The last bit of a rounded sum may leave the range of the values.
-    mean = np.clip(mean, lowest, highest)
-    apart = distinct.values - np.repeat(mean, counts)
-    variance = np.add.reduceat(distinct.weights * apart * apart, starts) / weight
-    p10, p50, p90 = _quantiles(distinct, weight, (0.1, 0.5, 0.9))
-    return Summary(
-        mean=spread_out(mean),
-        sd=spread_out(np.sqrt(variance)),
-        min=spread_out(lowest),
-        p10=spread_out(p10),
-        p50=spread_out(p50),
-        p90=spread_out(p90),
-        max=spread_out(highest),
-        weight=spread_out(weight, missing=0.0),
-    )
-
-
-def _distinct(
-    values: NDArray[np.float32], weights: NDArray[np.float32], indptr: NDArray[np.int64]
-) -> _Distinct:
-    counts = ~np.isnan(values) & (weights > 0)
-    # Adding 0 turns -0.0 into 0.0, which is the same value with other bits.
-    kept = values[counts] + np.float32(0)
-    per_zone = np.diff(narrowed(indptr, counts))
-    zone = np.repeat(np.arange(len(per_zone), dtype=np.uint64), per_zone)
-    # One integer sorts by zone, then by value: the bits of a positive float32 ascend with it,
-    # those of a negative one descend, so the latter are turned over.
-    bits = kept.view(np.uint32)
-    ascending = np.where(bits & _SIGN, ~bits, bits | _SIGN)
-    keys = (zone << _ZONE_SHIFT) | ascending
-    order = np.argsort(keys)
-    keys = keys[order]
-    firsts = _runs(keys)
-    joint = weights[counts][order].astype(np.float64)
-    owner = (keys[firsts] >> _ZONE_SHIFT).astype(np.intp)
-    starts = _runs(owner)
-    return _Distinct(
-        values=kept[order][firsts].astype(np.float64),
-        weights=np.add.reduceat(joint, firsts) if len(firsts) else joint,
-        starts=starts,
-        counts=np.diff(np.append(starts, len(owner))),
-        zones=owner[starts],
-    )
-
-
-def _runs(keys: NDArray[np.uint64] | NDArray[np.intp]) -> NDArray[np.intp]:
-    """Return where each run of equal keys begins."""
-    return np.flatnonzero(np.concatenate([np.ones(len(keys[:1]), bool), keys[1:] != keys[:-1]]))
-
-
-def _quantiles(distinct: _Distinct, weight: Figures, shares: tuple[float, ...]) -> list[Figures]:
-    """Read weighted quantiles; each of shape (filled zones,)."""
-    starts, counts = distinct.starts, distinct.counts
-    lasts = starts + counts - 1
-    running = np.cumsum(distinct.weights) - distinct.weights
-    before = running - np.repeat(running[starts], counts)
-    rank = np.arange(len(before)) - np.repeat(starts, counts)
-    gaps = counts - 1.0
-    places = rank * distinct.weights + np.repeat(gaps, counts) * before
-    read = []
-    for share in shares:
-        target = share * gaps * weight
-        reached = np.add.reduceat(places <= np.repeat(target, counts), starts, dtype=np.intp)
-        below = starts + reached - 1
-        above = np.minimum(below + 1, lasts)
-        low, high = distinct.values[below], distinct.values[above]
-        width = places[above] - places[below]
-        # Where there is no neighbour above, the width is 0 and so is the way to it.
-        part = np.divide(target - places[below], width, out=np.zeros_like(width), where=width > 0)
-        # Values of very different size may round past the neighbour.
-        read.append(np.clip(low + part * (high - low), low, high))
-    return read
+    mean = min(max(first / total, np.float64(values[0])), np.float64(values[last]))
+    second, before = 0.0, 0.0
+    place, low = 0.0, np.float64(values[0])
+    wanted = 0
+    for at in range(last + 1):
+        value = np.float64(values[at])
+        apart = value - mean
+        second += weights[at] * (apart * apart)
+        here = at * weights[at] + last * before
+        while wanted < len(shares) and here > shares[wanted] * last * total:
+            part = (shares[wanted] * last * total - place) / (here - place)
+            # Values of very different size may round past the neighbour.
+            figures[_P10 + wanted] = min(max(low + part * (value - low), low), value)
+            wanted += 1
+        before += weights[at]
+        place, low = here, value
+    for late in range(wanted, len(shares)):
+        figures[_P10 + late] = np.float64(values[last])
+    figures[_MEAN] = mean
+    figures[_SD] = np.sqrt(second / total)
+    figures[_MIN] = values[0]
+    figures[_MAX] = values[last]
+    figures[_WEIGHT] = total

@@ -9,7 +9,7 @@ import os
 import signal
 import sys
 import threading
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from functools import partial
 from itertools import count
 from typing import Any, Final
@@ -27,8 +27,10 @@ import service.jobs.measuring
 import service.jobs.parcel_files
 import service.jobs.parcel_import
 import service.jobs.upkeep
+import service.observe
 import service.products.places
 import service.store.observations
+import service.tiles.plans
 
 
 def die() -> None:
@@ -63,6 +65,19 @@ def after(owner: Any, name: str, *, times: int = 1) -> None:
     setattr(owner, name, dying)
 
 
+def in_mid_plan() -> None:
+    """Die when half of a plan is written."""
+    written = service.tiles.plans._written
+
+    def dying(*args: Any) -> Iterator[Any]:
+        for place, piece in enumerate(written(*args)):
+            yield piece
+            if place == 5:
+                die()
+
+    service.tiles.plans._written = dying
+
+
 def ask_to_end_and_go_on() -> None:
     """Ask this process to end, as an operator would, and keep its step at work."""
     os.kill(os.getpid(), signal.SIGTERM)
@@ -85,6 +100,9 @@ POINTS: Final[Mapping[str, Callable[[], None]]] = {
     "after-job": partial(after, service.jobs.ingest, "enqueue"),
     # Measuring: before the pixels, among the rows, before the commit.
     "before-pixels": partial(before, service.jobs.measuring, "observe"),
+    "before-plan": partial(before, service.tiles.plans, "plan_of"),
+    "in-mid-plan": in_mid_plan,
+    "in-a-batch": partial(before, service.observe, "summarise", times=5),
     "rows-inserted": partial(before, service.store.observations, "bump_revisions"),
     "rows-not-committed": partial(after, service.jobs.measuring, "record"),
     # The observations are there and the scene is not done: the queue knows nothing of the

@@ -31,6 +31,7 @@ from service.store.scenes import lock_scene
 from service.store.sessions import Sessions, open_engine
 from service.store.tables import Base, Latest, Layout, Observation, Scene, SceneFile, Write
 from service.tiles.archive import Archive
+from service.tiles.plans import Plans
 from tests.conftest import fresh_settings
 from tests.serving import ALL_SCOPES, SCENE, Service, serving, square, write_band
 
@@ -283,6 +284,7 @@ def test_a_file_kept_without_a_row_is_swept_once_it_is_old_and_may_be_sent_again
             settings=deployment.settings,
             sessions=deployment.sessions,
             archive=Archive(deployment.settings.data / "files"),
+            plans=Plans(deployment.settings.data / "plans", limit_bytes=0),
         )
         tidy(work)
         assert len(deployment.kept()) == len(deployment.files)
@@ -311,7 +313,13 @@ def test_killed_between_the_row_and_the_answer_it_keeps_the_promise(
 
 
 @killed_at(
-    "before-pixels", "rows-inserted", "rows-not-committed", also_on_postgresql="rows-inserted"
+    "before-plan",
+    "in-mid-plan",
+    "before-pixels",
+    "in-a-batch",
+    "rows-inserted",
+    "rows-not-committed",
+    also_on_postgresql="rows-inserted",
 )
 def test_killed_in_mid_measure_it_measures_anew(
     deployment: Deployment, undisturbed: Undisturbed, point: str
@@ -320,6 +328,9 @@ def test_killed_in_mid_measure_it_measures_anew(
     assert deployment.state() == "running"
     assert deployment.counts()["write"] == 0
     assert deployment.counts()["observation"] == 0
+    # A plan has its name only once it is whole.
+    kept = sorted(path.suffix for path in (deployment.settings.data / "plans").iterdir())
+    assert kept == {"before-plan": [], "in-mid-plan": [".part"]}.get(point, [".plan"])
     finishes_by_itself(deployment, undisturbed)
 
 

@@ -13,10 +13,10 @@ TOP_LEVEL = {
     "LICENSE",
     "pyproject.toml",
     "service",
+    "benchmarks",
     "migrations",
     "tests",
     "sample_tiles",
-    "benchmarks",
     "docker",
 }
 LINES_PER_MODULE = 400

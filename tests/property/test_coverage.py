@@ -6,15 +6,16 @@ from affine import Affine
 from hypothesis import given
 from hypothesis import strategies as st
 
-from service.zonal.coverage import MIN_COVERAGE, zones_on
+from service.zonal.coverage import MIN_COVERAGE, shares_on, zones_on
 from service.zonal.grid import Grid
+from service.zonal.statistics import mean_and_sd
 
 ROWS, COLS = 9, 12
 # Not a whole number of cells from zero, and five million metres away from it.
 GRID = Grid(
     crs="EPSG:32633", transform=Affine(10, 0, 499_983.0, 0, -10, 5_400_007.0), shape=(ROWS, COLS)
 )
-# The library keeps fractions in single precision.
+# Fractions are kept in single precision.
 SINGLE = 1e-6
 
 LEFT, TOP = 499_983.0, 5_400_007.0
@@ -110,3 +111,72 @@ def test_cutting_a_parcel_in_two_shares_its_weight_between_the_parts(boundary, a
 
     whole, _ = fractions_of(boundary)
     np.testing.assert_allclose(halves[0] + halves[1], whole, atol=3 * (MIN_COVERAGE + SINGLE))
+
+
+# In columns and rows, where the oracle's own rounding is small.
+UNIT_CELLS = shapely.box(_COL, _ROW, _COL + 1, _ROW + 1)
+
+
+def in_cells(boundary):
+    return shapely.transform(boundary, lambda points: (points - [LEFT, TOP]) / [10, -10])
+
+
+def exact_shares(outline, *, turned=False):
+    """Every cell's share in float64, none left out; rows may be counted from the other end."""
+    if turned:
+        outline = shapely.transform(outline, lambda points: points * [1, -1] + [0, ROWS])
+    cells, shares, _ = shares_on((ROWS, COLS), np.array([outline], dtype=object), least=1e-300)
+    image = np.zeros(ROWS * COLS)
+    image[cells] = shares
+    return image.reshape(ROWS, COLS)[:: -1 if turned else 1]
+
+
+@given(boundaries())
+def test_areas_on_the_grid_are_exact_to_a_billionth(boundary):
+    outline = in_cells(boundary)
+
+    shares = exact_shares(outline)
+
+    truth = shapely.area(shapely.intersection(UNIT_CELLS, outline)).reshape(ROWS, COLS)
+    np.testing.assert_allclose(shares, truth, atol=1e-9)
+    whole = shapely.area(shapely.intersection(outline, shapely.box(0, 0, COLS, ROWS)))
+    np.testing.assert_allclose(shares.sum(), whole, rtol=1e-9, atol=1e-9)
+
+
+@given(boundaries(), st.booleans(), st.integers(0, 12))
+def test_neither_direction_nor_start_of_a_ring_matters(boundary, backwards, start):
+    outline = in_cells(boundary)
+
+    def turned(ring):
+        points = shapely.get_coordinates(ring)[:-1]
+        points = np.roll(points, start, axis=0)
+        points = points[::-1] if backwards else points
+        return np.vstack([points, points[:1]])
+
+    parts = [
+        shapely.Polygon(turned(part.exterior), [turned(hole) for hole in part.interiors])
+        for part in shapely.get_parts(outline)
+    ]
+
+    np.testing.assert_allclose(
+        exact_shares(shapely.MultiPolygon(parts)), exact_shares(outline), atol=1e-12
+    )
+
+
+@given(boundaries(), st.integers(0, 2**32))
+def test_rows_counted_from_the_other_end_give_the_same_to_a_trillionth(boundary, seed):
+    outline = in_cells(boundary)
+    # A whole number of 2^-40 of a cell, so that turning it loses nothing by itself.
+    outline = shapely.transform(outline, lambda points: np.rint(points * 2.0**40) * 2.0**-40)
+
+    here, there = exact_shares(outline), exact_shares(outline, turned=True)
+
+    np.testing.assert_allclose(there, here, rtol=0, atol=1e-12)
+    values = np.random.default_rng(seed).uniform(-1, 1, (ROWS, COLS))
+    one_zone = np.array([0, ROWS * COLS])
+    # With float64 weights, and each in its own order of cells.
+    mean, sd = mean_and_sd(values.ravel(), here.ravel(), one_zone)
+    other_mean, other_sd = mean_and_sd(values[::-1].ravel(), there[::-1].ravel(), one_zone)
+    if here.sum() > 0.01:
+        np.testing.assert_allclose(other_mean, mean, rtol=0, atol=1e-12)
+        np.testing.assert_allclose(other_sd**2, sd**2, rtol=0, atol=1e-12)

@@ -1,4 +1,4 @@
-"""From blocks and zones to figures, on scenes that a person can check.
+"""From strips and zones to figures, on scenes that a person can check.
 
 The scenes are ours: a few cells with round reflectances. Index formulas are checked in the
 tests of `spectral`; here they are computed by hand from their published definitions.
@@ -9,7 +9,6 @@ import dataclasses
 import numpy as np
 import pytest
 import shapely
-import xarray as xr
 from affine import Affine
 
 from service.observe import BAND_STATS, INDEX_STATS, LOOK_FIGURES, columns_for, observe
@@ -18,6 +17,8 @@ from service.spectral.quality import SCL
 from service.spectral.roles import BandRole
 from service.zonal.coverage import zones_on
 from service.zonal.grid import Grid
+from service.zonal.plan import plan_of
+from tests.scenes_in_memory import ArrayScene
 
 RED, NIR, SWIR16 = BandRole.RED, BandRole.NIR, BandRole.SWIR16
 NDVI, NDMI, EVI = INDICES["ndvi"], INDICES["ndmi"], INDICES["evi"]
@@ -41,21 +42,11 @@ def box(left, top, right, bottom):
     )
 
 
-def block(bands, quality=None, *, row0=0, col0=0, grid_cols=4, **how):
-    """A block of stored numbers: reflectance = number / 10,000 - 0.1 unless said otherwise."""
-    attrs = {"scale": 1e-4, "offset": -0.1, "nodata": 0, "saturated": 65_535} | how
-    variables = {
-        role.value: (("y", "x"), np.asarray(numbers), attrs) for role, numbers in bands.items()
-    }
+def block(bands, quality=None, **how):
+    """A scene of stored numbers: reflectance = number / 10,000 - 0.1 unless said otherwise."""
     if quality is not None:
-        variables["quality"] = (("y", "x"), np.asarray(quality, dtype=np.uint8), {"nodata": 0})
-    rows, cols = next(iter(variables.values()))[1].shape
-    grid = grid_of(row0 + rows, grid_cols)
-    return xr.Dataset(
-        variables,
-        coords={"y": grid.centre_ys(row0, row0 + rows), "x": grid.centre_xs(col0, col0 + cols)},
-        attrs={"row0": row0, "col0": col0, "grid_cols": grid_cols},
-    )
+        quality = np.asarray(quality, dtype=np.uint8)
+    return ArrayScene(bands=bands, quality=quality, **how)
 
 
 def stored(reflectance):
@@ -66,18 +57,29 @@ def four_by_four(reflectance):
     return stored(np.full((4, 4), reflectance))
 
 
-def figures_of(blocks, geometries, *, roles, indices=(NDVI,), quality=SCL, rule="clear"):
-    """The figures of each zone by column."""
-    zones = zones_on(grid_of(4, 4), geometries)
+def plan_on(geometries, rows=4, cols=4):
+    grid = grid_of(rows, cols)
+    return plan_of(grid, zones_on(grid, geometries))
+
+
+def observed(scene, geometries, *, roles, indices=(NDVI,), quality=SCL, rule="clear"):
+    plan = plan_on(geometries)
     with np.errstate(all="raise"):
-        seen = observe(blocks, zones, roles=roles, indices=indices, quality=quality, rule=rule)
+        return observe(
+            scene.strips(plan), plan, roles=roles, indices=indices, quality=quality, rule=rule
+        )
+
+
+def figures_of(scene, geometries, **how):
+    """The figures of each zone by column."""
+    seen = observed(scene, geometries, **how)
     return [dict(zip(seen.columns, row.tolist(), strict=True)) for row in seen.figures]
 
 
 def test_a_clear_parcel_of_one_surface():
     scene = block({RED: four_by_four(0.04), NIR: four_by_four(0.36)}, CLEAR)
 
-    (seen,) = figures_of([scene], [box(0.5, 0.5, 2.5, 2.5)], roles=(RED, NIR))
+    (seen,) = figures_of(scene, [box(0.5, 0.5, 2.5, 2.5)], roles=(RED, NIR))
 
     assert seen["clear.valid_share"] == 1.0
     assert seen["clear.pixels"] == seen["ndvi.pixels"] == 4.0
@@ -95,8 +97,8 @@ def test_the_offset_is_added_before_the_index():
     # and 0.5172 where the offset was forgotten.
     bands = {RED: np.full((4, 4), 1400, np.uint16), NIR: np.full((4, 4), 4400, np.uint16)}
 
-    (right,) = figures_of([block(bands, CLEAR)], [box(0, 0, 4, 4)], roles=(RED, NIR))
-    (wrong,) = figures_of([block(bands, CLEAR, offset=0)], [box(0, 0, 4, 4)], roles=(RED, NIR))
+    (right,) = figures_of(block(bands, CLEAR), [box(0, 0, 4, 4)], roles=(RED, NIR))
+    (wrong,) = figures_of(block(bands, CLEAR, offset=0), [box(0, 0, 4, 4)], roles=(RED, NIR))
 
     assert right["ndvi.mean"] == pytest.approx(0.7895, abs=5e-5)
     assert wrong["ndvi.mean"] == pytest.approx(0.5172, abs=5e-5)
@@ -106,7 +108,7 @@ def test_cells_weigh_by_their_coverage():
     red = stored([[0.1, 0.3]])
     scene = block({RED: red}, [[VEGETATION] * 2])
 
-    (seen,) = figures_of([scene], [box(0, 0, 1.25, 1)], roles=(RED,), indices=())
+    (seen,) = figures_of(scene, [box(0, 0, 1.25, 1)], roles=(RED,), indices=())
 
     # 1 cell of 0.1 and a quarter of a cell of 0.3.
     assert seen["red.mean"] == pytest.approx((0.1 + 0.25 * 0.3) / 1.25, rel=1e-6)
@@ -122,7 +124,7 @@ def test_every_reason_has_its_share_and_they_add_up():
     ]
     scene = block({RED: four_by_four(0.1)}, quality)
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 2)], roles=(RED,), indices=())
+    (seen,) = figures_of(scene, [box(0, 0, 4, 2)], roles=(RED,), indices=())
 
     assert seen["clear.valid_share"] == 2 / 8
     assert seen["clear.pixels"] == 2
@@ -133,7 +135,7 @@ def test_every_reason_has_its_share_and_they_add_up():
 def test_a_flooded_parcel_is_seen():
     scene = block({RED: four_by_four(0.05)}, [[WATER] * 4] * 4)
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 4)], roles=(RED,), indices=())
+    (seen,) = figures_of(scene, [box(0, 0, 4, 4)], roles=(RED,), indices=())
 
     assert seen["clear.valid_share"] == seen["clear.water"] == 1
 
@@ -141,7 +143,7 @@ def test_a_flooded_parcel_is_seen():
 def test_a_clear_surface_that_the_rule_drops_is_lost_to_no_reason():
     scene = block({RED: four_by_four(0.05)}, [[WATER] * 4, *[[VEGETATION] * 4] * 3])
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 4)], roles=(RED,), indices=(), rule="land")
+    (seen,) = figures_of(scene, [box(0, 0, 4, 4)], roles=(RED,), indices=(), rule="land")
 
     assert seen["land.valid_share"] == 0.75
     assert seen["land.water"] == 0.25
@@ -156,7 +158,7 @@ def test_a_clear_surface_that_the_rule_drops_is_lost_to_no_reason():
 def test_a_parcel_without_a_usable_cell_is_unknown_and_never_zero(covered, reason):
     bands = {RED: four_by_four(0.1), NIR: four_by_four(0.3)}
 
-    (seen,) = figures_of([block(bands, [[covered] * 4] * 4)], [box(0, 0, 3, 3)], roles=(RED, NIR))
+    (seen,) = figures_of(block(bands, [[covered] * 4] * 4), [box(0, 0, 3, 3)], roles=(RED, NIR))
 
     assert seen["clear.valid_share"] == seen["clear.pixels"] == seen["ndvi.pixels"] == 0
     assert seen[f"clear.{reason}"] == 1
@@ -169,7 +171,7 @@ def test_one_bands_nodata_is_unknown_for_that_band_only():
     nir[0, 0] = 0
     scene = block({RED: red, NIR: nir}, CLEAR)
 
-    (seen,) = figures_of([scene], [box(0, 0, 2, 1)], roles=(RED, NIR))
+    (seen,) = figures_of(scene, [box(0, 0, 2, 1)], roles=(RED, NIR))
 
     assert seen["clear.valid_share"] == 1
     assert seen["clear.pixels"] == 2
@@ -183,7 +185,7 @@ def test_one_bands_saturated_number_is_unknown_for_that_band_only():
     red[0, 0] = 65_535
     scene = block({RED: red, NIR: nir}, CLEAR)
 
-    (seen,) = figures_of([scene], [box(0, 0, 2, 1)], roles=(RED, NIR))
+    (seen,) = figures_of(scene, [box(0, 0, 2, 1)], roles=(RED, NIR))
 
     assert seen["clear.valid_share"] == 1
     assert seen["clear.saturation"] == 0
@@ -196,7 +198,7 @@ def test_a_cell_without_any_number_is_lost_to_saturation_or_to_nodata():
     red[0, :3], nir[0, :3] = [0, 65_535, 0], [0, 65_535, 65_535]
     scene = block({RED: red, NIR: nir}, CLEAR)
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 1)], roles=(RED, NIR))
+    (seen,) = figures_of(scene, [box(0, 0, 4, 1)], roles=(RED, NIR))
 
     assert seen["clear.valid_share"] == 0.25
     assert seen["clear.nodata"] == 0.25
@@ -207,7 +209,7 @@ def test_nodata_is_told_from_a_reflectance_of_zero_by_the_stored_number():
     red = np.full((4, 4), 1000, np.uint16)  # reflectance 0
     nir = np.full((4, 4), 1000, np.uint16)
 
-    (seen,) = figures_of([block({RED: red, NIR: nir}, CLEAR)], [box(0, 0, 1, 1)], roles=(RED, NIR))
+    (seen,) = figures_of(block({RED: red, NIR: nir}, CLEAR), [box(0, 0, 1, 1)], roles=(RED, NIR))
 
     assert seen["clear.valid_share"] == 1
     assert seen["red.mean"] == 0
@@ -219,7 +221,7 @@ def test_nodata_is_told_from_a_reflectance_of_zero_by_the_stored_number():
 def test_a_small_negative_reflectance_is_kept():
     bands = {RED: four_by_four(-0.02), NIR: four_by_four(0.3)}
 
-    (seen,) = figures_of([block(bands, CLEAR)], [box(0, 0, 1, 1)], roles=(RED, NIR))
+    (seen,) = figures_of(block(bands, CLEAR), [box(0, 0, 1, 1)], roles=(RED, NIR))
 
     assert seen["red.mean"] == np.float32(-0.02)
     assert seen["ndvi.mean"] == pytest.approx(0.32 / 0.28, rel=1e-6)
@@ -229,7 +231,7 @@ def test_what_lies_off_the_grid_is_lost_to_nodata():
     scene = block({RED: four_by_four(0.1)}, CLEAR)
 
     over_the_edge, outside, empty = figures_of(
-        [scene],
+        scene,
         [box(-1, 0, 1, 1), box(10, 10, 11, 11), shapely.Polygon()],
         roles=(RED,),
         indices=(),
@@ -242,32 +244,38 @@ def test_what_lies_off_the_grid_is_lost_to_nodata():
         assert np.isnan(unseen["red.mean"])
 
 
-def test_a_cell_that_no_block_holds_has_no_data():
-    scene = block({RED: stored(np.full((2, 4), 0.1))}, [[VEGETATION] * 4] * 2)
+def test_a_zone_whose_last_cell_does_not_come_has_no_data():
+    scene = block({RED: four_by_four(0.1)}, CLEAR)
+    plan = plan_on([box(0, 0, 4, 4)])
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 4)], roles=(RED,), indices=())
-    (nothing,) = figures_of([], [box(0, 0, 4, 4)], roles=(RED, NIR))
+    def figures(strips):
+        seen = observe(strips, plan, roles=(RED,), indices=(), quality=SCL, rule="clear")
+        return dict(zip(seen.columns, seen.figures[0].tolist(), strict=True))
 
-    assert (seen["clear.valid_share"], seen["clear.nodata"]) == (0.5, 0.5)
-    assert (nothing["clear.valid_share"], nothing["clear.nodata"]) == (0, 1)
-    assert np.isnan(nothing["red.mean"])
+    nothing = figures([])
+    half = figures([scene.strip(plan, 0, 8)])
+
+    for seen in (nothing, half):
+        assert (seen["clear.valid_share"], seen["clear.nodata"]) == (0, 1)
+        assert np.isnan(seen["red.mean"])
 
 
-def test_a_block_without_the_promised_quality_layer_has_no_usable_cell():
+def test_a_scene_without_the_promised_quality_layer_has_no_usable_cell():
     scene = block({RED: four_by_four(0.1)})
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 4)], roles=(RED,), indices=())
+    (seen,) = figures_of(scene, [box(0, 0, 4, 4)], roles=(RED,), indices=())
 
     assert (seen["clear.valid_share"], seen["clear.nodata"]) == (0, 1)
 
 
-def test_the_quality_files_own_mark_for_nodata_comes_before_its_classes():
-    scene = block({RED: four_by_four(0.1)}, [[VEGETATION, 7, 7, 7]] * 4)
-    scene["quality"].attrs["nodata"] = 7
+def test_the_number_for_what_lies_outside_the_layer_comes_before_its_classes():
+    scene = block({RED: four_by_four(0.1)}, [[VEGETATION, WATER, WATER, WATER]] * 4)
+    layer = dataclasses.replace(SCL, outside=WATER)
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 4)], roles=(RED,), indices=())
+    (seen,) = figures_of(scene, [box(0, 0, 4, 4)], roles=(RED,), indices=(), quality=layer)
 
     assert (seen["clear.valid_share"], seen["clear.nodata"]) == (0.25, 0.75)
+    assert seen["clear.water"] == 0
 
 
 def test_a_class_without_any_bands_number_is_no_evidence():
@@ -275,7 +283,7 @@ def test_a_class_without_any_bands_number_is_no_evidence():
     red[0] = 0
     scene = block({RED: red}, [[WATER, WATER, CLOUD, CLOUD], *[[VEGETATION] * 4] * 3])
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 4)], roles=(RED,), indices=())
+    (seen,) = figures_of(scene, [box(0, 0, 4, 4)], roles=(RED,), indices=())
 
     assert (seen["clear.water"], seen["clear.cloud"], seen["clear.nodata"]) == (0, 0, 0.25)
 
@@ -286,7 +294,7 @@ def test_without_a_quality_layer_every_number_counts_and_clouds_are_unknown():
     scene = block({RED: red})
 
     (seen,) = figures_of(
-        [scene], [box(0, 0, 4, 1)], roles=(RED,), indices=(), quality=None, rule="none"
+        scene, [box(0, 0, 4, 1)], roles=(RED,), indices=(), quality=None, rule="none"
     )
 
     assert (seen["none.valid_share"], seen["none.nodata"]) == (0.75, 0.25)
@@ -300,7 +308,7 @@ def test_a_band_of_20_m_is_given_at_the_cells_of_10_m():
     coarse = stored([[0.1, 0.2], [0.3, 0.4]])
     scene = block({NIR: nir, SWIR16: coarse.repeat(2, axis=0).repeat(2, axis=1)}, CLEAR)
 
-    (seen,) = figures_of([scene], [box(1, 0, 3, 1)], roles=(NIR, SWIR16), indices=(NDMI,))
+    (seen,) = figures_of(scene, [box(1, 0, 3, 1)], roles=(NIR, SWIR16), indices=(NDMI,))
 
     # Two cells of 10 m, one in each of the upper cells of 20 m.
     by_cell = [(0.22 - 0.1) / (0.22 + 0.1), (0.24 - 0.2) / (0.24 + 0.2)]
@@ -314,23 +322,11 @@ def test_a_smaller_band_given_as_floats_is_unknown_where_it_has_no_cell():
     swir[:, 2:] = np.nan
     scene = block({NIR: nir, SWIR16: swir}, CLEAR)
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 1)], roles=(NIR, SWIR16), indices=(NDMI,))
+    (seen,) = figures_of(scene, [box(0, 0, 4, 1)], roles=(NIR, SWIR16), indices=(NDMI,))
 
     assert seen["clear.valid_share"] == 1
     assert seen["ndmi.pixels"] == 2
     assert seen["ndmi.mean"] == np.float32(0.5)
-
-
-def test_a_band_may_change_its_type_from_block_to_block():
-    upper = block({RED: stored(np.full((2, 4), 0.1))}, [[VEGETATION] * 4] * 2)
-    lower_red = stored(np.full((2, 4), 0.3)).astype(np.float32)
-    lower_red[0, 0] = np.nan
-    lower = block({RED: lower_red}, [[VEGETATION] * 4] * 2, row0=2)
-
-    for blocks in ([upper, lower], [lower, upper]):
-        (seen,) = figures_of(blocks, [box(0, 0, 1, 4)], roles=(RED,), indices=())
-        assert seen["red.mean"] == pytest.approx((0.1 + 0.1 + 0.3) / 3, rel=1e-6)
-        assert seen["clear.valid_share"] == 0.75
 
 
 @pytest.mark.parametrize("mark", [-9999.0, -3.4028234663852886e38, -1.7e308, 0.1, np.nan])
@@ -342,19 +338,16 @@ def test_a_float_files_mark_for_nodata_is_no_number(mark):
     red[0, 1] = np.inf
     scene = block({RED: red}, CLEAR, scale=1.0, offset=0.0, nodata=mark, saturated=None)
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 1)], roles=(RED,), indices=())
+    (seen,) = figures_of(scene, [box(0, 0, 4, 1)], roles=(RED,), indices=())
 
     assert seen["red.mean"] == 0.25
     assert (seen["clear.valid_share"], seen["clear.nodata"]) == (0.5, 0.5)
 
 
 def test_an_index_without_its_bands_is_skipped_with_the_reason():
-    zones = zones_on(grid_of(4, 4), [box(0, 0, 4, 4)])
     scene = block({NIR: four_by_four(0.3), SWIR16: four_by_four(0.1)}, CLEAR)
 
-    seen = observe(
-        [scene], zones, roles=(NIR, SWIR16), indices=(NDVI, NDMI, EVI), quality=SCL, rule="clear"
-    )
+    seen = observed(scene, [box(0, 0, 4, 4)], roles=(NIR, SWIR16), indices=(NDVI, NDMI, EVI))
 
     assert seen.measured == ("ndmi",)
     assert set(seen.skipped) == {"ndvi", "evi"}
@@ -376,10 +369,10 @@ def test_the_columns_are_look_then_indices_then_bands():
 
 
 def test_the_figures_have_the_columns_that_were_announced():
-    zones = zones_on(grid_of(4, 4), [box(0, 0, 4, 4), box(1, 1, 2, 2)])
+    zones = [box(0, 0, 4, 4), box(1, 1, 2, 2)]
     scene = block({RED: four_by_four(0.1), NIR: four_by_four(0.3)}, CLEAR)
 
-    seen = observe([scene], zones, roles=(RED, NIR), indices=(NDVI,), quality=SCL, rule="clear")
+    seen = observed(scene, zones, roles=(RED, NIR))
 
     assert seen.columns == columns_for((RED, NIR), (NDVI,), "clear")
     assert seen.figures.shape == (2, len(seen.columns))
@@ -387,10 +380,9 @@ def test_the_figures_have_the_columns_that_were_announced():
 
 
 def test_no_zones_give_no_rows():
-    zones = zones_on(grid_of(4, 4), [])
     scene = block({RED: four_by_four(0.1)}, CLEAR)
 
-    seen = observe([scene], zones, roles=(RED,), indices=(), quality=SCL, rule="clear")
+    seen = observed(scene, [], roles=(RED,), indices=())
 
     assert seen.figures.shape == (0, len(seen.columns))
 
@@ -400,12 +392,14 @@ def test_parcels_of_more_cells_than_fit_one_batch_are_each_as_alone():
     numbers = np.random.default_rng(20_260_101)
     red, nir = (numbers.integers(1_100, 6_000, (rows, cols), dtype=np.uint16) for _ in "rn")
     quality = numbers.choice([VEGETATION, CLOUD], size=(rows, cols))
-    scene = block({RED: red, NIR: nir}, quality, grid_cols=cols)
+    scene = block({RED: red, NIR: nir}, quality)
     fields = [box(0, 0, 299.5, 300), box(299.5, 0, 600, 300), box(600, 0, 900, 299.5)]
 
     def figures(some):
-        zones = zones_on(grid_of(rows, cols), some)
-        seen = observe([scene], zones, roles=(RED, NIR), indices=(NDVI,), quality=SCL, rule="clear")
+        plan = plan_on(some, rows, cols)
+        seen = observe(
+            scene.strips(plan), plan, roles=(RED, NIR), indices=(NDVI,), quality=SCL, rule="clear"
+        )
         return seen.figures
 
     together = figures(fields)
@@ -416,9 +410,8 @@ def test_parcels_of_more_cells_than_fit_one_batch_are_each_as_alone():
 
 def with_bits(scene, bits, **bit_of):
     """The scene with a layer of saturation bits, and each band's bit in it."""
-    for role, bit in bit_of.items():
-        scene[role].attrs = {**scene[role].attrs, "saturation_bit": bit}
-    return scene.assign(saturation=(("y", "x"), np.asarray(bits, dtype=np.uint16), {"nodata": 0}))
+    own = {BandRole(role): bit for role, bit in bit_of.items()}
+    return dataclasses.replace(scene, bits=np.asarray(bits, dtype=np.uint16), bit_of=own)
 
 
 def test_a_band_whose_bit_is_set_is_unknown_for_that_band_only():
@@ -428,7 +421,7 @@ def test_a_band_whose_bit_is_set_is_unknown_for_that_band_only():
     scene = block({RED: four_by_four(0.1), NIR: four_by_four(0.3)}, CLEAR)
     scene = with_bits(scene, bits, red=3, nir=4)
 
-    (seen,) = figures_of([scene], [box(0, 0, 4, 1)], roles=(RED, NIR))
+    (seen,) = figures_of(scene, [box(0, 0, 4, 1)], roles=(RED, NIR))
 
     assert seen["clear.valid_share"] == 0.75
     assert seen["clear.saturation"] == 0.25
@@ -442,7 +435,7 @@ def test_a_gap_stays_a_gap_whatever_its_saturation_bit_says():
     red[0, 0] = 0
     scene = with_bits(block({RED: red}, CLEAR), np.full((4, 4), 8), red=3)
 
-    (seen,) = figures_of([scene], [box(0, 0, 2, 1)], roles=(RED,), indices=())
+    (seen,) = figures_of(scene, [box(0, 0, 2, 1)], roles=(RED,), indices=())
 
     assert seen["clear.nodata"] == seen["clear.saturation"] == 0.5
 
@@ -450,7 +443,7 @@ def test_a_gap_stays_a_gap_whatever_its_saturation_bit_says():
 def test_a_band_without_a_bit_is_not_touched_by_the_layer_of_bits():
     scene = with_bits(block({RED: four_by_four(0.1)}, CLEAR), np.full((4, 4), 0xFFF))
 
-    (seen,) = figures_of([scene], [box(0, 0, 2, 1)], roles=(RED,), indices=())
+    (seen,) = figures_of(scene, [box(0, 0, 2, 1)], roles=(RED,), indices=())
 
     assert seen["clear.valid_share"] == 1
 
@@ -459,10 +452,10 @@ def test_a_clear_cell_near_cloud_counts_as_cloud_and_a_lost_one_keeps_its_reason
     quality = [[CLOUD, VEGETATION, SHADOW, WATER], *[[VEGETATION] * 4] * 3]
     near = np.zeros((4, 4), dtype=bool)
     near[0] = True
-    scene = block({RED: four_by_four(0.1)}, quality).assign(near_cloud=(("y", "x"), near))
+    scene = block({RED: four_by_four(0.1)}, quality, near_cloud=near)
 
-    (clear,) = figures_of([scene], [box(0, 0, 4, 1)], roles=(RED,), indices=())
-    (land,) = figures_of([scene], [box(0, 0, 4, 1)], roles=(RED,), indices=(), rule="land")
+    (clear,) = figures_of(scene, [box(0, 0, 4, 1)], roles=(RED,), indices=())
+    (land,) = figures_of(scene, [box(0, 0, 4, 1)], roles=(RED,), indices=(), rule="land")
 
     assert clear["clear.cloud"] == land["land.cloud"] == 0.75
     assert clear["clear.shadow"] == 0.25
@@ -483,7 +476,7 @@ def snowy():
 
 
 def test_an_index_of_snow_is_of_snow_cells_too_and_has_a_look_of_its_own():
-    (seen,) = figures_of([snowy()], [box(0, 0, 4, 1)], roles=(GREEN, SWIR16), indices=(NDSI,))
+    (seen,) = figures_of(snowy(), [box(0, 0, 4, 1)], roles=(GREEN, SWIR16), indices=(NDSI,))
 
     assert seen["clear.valid_share"] == 0.5
     assert seen["clear.snow"] == seen["clear.cloud"] == 0.25
@@ -501,7 +494,7 @@ def test_an_index_of_snow_is_of_snow_cells_too_and_has_a_look_of_its_own():
 def test_an_index_of_the_scene_s_rule_does_not_notice_its_company():
     mndwi = INDICES["mndwi"]
     alone, beside = (
-        figures_of([snowy()], [box(0, 0, 4, 1)], roles=(GREEN, SWIR16), indices=indices)[0]
+        figures_of(snowy(), [box(0, 0, 4, 1)], roles=(GREEN, SWIR16), indices=indices)[0]
         for indices in ((mndwi,), (NDSI, mndwi))
     )
 
@@ -519,10 +512,10 @@ def test_an_index_of_the_scene_s_rule_does_not_notice_its_company():
     ids=["no layer", "a layer without that rule", "that rule"],
 )
 def test_an_index_s_own_rule_needs_a_layer_that_has_it_and_is_not_the_scene_s(quality, rule):
-    zones = zones_on(grid_of(4, 4), [box(0, 0, 4, 1)])
+    parcel = [box(0, 0, 4, 1)]
 
-    seen = observe(
-        [snowy()], zones, roles=(GREEN, SWIR16), indices=(NDSI,), quality=quality, rule=rule
+    seen = observed(
+        snowy(), parcel, roles=(GREEN, SWIR16), indices=(NDSI,), quality=quality, rule=rule
     )
 
     assert seen.rules == {}
@@ -531,11 +524,7 @@ def test_an_index_s_own_rule_needs_a_layer_that_has_it_and_is_not_the_scene_s(qu
 
 
 def test_what_was_read_by_another_rule_is_told():
-    zones = zones_on(grid_of(4, 4), [box(0, 0, 4, 1)])
-
-    seen = observe(
-        [snowy()], zones, roles=(GREEN, SWIR16), indices=(NDSI,), quality=SCL, rule="clear"
-    )
+    seen = observed(snowy(), [box(0, 0, 4, 1)], roles=(GREEN, SWIR16), indices=(NDSI,))
 
     assert seen.rules == {"ndsi": "surface"}
     assert seen.columns == columns_for((GREEN, SWIR16), (NDSI,), "clear", seen.rules)

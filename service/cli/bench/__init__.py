@@ -5,7 +5,7 @@ A benchmark is one command of this group; `bench list` names whatever stands her
 
 import typer
 
-from service.cli.bench import judging, validation
+from service.cli.bench import engine, ingest, judging, validation
 
 app = typer.Typer(no_args_is_help=True, help="Measure how right and how fast the service is.")
 
@@ -21,3 +21,5 @@ def list_all() -> None:
 
 app.command("judging")(judging.judging)
 app.command("validation")(validation.validation)
+app.command("engine")(engine.engine)
+app.command("ingest")(ingest.ingest)

@@ -21,6 +21,7 @@ from service.store.observations import Measured, record
 from service.store.sessions import Sessions, migrate, open_engine
 from service.store.tables import Boundary, CropSeason, Parcel, Scene
 from service.tiles.archive import Archive
+from service.tiles.plans import Plans
 
 if TYPE_CHECKING:
     from benchmarks.wide_land import WideLand
@@ -35,7 +36,12 @@ def resources_on(data: Path) -> Resources:
     settings = Settings(data=data, disk_reserve_bytes=0)
     engine = open_engine(settings.app_url)
     migrate(engine, lock_folder=data)
-    return Resources(settings=settings, sessions=Sessions(engine), archive=Archive(data))
+    return Resources(
+        settings=settings,
+        sessions=Sessions(engine),
+        archive=Archive(data),
+        plans=Plans(data / "plans", limit_bytes=settings.plan_limit_bytes),
+    )
 
 
 def fill(work: Resources, land: "WideLand", seasons: Sequence[int]) -> None:

@@ -2,7 +2,7 @@
 
 import sys
 from importlib import import_module
-from importlib.util import find_spec, module_from_spec, spec_from_file_location
+from importlib.util import module_from_spec, spec_from_file_location
 from pathlib import Path
 from types import ModuleType
 from typing import Any, Final
@@ -18,16 +18,17 @@ def benchmark(name: str) -> Any:
     Raises
     ------
     Unavailable
-        This installation lacks them, or the canopy model that they need.
+        This installation lacks them, or a library that this one needs.
     """
-    if find_spec("prosail") is None:
-        raise Unavailable(
-            "no-canopy-model",
-            "The benchmark needs the canopy model that comes with the extra `test`; install it.",
-        )
     if PACKAGE not in sys.modules:
         sys.modules[PACKAGE] = _package()
-    return import_module(f"{PACKAGE}.{name}")
+    try:
+        return import_module(f"{PACKAGE}.{name}")
+    except ModuleNotFoundError as error:
+        raise Unavailable(
+            "no-library",
+            f"The benchmark needs {error.name}, which comes with the extra `test`; install it.",
+        ) from error
 
 
 def _package() -> ModuleType:

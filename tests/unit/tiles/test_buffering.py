@@ -10,11 +10,13 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 from numpy.typing import NDArray
 
+from service.spectral.gathered import Gathered
 from service.spectral.roles import BandRole
 from service.spectral.scaling import Scaling
 from service.tiles.buffering import CloudBuffer
 from service.tiles.parts import Area
-from service.tiles.reading import BandSource, SceneSource, read_blocks, read_tile
+from service.tiles.reading import BandSource, SceneSource
+from tests.unit.tiles.cells import image, layer_image, plan_for, strips_of
 from tests.unit.tiles.conftest import WriteRaster, grid_transform
 
 CLOUD = 9
@@ -72,30 +74,48 @@ def test_a_buffer_without_cells_is_none() -> None:
         buffer(0)
 
 
+def near_cloud(source: SceneSource, strip_cells: int = 10**6) -> NDArray[np.float64]:
+    """Which cells of the scene are near cloud."""
+    plan = plan_for(source)
+    strips = strips_of(source, plan, strip_cells=strip_cells)
+
+    def near(strip: Gathered) -> NDArray[np.bool_]:
+        assert strip.near_cloud is not None
+        return strip.near_cloud
+
+    return image(strips, plan, near)
+
+
 @pytest.mark.parametrize("coarse", [1, 2])
-def test_blocks_know_of_clouds_beyond_their_edges(write_raster: WriteRaster, coarse: int) -> None:
+@pytest.mark.parametrize("strip_cells", [10**6, 1_000])
+def test_strips_know_of_clouds_beyond_their_edges(
+    write_raster: WriteRaster, coarse: int, strip_cells: int
+) -> None:
     quality = some_clouds(60 // coarse, 80 // coarse)
     source = scene(write_raster, quality, transform=grid_transform(10.0 * coarse))
     near = by_hand(quality == CLOUD, 2)
     expected = np.repeat(np.repeat(near, coarse, 0), coarse, 1)
     assert 0.1 < expected.mean() < 0.9
 
-    np.testing.assert_array_equal(read_tile(source)["near_cloud"], expected)
-    random = np.random.default_rng(3)
-    wanted = np.sort(random.choice(60 * 80, 40, replace=False)).astype(np.int64)
-    blocks = list(read_blocks(source, wanted, block_bytes=2_000))
-    assert len(blocks) > 5
-    for block in blocks:
-        row0, col0 = block.attrs["row0"], block.attrs["col0"]
-        rows, cols = block["near_cloud"].shape
-        np.testing.assert_array_equal(
-            block["near_cloud"], expected[row0 : row0 + rows, col0 : col0 + cols]
-        )
+    np.testing.assert_array_equal(near_cloud(source, strip_cells), expected)
+
+
+def test_a_parcel_knows_of_clouds_beyond_its_block(write_raster: WriteRaster) -> None:
+    quality = np.full((60, 80), 4, np.uint8)
+    quality[15, 16] = CLOUD
+    source = scene(write_raster, quality)
+    plan = plan_for(source, (16, 18, 14, 16))
+
+    (strip,) = strips_of(source, plan)
+
+    # Rows 16 and 17, columns 14 and 15, of which the cloud is within two of each.
+    assert strip.near_cloud is not None
+    assert strip.near_cloud.tolist() == [True, True, True, True]
 
 
 def test_where_the_quality_layer_ends_nothing_is_near_cloud(write_raster: WriteRaster) -> None:
     quality = np.full((30, 80), CLOUD, np.uint8)
-    near = read_tile(scene(write_raster, quality))["near_cloud"].to_numpy()
+    near = near_cloud(scene(write_raster, quality))
     assert near[:30].all()
     assert not near[30:].any()
 
@@ -103,7 +123,7 @@ def test_where_the_quality_layer_ends_nothing_is_near_cloud(write_raster: WriteR
 def test_rows_of_the_quality_layer_may_run_north(write_raster: WriteRaster) -> None:
     quality = some_clouds(60, 80)
     up = Affine(10.0, 0.0, 500_000.0, 0.0, 10.0, 5_400_000.0 - 600.0)
-    near = read_tile(scene(write_raster, quality[::-1], transform=up))["near_cloud"]
+    near = near_cloud(scene(write_raster, quality[::-1], transform=up))
     np.testing.assert_array_equal(near, by_hand(quality == CLOUD, 2))
 
 
@@ -116,14 +136,15 @@ def test_a_layer_in_the_bands_own_file_is_buffered_too(write_raster: WriteRaster
         quality=BandSource(role="quality", path=path, band=2, scaling=None, nodata=0),
         cloud_buffer=buffer(1),
     )
-    tile = read_tile(source)
-    np.testing.assert_array_equal(tile["near_cloud"], by_hand(quality == CLOUD, 1))
-    np.testing.assert_array_equal(tile["quality"], quality)
+    plan = plan_for(source)
+    np.testing.assert_array_equal(near_cloud(source), by_hand(quality == CLOUD, 1))
+    classes = layer_image(strips_of(source, plan), plan, lambda strip: strip.classes)
+    np.testing.assert_array_equal(classes, quality)
 
 
-def test_without_a_buffer_a_block_does_not_speak_of_clouds(write_raster: WriteRaster) -> None:
+def test_without_a_buffer_a_strip_does_not_speak_of_clouds(write_raster: WriteRaster) -> None:
     red = write_raster("red.tif", np.ones((20, 20), np.uint16))
-    bits = write_raster("bits.tif", np.full((20, 20), 5, np.uint16))
+    bits = write_raster("bits.tif", np.full((20, 20), 8, np.uint16))
     source = SceneSource(
         bands=(
             BandSource(
@@ -132,8 +153,9 @@ def test_without_a_buffer_a_block_does_not_speak_of_clouds(write_raster: WriteRa
         ),
         saturation=BandSource(role="saturation", path=bits, scaling=None, nodata=0),
     )
-    tile = read_tile(source)
-    assert "near_cloud" not in tile
-    assert tile["red"].attrs["saturation_bit"] == 3
-    assert (tile["saturation"] == 5).all()
-    assert tile["saturation"].attrs["nodata"] == 0
+    (strip,) = strips_of(source)
+    assert strip.near_cloud is None
+    assert strip.bits is not None
+    assert (strip.bits.numbers == 8).all()
+    assert strip.saturated.all()
+    assert not strip.seen.any()

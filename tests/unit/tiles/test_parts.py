@@ -1,53 +1,40 @@
-"""The parts of a grid: whole blocks, within memory, around wanted cells only."""
+"""The parts of a file that are read: whole blocks that hold wanted cells, each once."""
 
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from service.tiles.intake import Header
-from service.tiles.parts import Area, part_shape, wanted_areas
-from service.zonal.grid import Grid
-from tests.unit.tiles.conftest import grid_transform
+from service.tiles.parts import Area, blocks_with, take_cells, wanted_areas
+from service.zonal.plan import row_starts
 
 
-def header(side: int, cell: float, block_shape: tuple[int, int], *, x: float = 500_000.0) -> Header:
-    return Header(
-        grid=Grid(crs="EPSG:32633", transform=grid_transform(cell, x=x), shape=(side, side)),
-        count=1,
-        dtypes=("uint16",),
-        nodata=(None,),
-        driver="GTiff",
-        block_shape=block_shape,
-    )
+def areas_of(wanted: list[str], *, most_cells: int = 10**6) -> list[Area]:
+    """Areas of a grid of 10 by 12 cells in blocks of 4 by 5, from a drawing of its blocks."""
+    drawn = np.array([[mark == "x" for mark in row] for row in wanted])
+    within = Area(row0=0, row1=10, col0=0, col1=12)
+    return list(wanted_areas(within, (4, 5), drawn, most_cells=most_cells))
 
 
 @pytest.mark.parametrize(
-    ("headers", "cells", "expected"),
+    ("wanted", "most_cells", "expected"),
     [
-        # All of it fits.
-        ([header(1000, 10, (512, 512))], 10**6, (1000, 1000)),
-        # Rows of one line: as many as fit.
-        ([header(1000, 10, (1, 1000))], 37_500, (37, 1000)),
-        # Tiles: whole rows of tiles, or as many tiles of one row as fit.
-        ([header(4000, 10, (512, 512))], 5_000_000, (1024, 4000)),
-        ([header(4000, 10, (512, 512))], 1_000_000, (512, 1536)),
-        # A coarser file that nests: its tiles cover 1024 cells.
-        ([header(4000, 10, (512, 512)), header(2000, 20, (512, 512))], 5_000_000, (1024, 4000)),
-        ([header(4000, 10, (512, 512)), header(2000, 20, (512, 512))], 2_500_000, (1024, 2048)),
-        # No small common multiple of 1024 and 1280: the grid's own tiles count.
-        ([header(10980, 10, (1024, 1024)), header(5490, 20, (640, 640))], 4_000_000, (1024, 3072)),
-        # A file that does not nest has no say.
-        ([header(4000, 10, (512, 512)), header(1400, 30, (7, 7), x=0)], 5_000_000, (1024, 4000)),
-        # A tile larger than memory is cut.
-        ([header(4000, 10, (4000, 4000))], 1_000_000, (250, 4000)),
-        ([header(4000, 10, (4000, 4000))], 100, (1, 100)),
+        (["...", "...", "..."], 10**6, []),
+        # All of it at once; at the edges blocks end with the grid.
+        (["xxx", "xxx", "xxx"], 10**6, [(0, 10, 0, 12)]),
+        # A row of blocks at a time, and two blocks at a time.
+        (["xxx", "xxx", "xxx"], 60, [(0, 4, 0, 12), (4, 8, 0, 12), (8, 10, 0, 12)]),
+        (["xxx", "...", "..."], 40, [(0, 4, 0, 10), (0, 4, 10, 12)]),
+        # A block that is too large is read all the same.
+        (["x..", "...", "..."], 1, [(0, 4, 0, 5)]),
+        (["x.x", "x.x", ".x."], 10**6, [(0, 8, 0, 5), (0, 8, 10, 12), (8, 10, 5, 10)]),
     ],
 )
-def test_parts_are_whole_blocks_within_memory(
-    headers: list[Header], cells: int, expected: tuple[int, int]
+def test_neighbours_are_read_together(
+    wanted: list[str], most_cells: int, expected: list[tuple[int, int, int, int]]
 ) -> None:
-    assert part_shape(headers[0].grid, headers, cells=cells) == expected
+    found = [(a.row0, a.row1, a.col0, a.col1) for a in areas_of(wanted, most_cells=most_cells)]
+    assert found == expected
 
 
 sizes = st.integers(1, 40)
@@ -60,31 +47,44 @@ sizes = st.integers(1, 40)
     seed=st.integers(0, 2**16),
     share=st.floats(0, 1),
 )
-def test_areas_are_disjoint_within_memory_and_hold_every_wanted_cell(
+def test_areas_are_disjoint_and_hold_every_wanted_cell_and_no_block_without_one(
     *, side: int, block: tuple[int, int], limit: int, seed: int, share: float
 ) -> None:
-    of = header(side, 10, (min(block[0], side), min(block[1], side)))
-    wanted = np.random.default_rng(seed).random((side, side)) < share
-    cells = np.flatnonzero(wanted).astype(np.int64)
-    part = part_shape(of.grid, [of], cells=limit)
-    assert part[0] * part[1] <= limit
+    height, width = block
+    random = np.random.default_rng(seed)
+    is_cell, is_wanted = random.random((side, side)) < 0.5, random.random((side, side)) < share**3
+    cells = np.flatnonzero(is_cell).astype(np.int32)
+    wanted = is_wanted.reshape(-1)[cells]
+    starts = row_starts(cells, (side, side))
+    found = blocks_with(cells, starts, 0, side, side, height, width, 0, wanted)
     held = np.zeros((side, side), dtype=int)
-    for area in wanted_areas(of.grid, part, cells):
-        inside = np.s_[area.row0 : area.row1, area.col0 : area.col1]
-        assert held[inside].size <= limit
-        # No row or column at the rim without a wanted cell.
-        rim = wanted[inside]
-        assert rim[0].any()
-        assert rim[-1].any()
-        assert rim[:, 0].any()
-        assert rim[:, -1].any()
-        held[inside] += 1
+    within = Area(row0=0, row1=side, col0=0, col1=side)
+    for area in wanted_areas(within, block, found, most_cells=limit):
+        size = (area.row1 - area.row0) * (area.col1 - area.col0)
+        assert size <= max(limit, height * width)
+        held[area.row0 : area.row1, area.col0 : area.col1] += 1
     assert held.max(initial=0) <= 1
-    assert held[wanted].all()
+    assert held[is_cell & is_wanted].all()
+    for top in range(0, side, height):
+        for left in range(0, side, width):
+            here = np.s_[top : top + height, left : left + width]
+            assert held[here].any() == (is_cell & is_wanted)[here].any()
 
 
-def test_no_wanted_cells_give_no_area() -> None:
-    of = header(10, 10, (1, 10))
-    assert list(wanted_areas(of.grid, (2, 10), np.empty(0, dtype=np.int64))) == []
-    (area,) = wanted_areas(of.grid, (2, 10), np.array([99], dtype=np.int64))
-    assert area == Area(row0=9, row1=10, col0=9, col1=10)
+@given(seed=st.integers(0, 2**16), rows=sizes, cols=sizes)
+def test_cells_are_taken_out_of_what_was_read(*, seed: int, rows: int, cols: int) -> None:
+    random = np.random.default_rng(seed)
+    image = random.integers(0, 2**16, (rows, cols), dtype=np.uint16)
+    cells = np.flatnonzero(random.random(rows * cols) < 0.4).astype(np.int32)
+    row0, row1 = np.sort(random.integers(0, rows + 1, 2)).tolist()
+    col0, col1 = np.sort(random.integers(0, cols + 1, 2)).tolist()
+    into = np.full(len(cells), 7, dtype=np.uint16)
+    area = (row0, row1, col0, col1)
+    starts = row_starts(cells, (rows, cols))
+    take_cells(
+        np.ascontiguousarray(image[row0:row1, col0:col1]), row0, col0, area, cells, starts, cols,
+        0, into,
+    )  # fmt: skip
+    row, col = np.divmod(cells, cols)
+    inside = (row >= row0) & (row < row1) & (col >= col0) & (col < col1)
+    np.testing.assert_array_equal(into, np.where(inside, image.reshape(-1)[cells], 7))

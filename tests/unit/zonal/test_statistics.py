@@ -5,7 +5,8 @@ import dataclasses
 import numpy as np
 import pytest
 
-from service.zonal.statistics import mean_and_sd, narrowed, summarise, sums
+from service.zonal.statistics import mean_and_sd, summarise, sums_by_bit
+from tests import numpy_statistics
 
 NINE = np.arange(1, 10, dtype=np.float32)
 SQUARE = np.array([0.25, 0.5, 0.25, 0.5, 1.0, 0.5, 0.25, 0.5, 0.25], dtype=np.float32)
@@ -140,19 +141,52 @@ def test_mean_and_spread_alone_agree_with_the_whole_summary():
 def test_a_small_spread_on_a_large_mean_is_not_lost():
     values = 10_000 + np.array([0.0, 0.5, 1.0], dtype=np.float32)
 
-    _, sd = mean_and_sd(values, np.ones(3, np.float32), pointer(3))
+    _, sd = mean_and_sd(values.astype(float), np.ones(3, np.float32), pointer(3))
 
     assert sd[0] == pytest.approx(np.sqrt(1 / 6), rel=1e-12)
     assert of_one_zone(values)["sd"] == pytest.approx(np.sqrt(1 / 6), rel=1e-12)
 
 
-def test_sums_of_zones_without_cells_are_zero():
-    amounts = np.array([1, 2, 4], dtype=np.float32)
+def test_weights_are_added_up_by_mark_and_over_all():
+    marks = np.array([0b01, 0b11, 0b1000_0000, 0b10], dtype=np.uint8)
 
-    assert sums(amounts, pointer(0, 2, 0, 1, 0)).tolist() == [0, 3, 0, 4, 0]
+    sums = sums_by_bit(marks, np.array([1, 2, 4, 8], dtype=np.float32), pointer(0, 2, 0, 2, 0))
+
+    empty = [0.0] * 9
+    assert sums.tolist() == [
+        empty, [3, 2, 0, 0, 0, 0, 0, 0, 3], empty, [0, 8, 0, 0, 0, 0, 0, 4, 12], empty
+    ]  # fmt: skip
 
 
-def test_zones_are_narrowed_to_the_cells_that_are_left():
-    left = np.array([True, False, False, True, True])
+def test_cells_that_a_rule_drops_do_not_count():
+    kept = np.array([True, False, True, False])
 
-    assert narrowed(pointer(2, 1, 2), left).tolist() == [0, 1, 1, 3]
+    found = summarise(NINE[:4], np.ones(4, np.float32), pointer(2, 2), kept)
+    mean, _ = mean_and_sd(NINE[:4].astype(float), np.ones(4, np.float32), pointer(2, 2), kept)
+
+    assert found.weight.tolist() == [1, 1]
+    assert found.mean.tolist() == found.max.tolist() == mean.tolist() == [1, 3]
+
+
+@pytest.mark.parametrize("size", [5, 24, 25, 300, 4096, 4097, 20_000])
+@pytest.mark.parametrize("shape", ["even", "one far away", "few values", "two heaps", "infinite"])
+def test_zones_of_any_size_and_shape_are_as_by_plain_numpy(size, shape):
+    random = np.random.default_rng([size, len(shape)])
+    values = random.normal(0.4, 0.2, size).astype(np.float32)
+    if shape == "one far away":
+        values[size // 2] = 1e30
+    elif shape == "few values":
+        values = values.round(1)
+    elif shape == "two heaps":
+        values = (values * 1e-6 + random.integers(0, 2, size)).astype(np.float32)
+    elif shape == "infinite":
+        values[:3] = np.inf, -np.inf, np.nan
+    weights = np.where(random.random(size) < 0.3, random.random(size), 1).astype(np.float32)
+
+    with np.errstate(invalid="ignore"):
+        expected = numpy_statistics.summarise(values, weights, pointer(size))
+    found = summarise(values, weights, pointer(size))
+
+    for field in dataclasses.fields(found):
+        got, truth = getattr(found, field.name), getattr(expected, field.name)
+        np.testing.assert_allclose(got, truth, rtol=1e-12, atol=1e-12, err_msg=field.name)

@@ -1,0 +1,1 @@
+"""Benchmarks of measuring: how near it comes to the cost of decoding the bands."""
