@@ -13,9 +13,9 @@ from typing import IO, Final
 
 from service.errors import Unavailable
 
-START_SECONDS: Final = 60.0
+START_SECONDS: Final = 180.0
 END_SECONDS: Final = 15.0
-COMMAND_SECONDS: Final = 60.0
+COMMAND_SECONDS: Final = 180.0
 LOG_LINES_SHOWN: Final = 20
 
 
