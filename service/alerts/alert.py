@@ -43,10 +43,10 @@ class Alert:
     `score`, `severity`, `basis` and `baseline` (a version) are those of the worst look so
     far, taken at `worst_at`; `looks` counts those that reached the threshold since
     `first_departure_at`, and `scenes` names theirs. All instants are acquisition times of
-    looks. `strength` and `chance`, the odds of being a false one, are those at opening, `p`
-    that of the worst look. `diary` tells what people wrote down for the time of it, which
-    does not explain it. `closed_by` is ``return`` when the parcel came back, ``person`` when
-    a person closed it.
+    looks. `growth` is the largest that was seen (`evidence`). `strength` and `chance`, the
+    odds of being a false one, are those at opening, `p` that of the worst look. `diary` tells
+    what people wrote down for the time of it, which does not explain it. `closed_by` is
+    ``return`` when the parcel came back, ``person`` when a person closed it.
     """
 
     id: str
@@ -79,6 +79,7 @@ class Alert:
     low_power: bool
     closed_by: str | None
     verdict: str | None
+    growth: float = 1.0
     strength: float = 0.0
     chance: float | None = None
     p: float | None = None
@@ -159,6 +160,7 @@ def opened(
     departing = [look for look in looks if look.departs]
     worst = max(departing, key=lambda look: look.score)
     last = instant(looks[-1].at)
+    evidence = evidence_of(looks, suddenness)
     return Alert(
         id=alert_id(parcel=parcel, rule=rule.id, opening=opening),
         rule=rule.id,
@@ -168,8 +170,9 @@ def opened(
         opened_at=last,
         closed_at=None,
         last_observed_at=last,
-        cause=attribute(evidence_of(looks, suddenness)),
+        cause=attribute(evidence),
         suddenness=suddenness,
+        growth=evidence.growth,
         looks=len(departing),
         scenes=tuple(look.scene for look in departing),
         closed_by=None,
@@ -182,10 +185,12 @@ def opened(
 def observed_again(alert: Alert, looks: Sequence[DepartedLook], *, rule: Rule) -> Alert:
     """Return an open alert after another departed look, the last of `looks`."""
     newest = looks[-1]
-    cause = alert.cause
-    if not keeps_label(cause.kind):
-        cause = attribute(evidence_of(looks, alert.suddenness))
-    moved = replace(alert, cause=cause, last_observed_at=instant(newest.at))
+    evidence = evidence_of(looks, alert.suddenness)
+    # What has once grown did not come at once: a cause does not go to and fro.
+    evidence = replace(evidence, growth=max(alert.growth, evidence.growth))
+    cause = alert.cause if keeps_label(alert.cause.kind) else attribute(evidence)
+    at = instant(newest.at)
+    moved = replace(alert, cause=cause, growth=evidence.growth, last_observed_at=at)
     if newest.departs:
         moved = replace(moved, looks=alert.looks + 1, scenes=(*alert.scenes, newest.scene))
     if newest.score > alert.score:

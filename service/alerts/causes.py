@@ -162,12 +162,8 @@ def _is_unclear(evidence: Evidence) -> bool:
 
 
 def _fits_partial_loss(evidence: Evidence) -> bool:
-    return (
-        _lost_cover(evidence)
-        and evidence.suddenness is not None
-        and evidence.suddenness > 0.8
-        and evidence.growth < 1.3
-    )
+    is_sudden = evidence.suddenness is None or evidence.suddenness > 0.8
+    return _lost_cover(evidence) and is_sudden and evidence.growth < 1.3
 
 
 CAUSES: Final = (

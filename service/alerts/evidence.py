@@ -29,8 +29,8 @@ class Evidence:
     rising
         By how much the expected NDVI rose over the past 20 days.
     growth
-        How many times larger the leading shortfall is at the last departed look than at the
-        first: what comes at once stays as it is.
+        How many times larger the leading shortfall is at the last look beyond the threshold
+        than at the first: what comes at once stays as it is.
     best
         Highest NDVI that the parcel had in the past 25 days, before the last look.
     """
@@ -86,8 +86,9 @@ def evidence_of(looks: Sequence[DepartedLook], suddenness: float | None) -> Evid
 
 
 def _growth(looks: Sequence[DepartedLook]) -> float:
-    index = max(looks, key=lambda look: look.score).index
-    first, last = looks[0].shortfall.get(index), looks[-1].shortfall.get(index)
+    beyond = [look for look in looks if look.departs] or looks
+    index = max(beyond, key=lambda look: look.score).index
+    first, last = beyond[0].shortfall.get(index), beyond[-1].shortfall.get(index)
     return 1.0 if not first or last is None else last / first
 
 

@@ -89,9 +89,11 @@ def because_moisture_stress(evidence: Evidence) -> str:
 
 def because_partial_loss(evidence: Evidence) -> str:
     """Say why a part of the cover was lost at once."""
+    share = "" if evidence.suddenness is None else f", {evidence.suddenness:.0%} of it at once"
+    came = "between two looks" if share else "in a gap between looks"
     return (
-        f"{_change(evidence, 'ndvi')}, most of it ({evidence.suddenness or 0.0:.0%}) from one "
-        f"look to the next, and {evidence.seen('ndvi'):.2f} is left: part of the cover went at once"
+        f"{_change(evidence, 'ndvi')}{share}, and near-infrared by {evidence.short('nir'):+.2f}; "
+        f"it came {came} and did not grow since, and NDVI {evidence.seen('ndvi'):.2f} is left"
     )
 
 

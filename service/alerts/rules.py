@@ -13,7 +13,7 @@ DEFAULT_THRESHOLD: Final = 3.0
 """Threshold while there is too little history to replay."""
 SINGLE_LOOK_FACTOR: Final = 3.0
 """One look this many thresholds out opens an alert alone."""
-NEW_CROP_EXTRA: Final = 1.0
+NEW_CROP_EXTRA: Final = 0.3
 """How much further a look of a crop without history must depart; twice that if it is alone."""
 LOW_POWER_FACTOR: Final = 2.0
 """How many times further a look without a crop must depart: its own history is all it has."""

@@ -146,14 +146,12 @@ def departures_in(
     own_expected = filled["usual"] + offset
     expected = own_expected + filled["level"]
     shortfall = values - expected
-    for crop in sorted(set(crops)):
-        if not cohorts[crop].is_new:
-            of_crop = names == crop
-            filled["spread"][of_crop] = spread_in_pass(
-                shortfall[of_crop],
-                middle=baselines.middle[crop][day],
-                whole=baselines.spread[crop][day],
-            )
+    for crop, cohort in cohorts.items():
+        of_crop = names == crop
+        # A crop without history has no tail but what the pass shows.
+        past = (baselines.middle, baselines.spread)
+        middle, whole = (cohort.spread if cohort.is_new else each[crop][day] for each in past)
+        filled["spread"][of_crop] = spread_in_pass(shortfall[of_crop], middle=middle, whole=whole)
     return Departures(
         expected=expected,
         shortfall=shortfall,

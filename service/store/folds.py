@@ -5,8 +5,8 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Final
 
-from sqlalchemy import delete, or_, select, update
-from sqlalchemy.orm import Session
+from sqlalchemy import Delete, delete, func, or_, select, update
+from sqlalchemy.orm import Session, aliased
 
 from service.store.alert_tables import BaselineRow, FoldState, SeasonFold
 
@@ -121,7 +121,8 @@ def keep_states(
 ) -> None:
     """Remember the passes behind `after` (without it all) as they are, and thin out the rest.
 
-    `newest` is the number of the season's last pass.
+    `newest` is the number of the season's last pass. Of seasons before the last one no more
+    than their end is remembered.
     """
     own = (FoldState.axis == axis_id, FoldState.season == season)
     outdated = delete(FoldState).where(*own).execution_options(synchronize_session=False)
@@ -134,6 +135,7 @@ def keep_states(
     thin = [number for number in numbers if not is_worth_keeping(number, newest=newest)]
     if thin:
         session.execute(outdated.where(FoldState.number.in_(thin)))
+    session.execute(_all_but_the_end(axis_id, season - 1))
     session.add_all(
         FoldState(
             axis=axis_id,
@@ -147,3 +149,20 @@ def keep_states(
         for each in kept
     )
     session.flush()
+
+
+def _all_but_the_end(axis_id: str, before: int) -> Delete:
+    """Forget of the seasons before one all passes but the last."""
+    later = aliased(FoldState)
+    end = select(func.max(later.seen_until)).where(
+        later.axis == FoldState.axis, later.season == FoldState.season
+    )
+    return (
+        delete(FoldState)
+        .where(
+            FoldState.axis == axis_id,
+            FoldState.season < before,
+            FoldState.seen_until < end.scalar_subquery(),
+        )
+        .execution_options(synchronize_session=False)
+    )

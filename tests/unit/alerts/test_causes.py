@@ -51,7 +51,7 @@ CASES = {
     "late_growth": evidence({"ndvi": -0.15}, 0.35, 0.1, rising=0.2, best=0.33),
     "removal": evidence(CUT, 0.25, None),
     "moisture_stress": evidence(DRY, 0.7, 0.1),
-    "undetermined": evidence({"ndvi": -0.06}, 0.7, None),
+    "undetermined": evidence({"ndvi": -0.06, "nir": -0.01}, 0.7, None),
     "partial_loss": evidence({"ndvi": -0.15, "ndmi": -0.05}, 0.6, 0.9),
     "decline": evidence({"ndvi": -0.15, "ndmi": -0.05}, 0.6, 0.2),
 }
@@ -249,4 +249,24 @@ def test_a_loss_that_came_at_once_is_partial_and_one_that_crept_in_a_decline() -
 
 def test_after_a_gap_only_a_large_loss_is_named() -> None:
     case = CASES["undetermined"]
-    assert attribute(replace(case, shortfall={"ndvi": -0.10})).kind == "decline"
+    for shortfall in ({"ndvi": -0.10}, {"ndvi": -0.06, "nir": -0.04}):
+        assert attribute(replace(case, shortfall=shortfall)).kind == "partial_loss"
+
+
+def test_growth_is_told_by_the_looks_beyond_the_threshold() -> None:
+    def grown(*scores: float) -> float:
+        looks = [scored(5 * at, {"A": score}).describe(0) for at, score in enumerate(scores)]
+        return evidence_of(looks, None).growth
+
+    # NDVI falls short by a twentieth of the score; the threshold is 3.
+    assert grown(3.0, 4.5) == pytest.approx(1.5)
+    assert grown(2.0, 6.0) == 1.0
+    assert grown(2.0, 3.0, 6.0) == pytest.approx(2.0)
+    assert grown(2.0) == 1.0
+
+
+def test_after_a_gap_a_large_loss_that_does_not_grow_came_at_once() -> None:
+    case = replace(CASES["partial_loss"], suddenness=None)
+    cause = attribute(case)
+    assert (cause.kind, "in a gap between looks" in cause.because) == ("partial_loss", True)
+    assert attribute(replace(case, growth=1.3)).kind == "decline"

@@ -71,10 +71,11 @@ def test_a_look_that_returns_counts_as_observed_but_not_as_a_look_of_the_alert()
 
 
 def test_a_worse_look_raises_severity_and_is_told() -> None:
+    # What grew is a decline from then on, though the last look is a better one.
     _, changes = watched([3.5, 3.5, 9.5, 4.0])
     assert [(change.kind.value, change.what) for change in changes] == [
         ("opened", ()),
-        ("changed", ("severity",)),
+        ("changed", ("cause", "severity")),
     ]
     assert changes[-1].alert.severity == "high"
 
