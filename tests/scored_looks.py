@@ -69,6 +69,7 @@ def scored(
         opening=on(day),
         day=200 + day,
         parcels=parcels,
+        cohorts=["barley"] * len(parcels),
         at=np.full(size, microseconds(on(day))),
         score=values,
         threshold=np.full(size, rule.thresholds.look),

@@ -32,14 +32,17 @@ class Known:
     region: Region = field(default_factory=Region)
     odds: Odds = field(default_factory=Odds)
 
-    def explain(self, alert: Alert, *, threshold: float) -> Explained | None:
-        """Return why an alert need not be opened, None if it must be."""
+    def explain(self, alert: Alert, *, cohort: str, threshold: float) -> Explained | None:
+        """Return why an alert need not be opened, None if it must be.
+
+        `cohort` is the crop, or the group of crops, that its parcel was compared with.
+        """
         first, last = alert.first_departure_at.date(), alert.opened_at.date()
         entry = self.diary.explanation(alert.parcel, alert.cause.kind, first, last)
         if entry is not None:
             because, lasts = f"diary: {entry.said}", EXPLAINED[entry.kind].lasts
         elif self.region.explains(
-            cause=alert.cause.kind, crop=alert.crop, thresholds_away=alert.strength / threshold
+            cause=alert.cause.kind, crop=cohort, thresholds_away=alert.strength / threshold
         ):
             because, lasts = f"regional notice {self.region.open_id}", False
         else:

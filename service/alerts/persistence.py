@@ -41,8 +41,8 @@ class Scored:
     ----------
     opening, day
         Acquisition time of the pass, and its day of season.
-    parcels
-        One look each.
+    parcels, cohorts
+        One look each, and the name of the crop or group that each was compared with.
     at
         Acquisition of each look, microseconds since 1970, shape (looks,).
     score
@@ -64,6 +64,7 @@ class Scored:
     opening: datetime
     day: int
     parcels: Sequence[str]
+    cohorts: Sequence[str]
     at: NDArray[np.int64]
     score: NDArray[np.float64]
     threshold: NDArray[np.float64]
@@ -206,7 +207,11 @@ class _Step:
             suddenness=_suddenness(self.watch, row, looks, self.rule),
             strength=float(strength_of(self.watch.score[row, -self.rule.looks_window :])),
         )
-        explained = self.known.explain(alert, threshold=float(self.looks.threshold[place]))
+        explained = self.known.explain(
+            alert,
+            cohort=self.looks.cohorts[place],
+            threshold=float(self.looks.threshold[place]),
+        )
         if explained is None:
             self.held.discard(parcel)
             self.new.append(replace(alert, diary=self.known.beside(alert)))

@@ -50,13 +50,12 @@ class PastLooks:
     def parcel_weeks(self) -> float:
         """Weeks in which parcels were watched: from first to last look of each season."""
         judged = np.isfinite(self.score) & self.may_open
-        if not judged.any():
-            return 0.0
-        rows, day = self.rows[judged], self.day[judged]
-        last, first = np.full(rows.max() + 1, -1), np.full(rows.max() + 1, np.iinfo(np.int64).max)
-        np.maximum.at(last, rows, day)
-        np.minimum.at(first, rows, day)
-        return float((last - first + 1)[last >= 0].sum()) / 7.0
+        _, row = np.unique(self.rows[judged], return_inverse=True)
+        day, size = self.day[judged], int(row.max(initial=-1)) + 1
+        last, first = np.zeros(size, dtype=np.int64), np.full(size, np.iinfo(np.int64).max)
+        np.maximum.at(last, row, day)
+        np.minimum.at(first, row, day)
+        return float((last - first + 1).sum()) / 7.0
 
     @property
     def parcels_a_season(self) -> float:

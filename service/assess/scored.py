@@ -38,6 +38,7 @@ def scored_looks(one: OnePass, judgements: Judgements, beside: Beside) -> Scored
         opening=one.acquired_at,
         day=one.day,
         parcels=[one.parcels[int(look)] for look in judged],
+        cohorts=[one.crops[int(look)] or "" for look in judged],
         at=np.fromiter(
             (microseconds(one.looked_at[int(look)]) for look in judged), np.int64, judged.size
         ),

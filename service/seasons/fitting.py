@@ -149,7 +149,7 @@ def _spans(looks: History) -> list[slice]:
 
 
 def _fit_crop(looks: History, at: slice) -> _Crop:
-    values = np.ascontiguousarray(looks.values[at].T)
+    values = np.ascontiguousarray(looks.values[at].T, dtype=np.float64)
     season, day, shapes = looks.season[at], looks.day[at], looks.shapes[at]
     usual = _course(day, values, shapes)
     shift = values - _usual_without_own_season(season, day, values, shapes, usual)

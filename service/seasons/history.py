@@ -7,13 +7,14 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from service.seasons.medians import Counts, Figures
+from service.seasons.medians import Counts, Figures, Rows
 
 HAZE: Final = "hot"
 """Measure of haze: blue - 0.5 red (after Zhang, Guindon and Cihlar 2002)."""
 UNLABELLED: Final = ""
 """The crop of looks that carry none: compared with the parcel's own past alone."""
 Flags = NDArray[np.bool_]
+_CHUNK: Final = 65_536
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -54,7 +55,7 @@ class History:
     season: Counts
     day: Counts
     pass_at: Counts
-    values: Figures
+    values: Rows
     shapes: Flags
     is_known: Flags
     without_label: frozenset[str] = frozenset()
@@ -109,8 +110,9 @@ class History:
         """Return the looks by crop, season, pass and parcel, names sorted, haze added.
 
         Looks without a crop carry `UNLABELLED`, as does a second copy of all labelled looks
-        of the parcels `without_label`. The same looks in another order, under other codes,
-        give the same table: sums over it round alike.
+        of the parcels `without_label`. Values are float32, as observed means are. The same
+        looks in another order, under other codes, give the same table: sums over it round
+        alike.
         """
         parcel_names, parcel = _sorted_names(self.parcels, self.parcel)
         crop_names, crop = _sorted_names(self.crops, self.crop)
@@ -123,7 +125,7 @@ class History:
             row = np.concatenate([row, again])
         order = np.lexsort((parcel[row], self.pass_at[row], self.season[row], crop))
         row = row[order]
-        measures, values = with_haze(self.measures, self.values)
+        measures, values = _gathered(self.measures, self.values, row)
         return replace(
             self,
             parcels=parcel_names,
@@ -134,7 +136,7 @@ class History:
             season=self.season[row],
             day=self.day[row],
             pass_at=self.pass_at[row],
-            values=values[row],
+            values=values,
             shapes=self.shapes[row],
             is_known=self.is_known[row],
         )
@@ -143,7 +145,17 @@ class History:
         return [code for code, name in enumerate(names) if name in self.without_label]
 
 
-def with_haze(measures: Sequence[str], values: Figures) -> tuple[tuple[str, ...], Figures]:
+def _gathered(measures: Sequence[str], values: Rows, rows: Counts) -> tuple[tuple[str, ...], Rows]:
+    """Return some rows of values as float32, haze added, without a copy of all of them."""
+    names, _ = with_haze(measures, values[:1])
+    found = np.empty((rows.size, len(names)), dtype=np.float32)
+    for first in range(0, rows.size, _CHUNK):
+        some = slice(first, first + _CHUNK)
+        _, found[some] = with_haze(measures, np.asarray(values[rows[some]], dtype=np.float64))
+    return names, found
+
+
+def with_haze(measures: Sequence[str], values: Rows) -> tuple[tuple[str, ...], Rows]:
     """Return measures and values (looks, measures) with the measure of haze behind them.
 
     Without a blue and a red band they come back as they are.

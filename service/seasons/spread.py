@@ -80,7 +80,8 @@ def spreads(
     """
     order = np.argsort(day, kind="stable")
     crop, day, size = crop[order], day[order], np.abs(shortfalls[:, order])
-    of_all = is_pooled[crop] if is_pooled.any() else np.ones(crop.size, dtype=bool)
+    is_of_all = is_pooled[crop] if is_pooled.any() else np.ones(crop.size, dtype=bool)
+    of_all = slice(None) if is_of_all.all() else is_of_all
     whole, _ = medians(size[:, of_all])
     pooled, _ = windowed_medians(day[of_all], size[:, of_all], centres=KNOTS, reach=REACH_DAYS)
     pooled = np.where(np.isfinite(pooled), pooled, whole)
