@@ -45,11 +45,8 @@ GUARDS: Final = {
     "GDAL_DISABLE_READDIR_ON_OPEN": "EMPTY_DIR",
     "GDAL_PAM_ENABLED": "NO",
     "GDAL_GEOREF_SOURCES": "INTERNAL",
-    # Megabytes. A read spans few blocks at a time, see `gathering`.
+    # Megabytes. A read spans few blocks at a time, see `reading`.
     "GDAL_CACHEMAX": "64",
-    # A read's blocks are decoded side by side: the same processor time, less on the wall. More
-    # threads than blocks of a read gain nothing.
-    "GDAL_NUM_THREADS": str(min(os.cpu_count() or 1, 4)),
     # No requests: no URL is ever passed on, and should one be, it matches no allowed name.
     "CPL_VSIL_CURL_ALLOWED_EXTENSIONS": ".none",
     "CPL_VSIL_CURL_USE_HEAD": "NO",
