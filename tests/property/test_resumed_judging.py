@@ -46,6 +46,7 @@ from service.store.scenes import SceneState, retire_figures
 from service.store.sessions import Sessions, migrate, open_engine
 from service.store.tables import Base, Boundary, CropSeason, Parcel, Scene
 from service.tiles.archive import Archive
+from service.tiles.plans import Plans
 from tests.quiet_seasons import PARCELS, PASSES, PAST, RUNNING, at_pass, spectra
 from tests.simulated_seasons import MEASURES, measures_of
 
@@ -324,6 +325,7 @@ def working(engine_url: str, folder: Path) -> Iterator[Resources]:
         settings=Settings(data=folder, disk_reserve_bytes=0),
         sessions=Sessions(engine),
         archive=Archive(folder),
+        plans=Plans(folder / "plans", limit_bytes=0),
     )
     engine.dispose()
 

@@ -68,7 +68,7 @@ def test_a_cell_has_the_areas_and_the_place_that_were_worked_out(row: Row) -> No
     assert area_m2 == pytest.approx(right["geodesic_area_m2"], abs=tolerance)
     assert area_m2 / grid.cell_area_m2 == pytest.approx(right["ratio"], abs=tolerance)
     # The place is given to 1e-5 or 1e-4 of a degree: 1 or 10 m.
-    placed = project(shapely.Point(right["lon"], right["lat"]), crs)
+    (placed,) = project([shapely.Point(right["lon"], right["lat"])], crs)
     assert (placed.x, placed.y) == pytest.approx((x, y), abs=11)
 
 
@@ -115,7 +115,7 @@ def test_a_tile_s_grid_lies_where_the_published_one_does(row: Row) -> None:
     assert grid.centre_ys(0, 1).tolist() == [right["row0_col0_centre_northing"]]
     assert grid.cols_at(np.array([600_000.0, 600_009.9, 599_999.9])).tolist() == [0, 0, -1]
     # A hundred-thousandth of a degree is about a metre.
-    corner = project(shapely.Point(right["upper_left_lonlat"]), grid.crs)
+    (corner,) = project([shapely.Point(right["upper_left_lonlat"])], grid.crs)
     assert (corner.x, corner.y) == pytest.approx((transform.c, transform.f), abs=1)
     lon, lat = right["upper_left_lonlat"]
     west, _, _, north = footprint(grid)

@@ -17,7 +17,6 @@ import numpy as np
 import pytest
 import shapely
 import spyndex
-import xarray as xr
 from affine import Affine
 from exactextract import exact_extract
 from exactextract.feature import JSONFeatureSource
@@ -31,6 +30,8 @@ from service.spectral.indices import INDICES
 from service.spectral.roles import BandRole
 from service.zonal.coverage import Zones, project, zones_on
 from service.zonal.grid import Grid
+from service.zonal.plan import plan_of
+from tests.scenes_in_memory import ArrayScene
 from tests.serving import ORIGIN, Service, write_band
 
 CRS = "EPSG:32633"
@@ -291,7 +292,7 @@ def test_a_forgotten_offset_turns_an_ndvi_of_0_789_into_0_517(
 
 
 def zones_of_parcels() -> Zones:
-    return zones_on(_GRID, [project(outline, CRS) for outline in in_degrees().values()])
+    return zones_on(_GRID, project(list(in_degrees().values()), CRS))
 
 
 _GRID = Grid(crs=CRS, transform=Affine(10, 0, ORIGIN[0], 0, -10, ORIGIN[1]), shape=(300, 300))
@@ -299,14 +300,16 @@ _GRID = Grid(crs=CRS, transform=Affine(10, 0, ORIGIN[0], 0, -10, ORIGIN[1]), sha
 
 def observed(indices: Sequence[str], zones: Zones) -> Figures:
     """Return figures straight from `observe`, without service or files."""
-    attributes = {"scale": 1e-4, "offset": 0.0, "nodata": None, "saturated": None}
-    block = xr.Dataset(
-        {role: (("y", "x"), band, attributes) for role, band in real_numbers().items()},
-        attrs={"row0": 0, "col0": 0, "grid_cols": 300},
+    scene = ArrayScene(
+        bands={BandRole(role): band for role, band in real_numbers().items()},
+        offset=0.0,
+        nodata=None,
+        saturated=None,
     )
+    plan = plan_of(_GRID, zones)
     answer = observe(
-        [block],
-        zones,
+        scene.strips(plan),
+        plan,
         roles=[BandRole(role) for role in ROLES],
         indices=[INDICES[index] for index in indices],
         quality=None,
