@@ -11,7 +11,11 @@ crop, moved by what the same crop does in the same pass, moved by what this parc
     cohort      how far a crop is off its usual course in one pass
     offsets     how far a parcel is off its crop, season after season
     spread      how far looks lie from what was expected of them
-    baseline    all of that, fitted once and kept; what to expect on any day
+    groups      small crops under the name of their group
+    ranks       how rare a score is among those of the past
+    baseline    all of that, as it is kept; what to expect on any day
     departure   one pass against the baseline: shortfalls, departures, suspect looks
     judgement   what is thought of each look of a pass
+    past        the past as it would have been judged
+    fitting     baselines and the past, from the history
 """
