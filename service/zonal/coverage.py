@@ -16,7 +16,7 @@ import shapely
 from numpy.typing import NDArray
 from pyproj import Transformer
 
-from service.zonal.edges import Cells, covered, turned
+from service.zonal.edges import Cells, covered, ring_areas
 from service.zonal.grid import Grid
 
 MIN_COVERAGE: Final = 1e-6
@@ -24,7 +24,7 @@ MIN_COVERAGE: Final = 1e-6
 
 # Fractions are whole multiples of this step (error at most 1.2e-10 of a cell), so that their
 # sums in float64 are exact up to 2,000,000 cells, in whatever order and company they are added.
-_STEP: Final = 2.0**-32
+_STEPS: Final = 2.0**32
 # An edge of a boundary is straight in longitude and latitude (RFC 7946, section 3.1.1). Cut to
 # 1 km, what is straight on the grid is less than 3 cm away from it at middle latitudes.
 _LONGEST_EDGE_M: Final = 1000.0
@@ -117,15 +117,14 @@ def zones_on(grid: Grid, geometries: Sequence[shapely.Geometry] | NDArray[np.obj
     Coverage fractions are the exact areas of the intersections (`service.zonal.edges`), to
     1e-10 of a cell; cells below `MIN_COVERAGE` are left out.
     """
-    outlines = _in_cells(grid, geometries)
-    cells, shares, counts = shares_on(grid.shape, outlines, least=MIN_COVERAGE)
-    fractions = np.rint(shares / _STEP) * _STEP
+    rings = _rings_of(geometries)
+    place = grid.transform
+    rings.points[:] = (rings.points - [place.c, place.f]) / [place.a, place.e]
+    cells, shares, counts = _shares(grid.shape, rings, least=MIN_COVERAGE, steps=_STEPS)
+    areas = np.zeros(rings.zones)
+    np.add.at(areas, rings.zone_of, rings.areas())
     return Zones(
-        indptr=_indptr(counts),
-        cells=cells,
-        # Rounding may leave the least fraction just below what it was.
-        weights=np.maximum(fractions.astype(np.float32), np.float32(MIN_COVERAGE)),
-        totals=np.asarray(shapely.area(outlines), dtype=np.float64),
+        indptr=_indptr(counts), cells=cells, weights=shares.astype(np.float32), totals=areas
     )
 
 
@@ -154,28 +153,60 @@ def shares_on(shape: tuple[int, int], outlines: NDArray[np.object_], *, least: f
     outlines
         Polygons or multipolygons in columns and rows (downwards), shape (n,).
     least
-        Smaller shares are left out.
+        Smaller shares are left out. They are not rounded.
     """
-    parts, owner = shapely.get_parts(outlines, return_index=True)
+    return _shares(shape, _rings_of(outlines), least=least, steps=0.0)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Rings:
+    """The rings of several zones, zone after zone; of each polygon first its shell.
+
+    `points` has the shape (points, 2), ring i owns the points ``ends[i]:ends[i + 1]``.
+    """
+
+    zones: int
+    points: NDArray[np.float64]
+    ends: NDArray[np.int64]
+    is_hole: NDArray[np.bool_]
+    zone_of: NDArray[np.int64]
+
+    def areas(self) -> NDArray[np.float64]:
+        return ring_areas(self.points, self.ends, self.is_hole)[0]
+
+
+def _rings_of(outlines: Sequence[shapely.Geometry] | NDArray[np.object_]) -> _Rings:
+    parts, owner = shapely.get_parts(np.asarray(outlines, dtype=np.object_), return_index=True)
     lines, part_of = shapely.get_rings(parts, return_index=True)
-    points, line_of = shapely.get_coordinates(lines, return_index=True)
-    rings = np.searchsorted(line_of, np.arange(len(lines) + 1)).astype(np.int64)
-    # The first ring of a polygon is its shell, the others are holes.
+    points = shapely.get_coordinates(lines)
+    counts = shapely.get_num_coordinates(lines)
     is_hole = np.zeros(len(lines), dtype=np.bool_)
     is_hole[1:] = part_of[1:] == part_of[:-1]
-    signs = turned(points, rings, is_hole)
-    ring_owner = owner[part_of]
-    places = np.arange(len(outlines))
+    return _Rings(
+        zones=len(outlines),
+        points=points,
+        ends=_indptr(counts),
+        is_hole=is_hole,
+        zone_of=owner[part_of].astype(np.int64),
+    )
+
+
+def _shares(shape: tuple[int, int], rings: _Rings, *, least: float, steps: float) -> Cells:
+    _, signs = ring_areas(rings.points, rings.ends, rings.is_hole)
+    places = np.arange(rings.zones)
     zone_rings = np.stack(
-        [np.searchsorted(ring_owner, places), np.searchsorted(ring_owner, places, side="right")],
+        [
+            np.searchsorted(rings.zone_of, places),
+            np.searchsorted(rings.zone_of, places, side="right"),
+        ],
         axis=1,
     ).astype(np.int64)
-    turns = list(_in_turns(_windows(shape, outlines)))
+    turns = list(_in_turns(_windows(shape, rings, zone_rings)))
     found = [
-        covered(points, rings, signs, zone_rings[zones], windows, shape[1], least)
+        covered(rings.points, rings.ends, signs, zone_rings[zones], windows, shape[1], least, steps)
         for zones, windows in turns
     ]
-    counts = np.zeros(len(outlines), dtype=np.int64)
+    counts = np.zeros(rings.zones, dtype=np.int64)
     for (zones, _), (_, _, own) in zip(turns, found, strict=True):
         counts[zones] += own
     return (
@@ -185,34 +216,29 @@ def shares_on(shape: tuple[int, int], outlines: NDArray[np.object_], *, least: f
     )
 
 
-def _in_cells(
-    grid: Grid, geometries: Sequence[shapely.Geometry] | NDArray[np.object_]
-) -> NDArray[np.object_]:
-    """Express boundaries in columns and rows, so that a cell is a unit square."""
-    transform = grid.transform
-
-    def place(points: NDArray[np.float64]) -> NDArray[np.float64]:
-        origin = np.array([transform.c, transform.f], dtype=np.float64)
-        return (points - origin) / np.array([transform.a, transform.e], dtype=np.float64)
-
-    placed: NDArray[np.object_] = shapely.transform(np.array(geometries, dtype=object), place)
-    return placed
-
-
-def _windows(shape: tuple[int, int], outlines: NDArray[np.object_]) -> NDArray[np.int64]:
-    """Return the rows and columns of the grid around each outline, shape (n, 4); maybe none."""
-    bounds = np.nan_to_num(shapely.bounds(outlines), nan=0.0).reshape(-1, 4)
+def _windows(
+    shape: tuple[int, int], rings: _Rings, zone_rings: NDArray[np.int64]
+) -> NDArray[np.int64]:
+    """Return the rows and columns of the grid around each zone, shape (zones, 4); maybe none."""
+    windows = np.zeros((rings.zones, 4), dtype=np.int64)
+    filled = zone_rings[:, 1] > zone_rings[:, 0]
+    if not filled.any():
+        return windows
+    # The points of a zone are neighbours, and none lie between two zones.
+    starts = rings.ends[zone_rings[filled, 0]]
+    first = np.floor(np.minimum.reduceat(rings.points, starts, axis=0))
+    last = np.ceil(np.maximum.reduceat(rings.points, starts, axis=0))
     rows, cols = shape
-    left, top, right, bottom = bounds.T
-    return np.stack(
+    windows[filled] = np.stack(
         [
-            np.clip(np.floor(top), 0, rows),
-            np.clip(np.ceil(bottom), 0, rows),
-            np.clip(np.floor(left), 0, cols),
-            np.clip(np.ceil(right), 0, cols),
+            np.clip(first[:, 1], 0, rows),
+            np.clip(last[:, 1], 0, rows),
+            np.clip(first[:, 0], 0, cols),
+            np.clip(last[:, 0], 0, cols),
         ],
         axis=1,
-    ).astype(np.int64)
+    )
+    return windows
 
 
 def _in_turns(

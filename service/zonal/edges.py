@@ -16,10 +16,10 @@ Cells = tuple[NDArray[np.int32], NDArray[np.float64], NDArray[np.int64]]
 
 
 @compiled
-def turned(
+def ring_areas(
     points: NDArray[np.float64], rings: NDArray[np.int64], is_hole: NDArray[np.bool_]
-) -> NDArray[np.float64]:
-    """Return by ring the sign that makes its edges add (a shell's) or take away (a hole's).
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return by ring its area, a hole's below 0, and the sign that makes its edges add to that.
 
     Parameters
     ----------
@@ -30,6 +30,7 @@ def turned(
     is_hole
         Shape (rings,).
     """
+    areas = np.empty(len(is_hole))
     signs = np.empty(len(is_hole))
     for ring in range(len(is_hole)):
         first = rings[ring]
@@ -41,9 +42,10 @@ def turned(
             doubled += x1 * y2 - x2 * y1
         # Rows count downwards: a ring of negative area goes down on its left side.
         signs[ring] = -1.0 if doubled >= 0 else 1.0
+        areas[ring] = abs(doubled) / 2.0
         if is_hole[ring]:
-            signs[ring] = -signs[ring]
-    return signs
+            signs[ring], areas[ring] = -signs[ring], -areas[ring]
+    return areas, signs
 
 
 @compiled
@@ -140,13 +142,14 @@ def covered(
     windows: NDArray[np.int64],
     grid_cols: int,
     least: float,
+    steps: float,
 ) -> Cells:
     """Return which cells some zones cover, and by what share.
 
     Parameters
     ----------
     points, rings
-        As in `turned`; signs as it gives them.
+        As in `ring_areas`; signs as it gives them.
     zone_rings
         int64, shape (zones, 2): the first ring of each zone and the one after its last.
     windows
@@ -156,6 +159,8 @@ def covered(
         Columns of the grid.
     least
         Smaller shares are left out.
+    steps
+        Shares are rounded to whole multiples of one part in so many; not at all if it is 0.
 
     Returns
     -------
@@ -195,9 +200,10 @@ def covered(
             flat = (row0 + row) * grid_cols + col0
             for col in range(width):
                 share += areas[row, col]
-                if share >= least:
+                told = np.rint(share * steps) / steps if steps > 0 else share
+                if told >= least:
                     cells[found] = flat + col
-                    shares[found] = min(share, 1.0)
+                    shares[found] = min(told, 1.0)
                     found += 1
         counts[zone] = found - before
     return cells[:found].copy(), shares[:found].copy(), counts
