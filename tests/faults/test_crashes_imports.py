@@ -26,6 +26,7 @@ from tests.serving import Service
 
 PARCELS = 12_000
 WAIT_SECONDS = 60
+WAITS = 5
 
 
 @pytest.fixture(scope="module")
@@ -103,6 +104,15 @@ NOTHING = {"parcel": 0, "boundary": 0, "crop_season": 0, "job": 1}
 ALL = {"parcel": PARCELS, "boundary": PARCELS, "crop_season": PARCELS, "job": 1}
 
 
+def ended(service: Service, address: str) -> Any:
+    """Return a job once it has ended; a busy machine takes more than one wait."""
+    for _ in range(WAITS):
+        job = service.get(address, headers={"Prefer": f"wait={WAIT_SECONDS}"})
+        if job["state"] not in ("queued", "running"):
+            break
+    return job
+
+
 @pytest.mark.parametrize(
     ("deployment", "point"),
     [
@@ -124,16 +134,14 @@ def test_killed_in_an_import_of_12_000_parcels_it_has_them_all_once_after_the_ne
     assert counts(deployment) == (ALL if is_committed else NOTHING)
     assert state == {"before-import": "queued", "import-not-noted": "done"}.get(point, "running")
     with deployment.started() as (child, service):
-        job = service.get(f"/v1/jobs/{job_id}", headers={"Prefer": f"wait={WAIT_SECONDS}"})
+        job = ended(service, f"/v1/jobs/{job_id}")
         assert (job["state"], job["progress"]) == ("done", 1.0), child.log.read_text("utf-8")
         result = job["result"]
         told = [result[name] for name in ("created", "updated", "unchanged", "rejected")]
         assert told == [PARCELS, 0, 0, 0]
         assert counts(deployment) == ALL
         # Sent again it changes nothing.
-        again = service.get(
-            send(service, file).headers["Location"], headers={"Prefer": f"wait={WAIT_SECONDS}"}
-        )
+        again = ended(service, send(service, file).headers["Location"])
         assert again["result"]["unchanged"] == PARCELS, again
         assert counts(deployment) == {**ALL, "job": 2}
 
@@ -147,7 +155,7 @@ def test_a_file_that_kills_the_service_three_times_fails_and_nothing_of_it_lands
         with deployment.started("parcels-not-committed") as (child, _):
             assert child.killed(), child.log.read_text("utf-8")
     with deployment.started("never") as (child, service):
-        job = service.get(f"/v1/jobs/{job_id}", headers={"Prefer": f"wait={WAIT_SECONDS}"})
+        job = ended(service, f"/v1/jobs/{job_id}")
         assert job["state"] == "failed", job
         assert job["failure"]["type"] == "/problems/internal-error"
         assert "ended three times" in job["failure"]["detail"]
@@ -168,6 +176,6 @@ def test_the_file_of_a_promised_import_is_kept_however_old_and_goes_when_it_is_d
     assert kept.read_bytes() == file.read_bytes()
     job_id, _, _ = the_job(deployment)
     with deployment.started("never") as (_, service):
-        job = service.get(f"/v1/jobs/{job_id}", headers={"Prefer": f"wait={WAIT_SECONDS}"})
+        job = ended(service, f"/v1/jobs/{job_id}")
         assert job["state"] == "done", job
         assert comes_true(lambda: not kept.exists())
